@@ -1,0 +1,1 @@
+"""The wire's encoding and the publisher."""

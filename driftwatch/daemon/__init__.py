@@ -1,0 +1,1 @@
+"""What drives the pipeline: the live run, the replay and the keeper that commits before it publishes."""

@@ -1,0 +1,1 @@
+"""The one deterministic pipeline that serves the live daemon and the replay."""

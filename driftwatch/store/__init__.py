@@ -1,0 +1,1 @@
+"""Tables, migrations, the one writer and the queries."""

@@ -1,0 +1,1 @@
+"""Samples and slow quantities in: recordings and simulated resonators."""

@@ -1,0 +1,1 @@
+"""Measurements to the state of a mode over time."""

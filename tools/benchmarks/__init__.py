@@ -1,0 +1,1 @@
+"""Measured figures: accuracy, coverage, false starts, speed and memory. Started by ``tools/bench``."""
