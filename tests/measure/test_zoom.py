@@ -29,14 +29,14 @@ def expected(zoom: Zoom, hz: float, count: int) -> np.ndarray:
 @pytest.mark.parametrize("power", [-1, 0, 1])
 @pytest.mark.parametrize(("rate_hz", "search_hz", "window_s", "step_s"), RATES_AND_BANDS)
 def test_a_tone_in_the_band_becomes_its_complex_exponential(rate_hz, search_hz, window_s, step_s, power):
-    """Tolerance: the 100 dB to which the band edge's impulse response has died away at the block's end."""
+    """Tolerance: the 100 dB to which the band edge's impulse response has died away at either end of a block."""
     zoom = Zoom(rate_hz, [BandRequest(search_hz, window_s, step_s, power)])
     hz = search_hz[0] + 0.71 * (search_hz[1] - search_hz[0])
     x = tone(rate_hz, 3 * zoom.hop / rate_hz, hz)
     (y,) = zoom.stream(x)
     run_in = 2 * zoom.edge // zoom.bands[0].decimation
     want = expected(zoom, hz, len(y))
-    assert np.max(np.abs(y - want)[run_in:-run_in]) < 1e-5 * np.abs(want[0])
+    assert np.max(np.abs(y - want)[run_in:-run_in]) < 2e-5 * np.abs(want[0])
 
 
 @pytest.mark.parametrize("where", ["below", "above"])
