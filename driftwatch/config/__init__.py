@@ -10,17 +10,16 @@ from driftwatch.config.errors import ConfigError, Problem
 from driftwatch.config.load import from_document, load, loads
 from driftwatch.config.models import (
     AlertConfig,
-    BandConfig,
     BusConfig,
     ChannelConfig,
     Configuration,
-    ModeConfig,
     RegimeConfig,
     RegimeWhen,
     SensorConfig,
     StationConfig,
     StoreConfig,
 )
+from driftwatch.config.modes import BandConfig, ModeConfig
 from driftwatch.config.serve import unserved
 from driftwatch.config.sources import (
     FeedSourceConfig,

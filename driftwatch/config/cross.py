@@ -12,7 +12,7 @@ from typing import Any
 from driftwatch.config.errors import Problem
 from driftwatch.config.keys import Loc, place
 from driftwatch.config.models import ChannelConfig, Configuration
-from driftwatch.config.sources import SimulatedSourceConfig
+from driftwatch.config.sources import SimulatedSourceConfig, SoundcardSourceConfig
 from driftwatch.config.values import is_number
 
 Document = Mapping[str, Any]
@@ -172,9 +172,15 @@ def _mode_problems(document: Document) -> Iterator[Problem]:
 def _rate_of_mode(document: Document, index: int, mode: Document, channel: str) -> Iterator[Problem]:
     for _, table in _tables(document, "channel"):
         source = _source_of(document, table) if _text(table, "name") == channel else None
-        rate_hz = _whole(source, "rate_hz", 48_000 if source.get("kind") == "soundcard" else None) if source else None
+        rate_hz = _rate_of_source(source) if source else None
         if rate_hz is not None and rate_hz > 0:
             yield from _search_problem(document, index, mode.get("search_hz"), rate_hz)
+
+
+def _rate_of_source(source: Document) -> int | None:
+    """Return the rate of a source in Hz, None where only the recording knows it."""
+    is_card = source.get("kind") == "soundcard"
+    return _whole(source, "rate_hz", SoundcardSourceConfig.model_fields["rate_hz"].default if is_card else None)
 
 
 def _search_problem(document: Document, index: int, search_hz: Any, rate_hz: float) -> Iterator[Problem]:

@@ -3,10 +3,9 @@
 from __future__ import annotations
 
 import datetime as dt
-import math
 import re
 import zoneinfo
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -15,14 +14,13 @@ from pydantic import (
     BeforeValidator,
     Field,
     PrivateAttr,
-    ValidationError,
     ValidationInfo,
     field_validator,
     model_validator,
 )
-from pydantic_core import InitErrorDetails
 
 from driftwatch.config.endpoints import Endpoint
+from driftwatch.config.modes import ModeConfig
 from driftwatch.config.sources import SourceConfig, base_of
 from driftwatch.config.values import (
     FULL_SCALE_UNIT,
@@ -31,35 +29,22 @@ from driftwatch.config.values import (
     Delay,
     Flag,
     Name,
-    NotNegative,
     Number,
     Positive,
     Quantity,
-    Seconds,
-    Span,
     SpanHz,
     Table,
     Text,
+    check_limits,
     refusal,
 )
-from driftwatch.records import Condition, Method, Priority
-
-DEFAULT_WINDOW_S = 4.0
-"""Window where none is given, unless the search band is too narrow for it."""
-
-FEWEST_BINS = 16
-"""A window must put at least so many bins, 1/window apart, into the search band: four parameters are fitted."""
-
-DEFAULT_BINS = 32
-"""Bins that a window left out is long enough for."""
+from driftwatch.records import Condition, Priority
 
 DEFAULT_STORE = "sqlite:///driftwatch.db"
 DEFAULT_PUBLISH = "tcp://127.0.0.1:5571"
 DEFAULT_CONTROL = "tcp://127.0.0.1:5572"
 
 Role = Literal["response", "reference"]
-Limits = Literal["absolute", "percent", "ppm", "sigma"]
-BandQuantity = Literal["frequency", "q"]
 
 
 # ---------------------------------------------------------------------------------------------- station
@@ -156,7 +141,7 @@ class RegimeWhen(Table):
     @classmethod
     def _ordered(cls, to: float | None, info: ValidationInfo) -> float | None:
         if "from_" in info.data:
-            _check_limits(info.data["from_"], to, "from", "to")
+            check_limits(info.data["from_"], to, "from", "to")
         return to
 
     @model_validator(mode="after")
@@ -174,144 +159,6 @@ class RegimeConfig(Table):
     when: RegimeWhen
     settle_s: Delay = 10.0  # how long it must hold before it counts
     judge: Flag = True  # False: follow, but raise no band alert
-
-
-# ---------------------------------------------------------------------------------------------- mode and band
-
-
-def _check_limits(low: float | None, high: float | None, low_key: str, high_key: str) -> None:
-    """Refuse two limits that limit nothing or contradict each other."""
-    if low is None and high is None:
-        raise refusal(f"{low_key}, {high_key} or both", "give at least one limit", came="neither limit")
-    if low is not None and high is not None and low >= high:
-        came = f"{low_key} = {low:g} and {high_key} = {high:g}"
-        raise refusal(f"{low_key} less than {high_key}", "swap them or correct one", came=came)
-
-
-class BandConfig(Table):
-    """Limits on a mode's frequency or Q."""
-
-    name: Name
-    quantity: BandQuantity = "frequency"
-    limits: Limits = "absolute"  # Hz or Q; or relative to the baseline
-    low: Number | None = None  # None: no lower limit
-    high: Number | None = Field(default=None, validate_default=True)  # None: no upper limit
-    confidence: Annotated[Number, Field(gt=0.5, lt=1)] = 0.95
-    on_delay_s: Delay = 10.0
-    off_delay_s: Delay = 30.0
-    deadband: NotNegative = 0.0  # in the limits' own unit
-    priority: Priority = Priority.MEDIUM
-
-    @field_validator("low", "high")
-    @classmethod
-    def _absolute_is_positive(cls, limit: float | None, info: ValidationInfo) -> float | None:
-        if limit is not None and limit <= 0 and info.data.get("limits") == "absolute":
-            raise refusal("a number over 0", "an absolute limit is a frequency in Hz or a Q")
-        return limit
-
-    @field_validator("high")
-    @classmethod
-    def _ordered(cls, high: float | None, info: ValidationInfo) -> float | None:
-        if "low" in info.data:
-            _check_limits(info.data["low"], high, "low", "high")
-        return high
-
-    @field_validator("deadband")
-    @classmethod
-    def _leaves_an_inside(cls, deadband: float, info: ValidationInfo) -> float:
-        low, high = info.data.get("low"), info.data.get("high")
-        if low is not None and high is not None and deadband >= (high - low) / 2:
-            raise refusal(
-                f"less than half the band's width, {(high - low) / 2:g}", "else the alert could never return to normal"
-            )
-        return deadband
-
-
-def _default_window_s(data: dict[str, Any]) -> float:
-    search: Span = data["search_hz"]
-    return max(DEFAULT_WINDOW_S, float(min(math.ceil(DEFAULT_BINS / search.width), 86_400)))
-
-
-class ModeConfig(Table):
-    """One resonance followed on one channel."""
-
-    name: Name
-    channel: Name
-    reference: Name | None = None  # the reference channel, for driven only
-    search_hz: SpanHz  # searched for inside
-    methods: tuple[Method, ...] = (Method.AMBIENT,)
-    window_s: Seconds = Field(default_factory=_default_window_s, validate_default=True)
-    step_s: Seconds = Field(default_factory=lambda data: data["window_s"])  # from one window to the next
-    regimes: tuple[Name, ...] = ()  # empty: always
-    band: tuple[BandConfig, ...] = ()
-
-    @field_validator("methods", "regimes")
-    @classmethod
-    def _each_once(cls, words: tuple[str, ...]) -> tuple[str, ...]:
-        if len({word.casefold() for word in words}) < len(words):
-            raise refusal("each of them once", "take the repeated one out")
-        return words
-
-    @field_validator("methods")
-    @classmethod
-    def _not_empty(cls, methods: tuple[Method, ...]) -> tuple[Method, ...]:
-        if not methods:
-            known = ", ".join(method.value for method in Method)
-            raise refusal(f"at least one of {known}", "leave the key out for ambient", came="an empty array")
-        return methods
-
-    @field_validator("methods")
-    @classmethod
-    def _driven_has_a_reference(cls, methods: tuple[Method, ...], info: ValidationInfo) -> tuple[Method, ...]:
-        if "reference" not in info.data or (Method.DRIVEN in methods) == (info.data["reference"] is not None):
-            return methods
-        if Method.DRIVEN in methods:
-            raise refusal("a reference channel beside driven", "give the mode the key reference")
-        raise refusal("driven among the methods of a mode with a reference", "take reference out or add driven")
-
-    @field_validator("window_s")
-    @classmethod
-    def _long_enough(cls, window_s: float, info: ValidationInfo) -> float:
-        search: Span | None = info.data.get("search_hz")
-        if search is not None and window_s * search.width < FEWEST_BINS:
-            least = FEWEST_BINS / search.width
-            raise refusal(
-                f"at least {least:.4g} s, {FEWEST_BINS} bins in a search band {search.width:g} Hz wide",
-                "lengthen the window or widen search_hz",
-            )
-        return window_s
-
-    @field_validator("step_s")
-    @classmethod
-    def _no_hole(cls, step_s: float, info: ValidationInfo) -> float:
-        window_s = info.data.get("window_s")
-        if window_s is not None and step_s > window_s:
-            raise refusal(f"at most window_s, {window_s:g}", "else samples between two windows are never looked at")
-        return step_s
-
-    @field_validator("band")
-    @classmethod
-    def _reachable(cls, bands: tuple[BandConfig, ...], info: ValidationInfo) -> tuple[BandConfig, ...]:
-        search: Span | None = info.data.get("search_hz")
-        errors = list(_unreachable(bands, search)) if search is not None else []
-        if errors:
-            raise ValidationError.from_exception_data("band", errors)
-        return bands
-
-
-def _unreachable(bands: tuple[BandConfig, ...], search: Span) -> Iterator[InitErrorDetails]:
-    """Yield the bands on frequency that no mode inside the search band can ever be inside of."""
-    for index, band in enumerate(bands):
-        if band.quantity != "frequency" or band.limits != "absolute":
-            continue
-        where = f"a band that overlaps search_hz, {search.low:g} to {search.high:g} Hz"
-        for key, limit, outside in (
-            ("low", band.low, band.low is not None and band.low >= search.high),
-            ("high", band.high, band.high is not None and band.high <= search.low),
-        ):
-            if outside:
-                error = refusal(where, "no mode found there could ever be inside the band")
-                yield InitErrorDetails(type=error, loc=(index, key), input=limit)
 
 
 # ---------------------------------------------------------------------------------------------- alert, store, bus

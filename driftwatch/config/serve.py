@@ -6,7 +6,8 @@ from collections.abc import Iterator
 
 from driftwatch.config.errors import Problem
 from driftwatch.config.keys import place
-from driftwatch.config.models import Configuration, ModeConfig
+from driftwatch.config.models import Configuration
+from driftwatch.config.modes import ModeConfig
 from driftwatch.records import Method
 
 NOT_SERVED = "not served by this version"

@@ -124,6 +124,15 @@ def is_number(value: Any) -> bool:
         return False
 
 
+def check_limits(low: float | None, high: float | None, low_key: str, high_key: str) -> None:
+    """Refuse two limits that limit nothing or contradict each other."""
+    if low is None and high is None:
+        raise refusal(f"{low_key}, {high_key} or both", "give at least one limit", came="neither limit")
+    if low is not None and high is not None and low >= high:
+        came = f"{low_key} = {low:g} and {high_key} = {high:g}"
+        raise refusal(f"{low_key} less than {high_key}", "swap them or correct one", came=came)
+
+
 # ---------------------------------------------------------------------------------------------- profiles
 
 _PROFILE = "a number, or corner points [[seconds, value], ...] with rising seconds from 0 on"
