@@ -1,0 +1,184 @@
+"""Opening a database: whose it is, which revision it has, and how it is connected to.
+
+A file that is not ours is never changed: it is looked at without locks, journals or side files first.
+"""
+
+from __future__ import annotations
+
+import os
+import sqlite3
+from contextlib import closing
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+from urllib.parse import quote
+
+import sqlalchemy as sa
+from sqlalchemy.pool import StaticPool
+
+from driftwatch.store.errors import ForeignDatabaseError, OtherSchemaError, StoreUnreachableError, unreachable
+from driftwatch.store.tables import APPLICATION_ID, HEAD, VERSION_TABLE
+
+if TYPE_CHECKING:
+    from sqlalchemy.engine import Connection, Engine
+
+BUSY_MS = 5000
+"""How long a statement waits for a lock before it fails."""
+
+
+def refuse_foreign(path: Path) -> None:
+    """Raise unless the file is ours, empty, or not there.
+
+    Raises
+    ------
+    ForeignDatabaseError
+        When the file is no SQLite database, or one with another program's tables.
+    StoreUnreachableError
+        When it cannot be read.
+    """
+    if path.is_dir():
+        raise StoreUnreachableError(f"{path} is a folder; expected a database file; name a file in it")
+    if not path.exists():
+        return
+    try:
+        with closing(_connect(path, "immutable=1")) as connection:
+            mark = connection.execute("PRAGMA application_id").fetchone()[0]
+            if mark == APPLICATION_ID:
+                return
+            tables = [row[0] for row in connection.execute("SELECT name FROM sqlite_master WHERE type = 'table'")]
+    except sqlite3.OperationalError as error:
+        raise unreachable(path, error) from None
+    except sqlite3.DatabaseError as error:
+        raise ForeignDatabaseError(
+            f"{path} is no database of driftwatch ({error}); it was left as it is; name another file"
+        ) from None
+    if tables or mark:
+        held = f"the tables {', '.join(sorted(tables)[:5])}" if tables else "no tables"
+        raise ForeignDatabaseError(
+            f"{path} belongs to another program (it holds {held} and the mark {mark:#x}, expected "
+            f"{APPLICATION_ID:#x}); it was left as it is; name another file"
+        )
+
+
+def writing_engine(path: Path) -> Engine:
+    """Return the engine of the one writer: every transaction takes the write lock at its begin."""
+    engine = _engine(path, "mode=rwc")
+
+    def begin(connection: Connection) -> None:
+        connection.exec_driver_sql("BEGIN IMMEDIATE")
+
+    sa.event.listen(engine, "begin", begin)
+    return engine
+
+
+def reading_engine(path: Path) -> Engine:
+    """Return an engine that can only read.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When there is no such file.
+    ForeignDatabaseError
+        When the file is not ours.
+    """
+    if not path.exists():
+        raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
+    refuse_foreign(path)
+    engine = _engine(path, _reading_mode(path))
+
+    def begin(connection: Connection) -> None:
+        connection.exec_driver_sql("BEGIN")
+
+    sa.event.listen(engine, "begin", begin)
+    return engine
+
+
+def _reading_mode(path: Path) -> str:
+    # Write-ahead logging needs a side file even to read; where none can be made and none is in use, none is needed.
+    write_ahead = path.with_name(path.name + "-wal")
+    archived = not os.access(path.parent, os.W_OK, effective_ids=os.access in os.supports_effective_ids)
+    return "immutable=1" if archived and not write_ahead.exists() else "mode=ro"
+
+
+def _engine(path: Path, how: str) -> Engine:
+    return sa.create_engine("sqlite://", creator=lambda: _connect(path, how), poolclass=StaticPool)
+
+
+def _connect(path: Path, how: str) -> sqlite3.Connection:
+    # No transaction is begun behind our back (isolation_level None): SQLAlchemy's begin event does it.
+    connection = sqlite3.connect(
+        f"file:{quote(str(path))}?{how}",
+        uri=True,
+        isolation_level=None,
+        check_same_thread=False,
+        timeout=BUSY_MS / 1000,
+    )
+    connection.execute("PRAGMA foreign_keys = ON")
+    return connection
+
+
+def revision_of(connection: Connection) -> str | None:
+    """Return the revision of a database, None for one without tables."""
+    names = sa.inspect(connection).get_table_names()
+    if VERSION_TABLE not in names:
+        return None
+    revision: str | None = connection.exec_driver_sql(f"SELECT version_num FROM {VERSION_TABLE}").scalar()  # noqa: S608
+    return revision
+
+
+def refuse_other_schema(path: Path, revision: str | None) -> None:
+    """Raise unless a database has exactly the revision that this program reads.
+
+    Raises
+    ------
+    OtherSchemaError
+        When it is older or newer, or was never finished.
+    """
+    if revision == HEAD:
+        return
+    if revision is None or revision < HEAD:
+        raise OtherSchemaError(
+            f"{path} has schema {revision or 'none'}, expected {HEAD}; it is brought up to date when `driftwatch run` "
+            "or `driftwatch replay` next writes to it"
+        )
+    raise newer_schema(path, revision)
+
+
+def newer_schema(path: Path, revision: str) -> OtherSchemaError:
+    """Return the error about a database from the future."""
+    return OtherSchemaError(
+        f"{path} has schema {revision}, expected at most {HEAD}: a newer driftwatch wrote it; it was left as it is; "
+        "install that version, or name another file"
+    )
+
+
+def migrate(connection: Connection, path: Path) -> None:
+    """Bring a database to revision `HEAD` in one transaction; a new one is created by the same way.
+
+    Raises
+    ------
+    OtherSchemaError
+        When the database is newer than this program.
+    """
+    revision = revision_of(connection)
+    if revision == HEAD:
+        return
+    if revision is not None and revision > HEAD:
+        raise newer_schema(path, revision)
+    connection.exec_driver_sql(f"PRAGMA application_id = {APPLICATION_ID}")
+    _upgrade(connection)
+
+
+def _upgrade(connection: Connection) -> None:
+    from alembic import command  # slow to import, and needed only when there is something to migrate
+
+    command.upgrade(migration_config({"connection": connection}), HEAD)
+
+
+def migration_config(attributes: dict[str, Any]) -> Any:
+    """Return the configuration of Alembic for the migrations inside this package, wherever it is installed."""
+    from alembic.config import Config
+
+    config = Config(attributes=attributes)
+    folder = Path(__file__).parent / "migrations"
+    config.set_main_option("script_location", str(folder).replace("%", "%%"))
+    return config
