@@ -13,13 +13,14 @@ from typing import TYPE_CHECKING, Any
 from urllib.parse import quote
 
 import sqlalchemy as sa
-from sqlalchemy.pool import StaticPool
+from sqlalchemy.pool import NullPool, StaticPool
 
 from driftwatch.store.errors import ForeignDatabaseError, OtherSchemaError, StoreUnreachableError, unreachable
 from driftwatch.store.tables import APPLICATION_ID, HEAD, VERSION_TABLE
 
 if TYPE_CHECKING:
     from sqlalchemy.engine import Connection, Engine
+    from sqlalchemy.pool import Pool
 
 BUSY_MS = 5000
 """How long a statement waits for a lock before it fails."""
@@ -61,7 +62,7 @@ def refuse_foreign(path: Path) -> None:
 
 def writing_engine(path: Path) -> Engine:
     """Return the engine of the one writer: every transaction takes the write lock at its begin."""
-    engine = _engine(path, "mode=rwc")
+    engine = _engine(path, "mode=rwc", StaticPool)
 
     def begin(connection: Connection) -> None:
         connection.exec_driver_sql("BEGIN IMMEDIATE")
@@ -83,7 +84,7 @@ def reading_engine(path: Path) -> Engine:
     if not path.exists():
         raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
     refuse_foreign(path)
-    engine = _engine(path, _reading_mode(path))
+    engine = _engine(path, _reading_mode(path), NullPool)
 
     def begin(connection: Connection) -> None:
         connection.exec_driver_sql("BEGIN")
@@ -99,8 +100,8 @@ def _reading_mode(path: Path) -> str:
     return "immutable=1" if archived and not write_ahead.exists() else "mode=ro"
 
 
-def _engine(path: Path, how: str) -> Engine:
-    return sa.create_engine("sqlite://", creator=lambda: _connect(path, how), poolclass=StaticPool)
+def _engine(path: Path, how: str, pool: type[Pool]) -> Engine:
+    return sa.create_engine("sqlite://", creator=lambda: _connect(path, how), poolclass=pool)
 
 
 def _connect(path: Path, how: str) -> sqlite3.Connection:

@@ -133,6 +133,10 @@ class Writer:
         """
         return _Transaction(self._connection, self.path, synchronous)
 
+    def forget_headers(self) -> None:
+        """Look up again what the records of a run share: rows of ``header`` went."""
+        self._headers = {}
+
     def close(self) -> None:
         """Fold the write-ahead log into the database and let the next writer in."""
         try:
