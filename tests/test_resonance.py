@@ -1,6 +1,7 @@
 """The pole and what follows from it, against identities that hold whatever the code does."""
 
 import math
+from fractions import Fraction
 
 import numpy as np
 import pytest
@@ -287,12 +288,13 @@ def test_the_response_keeps_the_shape_of_the_frequencies_and_leaves_them_alone()
     np.testing.assert_array_equal(grid, before)
 
 
-def test_the_response_keeps_its_digits_beside_a_very_sharp_resonance() -> None:
-    """At one half width off, ``1/(k D)`` is Q/(i -+ 1) to second order, however sharp: here Q = 2^39."""
-    pole = Pole(1024.0, 2.0**-40)
-    above = 1024.0 + 1024.0 * 2.0**-40
-    expected = pole.q / complex(-1.0, 1.0)
-    assert complex(pole.receptance(above)) == pytest.approx(expected, rel=4 * pole.zeta)
+@given(st.builds(Pole, frequencies, st.floats(1e-12, 1e-9)), st.integers(-40, 40))
+def test_the_response_keeps_its_digits_beside_a_very_sharp_resonance(pole: Pole, steps: int) -> None:
+    """Against rational arithmetic, a few floating-point steps from fn, where 1 - r^2 would lose them all."""
+    f = pole.frequency_hz + steps * math.ulp(pole.frequency_hz)
+    ratio = Fraction(f) / Fraction(pole.frequency_hz)
+    dynamic = complex(float(1 - ratio**2), float(2 * Fraction(pole.zeta) * ratio))
+    assert complex(pole.receptance(f)) == pytest.approx(1.0 / dynamic, rel=CLOSE)
 
 
 def test_both_mass_and_stiffness_or_one_that_is_not_positive_is_refused() -> None:

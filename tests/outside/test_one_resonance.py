@@ -8,7 +8,7 @@ import cmath
 import importlib
 import math
 import warnings
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from importlib import resources
 from typing import Any
 
@@ -262,12 +262,12 @@ def test_the_amplification_parts_from_q_where_a_general_search_says(fraction: fl
 
 
 @pytest.fixture(scope="module")
-def seismology() -> Iterator[Any]:
+def seismology() -> Any:
     """Give `obspy`, which warns while it is imported: its own affair."""
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
         importlib.import_module("obspy.signal.invsim")
-        yield importlib.import_module("obspy")
+        return importlib.import_module("obspy")
 
 
 def test_the_wood_anderson_pole_is_1_25_hz_with_damping_0_8(seismology: Any) -> None:
