@@ -513,6 +513,7 @@ def topic_of(body: Body) -> str:
 
 _RFC3339 = re.compile(
     r"(\d{4}-\d\d-\d\d)[Tt ](\d\d:\d\d:\d\d)(?:\.(\d{1,9}))?([Zz]|[+-]\d\d:\d\d)",
+    re.ASCII,  # digits of other scripts are no RFC 3339
 )
 _EPOCH = dt.datetime(1970, 1, 1, tzinfo=dt.UTC)
 
