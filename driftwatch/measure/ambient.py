@@ -1,0 +1,225 @@
+"""Resonance under random excitation: frequency, Q and their covariance from windows of a zoomed band.
+
+See `whittle` for the model, `detection` for the start and for the question whether there is a mode at all, `scoring`
+for the search of the optimum. Every row of a batch is treated alone, in elementwise operations and in reductions over
+its own numbers: a window's result is the same to the last bit whatever else is in the batch.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import fft as transforms
+
+from driftwatch.measure import detection, residuals
+from driftwatch.measure.scoring import Optimum, Prior, maximise
+from driftwatch.measure.whittle import (
+    FLOOR,
+    LN_G,
+    WN,
+    Array,
+    Lines,
+    cumulated,
+    expected,
+    lines_of,
+    pool,
+    signal_and_floor,
+)
+
+FEWEST_LINES = 8
+"""Lines inside the search band below which nothing is fitted."""
+
+MISFIT_P = 1e-4
+"""Below this p-value of the residual test a window is called a misfit."""
+
+WIDEST = 0.5
+"""Half-power width over the search band's width from which on a resonance is too wide for its band."""
+
+NARROWEST = 1.0
+"""Half-power width in lines (gT/pi) below which a window does not resolve a resonance."""
+
+_TILT_OCTAVE = 2.0  # standard deviation of the floor's slope: a power of frequency, 2 being 6 dB an octave
+_FLOOR_SPREAD = 2.0  # standard deviation of the log floor about its first guess
+_ROUGH, _FINE = 0.5, 0.02  # standard deviations: when to pool anew, when to stop
+_ROUGH_MOST, _FINE_MOST = 5, 14  # evaluations of the model
+_ROWS = 64  # windows at a time: their arrays stay in the cache
+_FIGURES = (
+    "frequency_hz",
+    "ln_q",
+    "ln_frequency_std",
+    "ln_q_std",
+    "correlation",
+    "level",
+    "snr_db",
+    "fit_p",
+    "gain",
+    "converged",
+)
+
+
+@dataclass(frozen=True, slots=True)
+class AmbientFit:
+    """Fits of a batch of windows; every array has shape (windows,), NaN where nothing could be fitted."""
+
+    frequency_hz: Array  # undamped natural frequency fn
+    ln_q: Array  # ln of the quality factor 1/(2 zeta)
+    ln_frequency_std: Array  # standard uncertainty of ln fn
+    ln_q_std: Array  # standard uncertainty of ln q; the 95 % interval is q exp(+-1.96 ln_q_std)
+    correlation: Array  # between ln fn and ln q
+    level: Array  # rms in the search band in the channel's own unit, before the conversion to velocity
+    snr_db: Array  # fitted signal variance over noise variance in the search band
+    fit_p: Array  # p-value of the residual test
+    gain: Array  # gain in log-likelihood over a floor alone
+    converged: NDArray[np.bool_]
+    reasons: tuple[tuple[str, ...], ...]  # why a fit is not to be used, words of `records.REASONS`; empty: usable
+
+
+def fit(
+    windows: NDArray[np.complexfloating],
+    rate_hz: float,
+    centre_hz: float,
+    search_hz: tuple[float, float],
+    velocity_power: int = 0,
+) -> AmbientFit:
+    """Fit one resonance to each of a batch of windows.
+
+    Parameters
+    ----------
+    windows
+        Shape (windows, samples), complex baseband of the zoom, converted to velocity.
+    rate_hz
+        Rate of the baseband.
+    centre_hz
+        The baseband's zero frequency.
+    search_hz
+        Lowest and highest frequency that is looked at; the zoom must be flat in between.
+    velocity_power
+        k of the zoom's conversion (i w/wc)^k: colours white measurement noise, and is undone for `level`.
+
+    Returns
+    -------
+    AmbientFit
+        Windows that cannot be fitted carry NaN and a reason; data never raise.
+
+    Raises
+    ------
+    ValueError
+        When the shapes or frequencies contradict each other.
+    """
+    _check(windows, rate_hz, centre_hz, search_hz)
+    lines = lines_of(windows.shape[1], rate_hz, centre_hz, search_hz, velocity_power)
+    figures = np.full((len(_FIGURES), windows.shape[0]), np.nan)
+    reasons: list[tuple[str, ...]] = []
+    for begin in range(0, windows.shape[0], _ROWS):
+        rows = slice(begin, begin + _ROWS)
+        reasons += _fit_rows(windows[rows], lines, figures[:, rows])
+    *values, converged = figures
+    return AmbientFit(*values, converged=converged == 1.0, reasons=tuple(reasons))
+
+
+def _fit_rows(windows: NDArray[np.complexfloating], lines: Lines, figures: Array) -> list[tuple[str, ...]]:
+    """Fit a few windows; fill in their figures, shape (figures, windows), and return their reasons."""
+    if lines.count < FEWEST_LINES:
+        return [("not_resolved",)] * windows.shape[0]
+    power = _periodogram(windows, lines)
+    mean = np.sum(power, axis=1) / lines.count
+    finite = np.isfinite(mean)
+    good = np.flatnonzero(finite & (mean > 0.0))
+    fitted: list[tuple[str, ...]] = []
+    if good.size:
+        values, fitted = _fit_power(power[good] if good.size < mean.size else power, mean[good], lines)
+        figures[:, good] = values
+    figures[_FIGURES.index("level"), mean == 0.0] = 0.0
+    reasons: list[tuple[str, ...]] = [("no_mode",) if known else ("not_finite",) for known in finite]
+    for row, words in zip(good, fitted, strict=True):
+        reasons[row] = words
+    return reasons
+
+
+def _periodogram(windows: NDArray[np.complexfloating], lines: Lines) -> Array:
+    """Return |transform|^2 / (length rate) on the in-band lines, shape (windows, lines), unit^2/Hz."""
+    spectrum = transforms.fft(windows, axis=1)
+    power = np.empty((windows.shape[0], lines.count))
+    below = max(0, min(-lines.first, lines.count))  # lines under the centre lie at the transform's end
+    for into, begin in ((slice(0, below), lines.first + lines.length), (slice(below, None), max(lines.first, 0))):
+        part = power[:, into]
+        if part.shape[1]:
+            slab = spectrum[:, begin : begin + part.shape[1]]
+            real, imag = slab.real.astype(np.float64), slab.imag.astype(np.float64)
+            with np.errstate(invalid="ignore", over="ignore"):
+                real *= real
+                imag *= imag
+                np.add(real, imag, out=part)
+    power *= 1.0 / (lines.length * lines.rate_hz)
+    return power
+
+
+def _fit_power(power: Array, mean: Array, lines: Lines) -> tuple[Array, list[tuple[str, ...]]]:
+    """Fit periodograms of positive finite mean; return figures, shape (figures, rows), and reasons."""
+    level = np.sqrt(0.5 * np.sum(power / lines.colour(lines.omega), axis=1) * lines.spacing / (2 * np.pi))
+    power = power / mean[:, None]
+    sums = cumulated(power)
+    theta = detection.start(power, sums, lines)
+    prior = _prior(theta, lines)
+    pools = pool(sums, lines, theta[:, WN], np.exp(theta[:, LN_G]))
+    rough = maximise(theta, pools, prior, lines, _ROUGH, _ROUGH_MOST)
+    pools = pool(sums, lines, rough.theta[:, WN], np.exp(rough.theta[:, LN_G]))
+    best = maximise(rough.theta, pools, prior, lines, _FINE, _FINE_MOST)
+    gain = best.likelihood - detection.floor_only(pools, prior.tilt_precision)
+    signal, floor = signal_and_floor(best.theta, lines)
+    largest = np.max(power / (signal + floor), axis=1)
+    fit_p = residuals.p_value(largest, lines.count, expected(best.theta, pools)[0], pools)
+    snr = 10.0 * np.log10(np.sum(signal, axis=1) / np.sum(floor, axis=1))
+    frequency, ln_q, frequency_std, q_std, correlation = _moments(best)
+    values = np.stack((frequency, ln_q, frequency_std, q_std, correlation, level, snr, fit_p, gain, best.converged))
+    return values, _reasons(best, gain, fit_p, lines)
+
+
+def _prior(theta: Array, lines: Lines) -> Prior:
+    tilt = _TILT_OCTAVE * 0.5 * np.log(lines.high / lines.low)
+    return Prior(theta[:, FLOOR].copy(), _FLOOR_SPREAD**-2, tilt**-2)
+
+
+def _moments(best: Optimum) -> tuple[Array, Array, Array, Array, Array]:
+    """Return fn in Hz, ln q = ln(wn/2g), standard deviations of ln fn and ln q, and their correlation."""
+    wn, ln_g = best.theta[:, WN], best.theta[:, LN_G]
+    covariance = np.linalg.inv(best.information)
+    scale = best.g / wn  # from wn/g to ln wn
+    frequency = covariance[:, WN, WN] * scale**2
+    both = frequency - covariance[:, WN, LN_G] * scale
+    q = both - covariance[:, WN, LN_G] * scale + covariance[:, LN_G, LN_G]
+    ln_q = np.log(0.5 * wn) - ln_g
+    return wn / (2 * np.pi), ln_q, np.sqrt(frequency), np.sqrt(q), both / np.sqrt(frequency * q)
+
+
+def _reasons(best: Optimum, gain: Array, fit_p: Array, lines: Lines) -> list[tuple[str, ...]]:
+    """Return why each row is not to be used."""
+    wn, g = best.theta[:, WN], np.exp(best.theta[:, LN_G])
+    against = {
+        "no_mode": gain < detection.DETECTION_GAIN,
+        "not_converged": ~best.converged,
+        "band_edge": (wn - g < lines.low) | (wn + g > lines.high),
+        "too_wide": 2.0 * g > WIDEST * (lines.high - lines.low),
+        "not_resolved": g * lines.seconds < NARROWEST * np.pi,
+        "misfit": fit_p < MISFIT_P,
+    }
+    table = np.stack(list(against.values()), axis=1)
+    words = tuple(against)
+    return [tuple(word for word, true in zip(words, row, strict=True) if true) for row in table.tolist()]
+
+
+def _check(
+    windows: NDArray[np.complexfloating], rate_hz: float, centre_hz: float, search_hz: tuple[float, float]
+) -> None:
+    low, high = search_hz
+    if windows.ndim != 2 or windows.shape[1] < 2:
+        raise ValueError(f"windows have shape {windows.shape}; expected (windows, samples)")
+    if not rate_hz > 0.0:
+        raise ValueError(f"baseband rate {rate_hz} Hz; expected a positive rate")
+    if not (0.0 < low < high and centre_hz - rate_hz / 2 <= low and high <= centre_hz + rate_hz / 2):
+        raise ValueError(
+            f"search band {low} to {high} Hz; expected 0 < low < high inside the baseband, "
+            f"{centre_hz - rate_hz / 2} to {centre_hz + rate_hz / 2} Hz"
+        )

@@ -1,0 +1,113 @@
+"""Where a resonance may be in a window, and whether there is one at all.
+
+Periodograms come here divided by their mean over the search band.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from driftwatch.measure.whittle import FLOOR, LN_G, LN_P, TILT, WN, Array, Lines, Pools
+
+DETECTION_GAIN = 20.0
+"""Gain in log-likelihood over a floor alone from which on a window holds a mode."""
+
+_SECTIONS = 16  # of the band, whose least mean begins the search for the floor
+_CORE_SHARE = 0.63  # of a Lorentzian's power within 1.5 g of its middle
+
+
+def start(power: Array, sums: Array, lines: Lines) -> Array:
+    """Return where to begin the fit: the band's most conspicuous bump.
+
+    Boxes of 1, 2, 4 ... lines are moved over the band; the fullest of each width is compared by the likelihood of
+    two levels, inside and outside, against one. The width comes from how the power grows with the box.
+
+    Parameters
+    ----------
+    power
+        Shape (rows, lines), periodograms of mean 1.
+    sums
+        Shape (rows, lines + 1), their running sums.
+    lines
+        Their frequencies.
+
+    Returns
+    -------
+    array, shape (rows, 5)
+        Parameters as in `whittle`.
+    """
+    widths, full, place = _boxes(power, sums)
+    count = float(lines.count)
+    inside = np.maximum(full / widths, 1e-300)
+    outside = np.maximum((count - full) / (count - widths), 1e-9)
+    gain = -widths * np.log(inside) - (count - widths) * np.log(outside)
+    best = np.argmax(gain, axis=1)[:, None]
+    width = widths[best[:, 0], None]
+    floor = np.minimum(_least_section(sums), 0.9)[:, None]
+    excess = np.take_along_axis(full, best, axis=1) - floor * width
+    g = 0.5 * lines.spacing * _half_width(widths, full - floor * widths, excess)
+    theta = np.empty((power.shape[0], 5))
+    middle = np.take_along_axis(place, best, axis=1) + 0.5 * (width - 1.0)
+    theta[:, WN] = lines.omega[0] + lines.spacing * middle[:, 0]
+    theta[:, LN_G] = np.log(g)
+    theta[:, LN_P] = np.log(np.maximum(excess[:, 0], 0.1) * lines.spacing / (2 * np.pi))
+    theta[:, FLOOR] = np.log(floor[:, 0])
+    theta[:, TILT] = 0.0
+    return theta
+
+
+def _boxes(power: Array, sums: Array) -> tuple[Array, Array, Array]:
+    """Return the widths, shape (widths,), and the fullest box of each: its sum and first line, shape (rows, widths)."""
+    count = power.shape[1]
+    widths = [1 << k for k in range(count.bit_length()) if (1 << k) <= count // 2]
+    full = np.empty((power.shape[0], len(widths)))
+    place = np.empty_like(full)
+    for column, width in enumerate(widths):
+        stride = max(1, width // 4)
+        boxes = sums[:, width::stride] - sums[:, :-width:stride]
+        where = np.argmax(boxes, axis=1)
+        full[:, column] = np.take_along_axis(boxes, where[:, None], axis=1)[:, 0]
+        place[:, column] = where * stride
+    return np.array(widths, dtype=np.float64), full, place
+
+
+def _half_width(widths: Array, excess: Array, whole: Array) -> Array:
+    """Return the width in lines, shape (rows,), that holds about half of the excess `whole` of the best box."""
+    enough = excess >= 0.5 * whole
+    upper = np.argmax(enough, axis=1)
+    lower = np.maximum(upper - 1, 0)
+    high = np.take_along_axis(excess, upper[:, None], axis=1)[:, 0]
+    low = np.where(upper > 0, np.take_along_axis(excess, lower[:, None], axis=1)[:, 0], 0.0)
+    share = (0.5 * whole[:, 0] - low) / np.maximum(high - low, 1e-300)
+    under = np.where(upper > 0, widths[lower], 0.5 * widths[0])
+    return np.asarray(under + np.clip(share, 0.0, 1.0) * (widths[upper] - under), dtype=np.float64)
+
+
+def _least_section(sums: Array) -> Array:
+    """Return the least mean over sections of the band, shape (rows,)."""
+    count = sums.shape[1] - 1
+    edges = np.linspace(0, count, min(_SECTIONS, max(count // 4, 1)) + 1).astype(np.intp)
+    means = np.diff(sums[:, edges], axis=1) / np.diff(edges)
+    return np.asarray(np.maximum(np.min(means, axis=1), 1e-6), dtype=np.float64)
+
+
+def floor_only(pools: Pools, tilt_precision: float) -> Array:
+    """Return the log-likelihood of a floor alone, shape (rows,).
+
+    Level and tilt are their moments' estimates, the tilt shrunk by its prior: in noise as good as their optimum.
+    """
+    colour = pools.upper + pools.lower
+    tilt = (pools.upper - pools.lower) / colour
+    flat = pools.power / colour
+    weight = pools.count
+    total = np.sum(weight, axis=1, keepdims=True)
+    weighted = weight * tilt
+    middle = np.sum(weighted, axis=1, keepdims=True) / total
+    about = tilt - middle
+    information = np.sum(weighted * about, axis=1, keepdims=True)
+    level = np.sum(weight * flat, axis=1, keepdims=True) / total
+    slope = np.sum(weight * about * flat, axis=1, keepdims=True) / ((information + tilt_precision) * level)
+    slope = np.clip(slope, -0.8, 0.8)
+    floor = (level * colour) * (1.0 + slope * about)
+    likelihood = -np.sum(weight * (np.log(floor) + pools.power / floor), axis=1)
+    return np.asarray(likelihood - 0.5 * tilt_precision * np.square(slope[:, 0]), dtype=np.float64)
