@@ -52,8 +52,9 @@ def check_rate(config: Configuration, rate_hz: float, inputs: int) -> list[Probl
 
 
 def _tables(holder: Any, key: str) -> list[tuple[int, Document]]:
-    """Return the tables of an array with their indices; nothing where it is no array."""
+    """Return the tables of an array with their indices; a single table, wrong as it is, counts as the first."""
     items = holder.get(key) if isinstance(holder, Mapping) else None
+    items = [items] if isinstance(items, Mapping) else items
     return [(i, item) for i, item in enumerate(items) if isinstance(item, Mapping)] if isinstance(items, list) else []
 
 

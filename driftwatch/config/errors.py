@@ -19,8 +19,9 @@ class Problem:
     remedy: str  # what to do
 
     def __str__(self) -> str:
-        """One line."""
-        return f"{self.key}: got {self.came}; expected {self.expected}; {self.remedy}"
+        """One line, whatever stands in the file."""
+        text = f"{self.key}: got {self.came}; expected {self.expected}; {self.remedy}"
+        return "".join(mark if mark.isprintable() else ascii(mark)[1:-1] for mark in text)
 
 
 class ConfigError(Exception):

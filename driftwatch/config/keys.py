@@ -38,28 +38,27 @@ def _down(here: Any, step: int | str) -> Any:
     return None
 
 
-def known_here(model: type[BaseModel]) -> tuple[str, ...]:
-    """Return the keys of a table as the file writes them."""
+def known_at(document: Mapping[str, Any], loc: Loc) -> tuple[str, ...]:
+    """Return the keys that the table at a place may have, as the file writes them."""
+    models: list[type[BaseModel]] = [Configuration]
+    here: Any = document
+    for step in loc:
+        here = _down(here, step)
+        if isinstance(step, str):
+            models = [inner for model in models for inner in _models_under(model, step)]
+        if len(models) > 1 and isinstance(here, Mapping):
+            models = [model for model in models if _kind(model) == here.get("kind")]
+    return _keys(models[0]) if models else ()
+
+
+def _keys(model: type[BaseModel]) -> tuple[str, ...]:
     return tuple(field.alias or name for name, field in model.model_fields.items())
 
 
-def tables_at(loc: Loc, kind: str | None = None) -> type[BaseModel] | None:
-    """Return the model of the table at a place; `kind` chooses among the sources."""
-    model: type[BaseModel] = Configuration
-    for step in loc:
-        if isinstance(step, int):
-            continue
-        field = next((field for name, field in model.model_fields.items() if step in (name, field.alias)), None)
-        choices = _models_in(field.annotation) if field else []
-        if not choices:
-            return None
-        model = next((one for one in choices if _is_kind(one, kind)), choices[0])
-    return model
-
-
-def _is_kind(model: type[BaseModel], kind: str | None) -> bool:
-    field = model.model_fields.get("kind")
-    return field is not None and field.default == kind
+def _models_under(model: type[BaseModel], key: str) -> list[type[BaseModel]]:
+    """Return the models that a key of a table may hold: several where the kind decides."""
+    hints = [field.annotation for name, field in model.model_fields.items() if (field.alias or name) == key]
+    return [inner for hint in hints for inner in _models_in(hint)]
 
 
 def _models_in(hint: Any) -> list[type[BaseModel]]:
@@ -69,30 +68,40 @@ def _models_in(hint: Any) -> list[type[BaseModel]]:
     return [model for part in typing.get_args(hint) for model in _models_in(part)]
 
 
+def _kind(model: type[BaseModel]) -> Any:
+    field = model.model_fields.get("kind")
+    return field.default if field else None
+
+
 @cache
-def _tables_of_keys() -> dict[str, str]:
-    """Return for every known key the first table that has it, as its heading is written."""
+def _headings() -> dict[str, str]:
+    """Return for every known key where it belongs: the heading of the first table that has it."""
     found: dict[str, str] = {}
 
-    def walk(model: type[BaseModel], heading: str) -> None:
-        for key in known_here(model):
+    def walk(model: type[BaseModel], path: str, heading: str) -> None:
+        for key in _keys(model):
             found.setdefault(key, heading)
         for name, field in model.model_fields.items():
+            inside = f"{path}.{name}" if path else name
+            is_array = typing.get_origin(field.annotation) is tuple
             for inner in _models_in(field.annotation):
-                walk(inner, f"{heading}.{name}" if heading else name)
+                kind = f" of kind {_kind(inner)}" if _kind(inner) else ""
+                walk(inner, inside, f"into [[{inside}]]{kind}" if is_array else f"into [{inside}]")
 
-    walk(Configuration, "")
+    walk(Configuration, "", "to the top of the file")
     return found
 
 
 def nearest(unknown: str, known: tuple[str, ...]) -> str:
-    """Return the remedy for an unknown key: the nearest one known in its table, or elsewhere."""
-    close = difflib.get_close_matches(unknown.lower(), known, n=1, cutoff=0.6)
+    """Return the remedy for an unknown key: where it is known, or the nearest known one, in its table first."""
+    headings = _headings()
+    lower = unknown.lower()
+    close = difflib.get_close_matches(lower, known, n=1, cutoff=0.6)
+    if lower in headings and not difflib.get_close_matches(lower, close, cutoff=0.85):
+        return f"{lower} belongs {headings[lower]}"
     if close:
         return f"did you mean {close[0]}?"
-    elsewhere = _tables_of_keys()
-    close = difflib.get_close_matches(unknown.lower(), list(elsewhere), n=1, cutoff=0.8)
+    close = difflib.get_close_matches(lower, list(headings), n=1, cutoff=0.8)
     if close:
-        heading = elsewhere[close[0]]
-        return f"{close[0]} belongs {f'into the table {heading}' if heading else 'to the top of the file'}"
+        return f"did you mean {close[0]}, which belongs {headings[close[0]]}?"
     return "take it out"

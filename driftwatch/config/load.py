@@ -14,7 +14,7 @@ from pydantic_core import ErrorDetails
 
 from driftwatch.config.cross import cross_problems
 from driftwatch.config.errors import ConfigError, Problem
-from driftwatch.config.keys import Loc, known_here, nearest, place, tables_at
+from driftwatch.config.keys import Loc, known_at, nearest, place
 from driftwatch.config.models import Configuration
 from driftwatch.config.sources import SourceConfig
 
@@ -118,7 +118,7 @@ def _problem(document: Mapping[str, Any], detail: ErrorDetails) -> Problem:
         wanted = (*loc, "kind") if detail["type"] == "union_tag_not_found" else loc
         return Problem(place(document, wanted), "nothing", _needed(str(wanted[-1])), f"add {wanted[-1]}")
     if detail["type"] == "union_tag_invalid":
-        came = shown(context["tag"])
+        came = shown(detail["input"]["kind"])
         return Problem(f"{key} . kind", came, _needed("kind"), "correct it")
     expected, remedy = _expected(detail["type"], context, loc)
     return Problem(key, shown(detail["input"]), expected, remedy)
@@ -139,11 +139,7 @@ def _needed(key: str) -> str:
 
 
 def _unknown_key(document: Mapping[str, Any], loc: Loc) -> Problem:
-    holder: Any = document
-    for step in loc[:-1]:
-        holder = holder[step]
-    model = tables_at(loc[:-1], holder.get("kind"))
-    known = known_here(model) if model else ()
+    known = known_at(document, loc[:-1])
     return Problem(place(document, loc), "an unknown key", "one of " + ", ".join(known), nearest(str(loc[-1]), known))
 
 
@@ -194,7 +190,7 @@ def shown(value: Any) -> str:
         case float():
             text = f"{value:.12g}"
         case str():
-            text = '"' + value.encode("unicode_escape").decode("ascii") + '"'
+            text = f'"{value}"'
         case Mapping():
             text = "a table"
         case list() | tuple():

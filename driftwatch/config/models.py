@@ -212,10 +212,17 @@ class BusConfig(Table):
 # ---------------------------------------------------------------------------------------------- the whole file
 
 
+def _schema(value: Any) -> Any:
+    """Refuse what equals 1 and is no whole number."""
+    if type(value) is not int or value != 1:
+        raise refusal("1", "write schema = 1; it is the only one that this version knows")
+    return value
+
+
 class Configuration(Table):
     """The whole file."""
 
-    schema_: Literal[1] = Field(alias="schema")
+    schema_: Annotated[Literal[1], BeforeValidator(_schema)] = Field(alias="schema")
     station: StationConfig = StationConfig()
     source: tuple[SourceConfig, ...] = ()
     channel: tuple[ChannelConfig, ...] = ()

@@ -29,6 +29,9 @@ DEFAULT_WINDOW_S = 4.0
 FEWEST_BINS = 16
 """A window must put at least so many bins, 1/window apart, into the search band: four parameters are fitted."""
 
+MOST_WINDOWS = 100
+"""So many windows at most may look at the same sample."""
+
 DEFAULT_BINS = 32
 """Bins that a window left out is long enough for."""
 
@@ -87,7 +90,7 @@ class ModeConfig(Table):
     channel: Name
     reference: Name | None = None  # the reference channel, for driven only
     search_hz: SpanHz  # searched for inside
-    methods: tuple[Method, ...] = (Method.AMBIENT,)
+    methods: tuple[Method, ...] = Field(default=(Method.AMBIENT,), validate_default=True)
     window_s: Seconds = Field(default_factory=_default_window_s, validate_default=True)
     step_s: Seconds = Field(default_factory=lambda data: data["window_s"])  # from one window to the next
     regimes: tuple[Name, ...] = ()  # empty: always
@@ -135,6 +138,9 @@ class ModeConfig(Table):
         window_s = info.data.get("window_s")
         if window_s is not None and step_s > window_s:
             raise refusal(f"at most window_s, {window_s:g}", "else samples between two windows are never looked at")
+        if window_s is not None and step_s < window_s / MOST_WINDOWS:
+            least = window_s / MOST_WINDOWS
+            raise refusal(f"at least {least:g} s, window_s/{MOST_WINDOWS}", "windows closer together say nothing new")
         return step_s
 
     @field_validator("band")

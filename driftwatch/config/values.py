@@ -41,7 +41,7 @@ Profile = tuple[tuple[float, float], ...]
 class Table(BaseModel):
     """A table of the file: frozen, and no key but the known ones."""
 
-    model_config = ConfigDict(frozen=True, extra="forbid", populate_by_name=True)
+    model_config = ConfigDict(frozen=True, extra="forbid")
 
 
 def refusal(expected: str, remedy: str, came: str | None = None) -> PydanticCustomError:
