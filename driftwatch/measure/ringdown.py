@@ -1,0 +1,314 @@
+"""Ringdown: frequency and Q from one free decay.
+
+The raw samples are cut a little after the onset, transformed, and one decaying sinusoid is fitted to the bins of the
+search band with its exact finite sum (`decay_bins`). The onset is found by likelihood in the same band: of a tone that
+begins at n0 with the pole already known, n0 and the amplitude free.
+
+Where the residuals contradict the model, because other modes and the blow itself still sound at first, a later cut
+and a smooth background in the bins are tried in a fixed order, and the first that fits is taken.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import fft, special
+
+from driftwatch.measure.decay_bins import (
+    Bins,
+    PoleFit,
+    Reals,
+    fit_pole,
+    residual_p,
+    start,
+    transform,
+)
+
+CUT = 0.02
+"""The cut after the onset, in time constants."""
+
+LATER_CUTS = (0.1, 0.25, 0.5, 0.75, 1.0, 1.25)
+"""Cuts tried one after the other, in time constants, where the residuals contradict an earlier one."""
+
+LONGEST = 7.0
+"""Time constants after the cut that are used at most: what follows is noise."""
+
+SHORTEST = 0.5
+"""Time constants that a record must show at least."""
+
+MISFIT_P = 0.01
+"""p-value of the residual test below which a cut is given up for the next."""
+
+_FEWEST_BINS = 4
+_ONSET_STEPS = 33
+
+
+@dataclass(frozen=True, slots=True)
+class RingdownFit:
+    """One decay's pole, or why there is none."""
+
+    frequency_hz: float | None  # undamped natural frequency fn
+    q: float | None
+    std_ln_f: float | None
+    std_ln_q: float | None
+    correlation: float | None  # between ln fn and ln q
+    q_low: float | None  # 95 % interval of q, Student's t
+    q_high: float | None
+    level: float | None  # rms in the search band of the record used
+    snr_db: float | None  # fitted signal variance over noise variance in the search band, of the record used
+    fit_p: float | None  # p-value of the residual test
+    onset_sample: float | None  # where the decay begins, index into the samples given
+    onset_std: float | None  # samples
+    first_sample: int  # index of the first sample used
+    samples: int  # number used
+    amplitude: float | None  # of the tone at the first sample used
+    decrement_q: float | None  # cross-check: Q from the slope of the log envelope
+    background: bool  # a smooth background was fitted along
+    usable: bool
+    reasons: tuple[str, ...]  # see `records.REASONS`
+
+
+def context_s(search_hz: tuple[float, float]) -> float:
+    """Return how many seconds before an onset `fit` wants to see: four reciprocal bandwidths."""
+    return 4.0 / (search_hz[1] - search_hz[0])
+
+
+def fit(
+    samples: NDArray[np.floating],
+    rate_hz: float,
+    search_hz: tuple[float, float],
+    onset_hint: float | None = None,
+) -> RingdownFit:
+    """Fit one mode's free decay in raw samples that hold some noise, an onset, and the decay up to their end.
+
+    Displacement, velocity and acceleration give the same result: a free decay has one pole whatever the derivative.
+
+    Parameters
+    ----------
+    samples
+        Shape (n,), any unit.
+    rate_hz
+        Sample rate.
+    search_hz
+        Where the mode is searched for.
+    onset_hint
+        Index of the onset to about two reciprocal bandwidths; left out: the steepest rise of the band's envelope.
+
+    Raises
+    ------
+    ValueError
+        When the samples are not one row, the band is not inside 0 .. rate/2, or the hint not inside the samples.
+    """
+    _check(samples, rate_hz, search_hz, onset_hint)
+    trouble = _trouble(samples, rate_hz, search_hz)
+    if trouble:
+        return _nothing(len(samples), trouble)
+    data = np.asarray(samples, dtype=np.float64)
+    hint = _steepest(data, rate_hz, search_hz) if onset_hint is None else onset_hint
+    return _fit_after(data, rate_hz, search_hz, hint)
+
+
+def _fit_after(data: Reals, rate_hz: float, search_hz: tuple[float, float], hint: float) -> RingdownFit:
+    reciprocal = rate_hz / (search_hz[1] - search_hz[0])
+    rough = _rough_pole(data, rate_hz, search_hz, round(hint + reciprocal))
+    if rough is None:
+        return _nothing(len(data), ("short",))
+    onset, onset_std = _refined_onset(data, rate_hz, search_hz, hint, rough)
+    best: tuple[Bins, PoleFit, float, int] | None = None
+    for cut, background in _attempts():
+        first = max(0, math.ceil(onset + cut * rate_hz / rough.g))
+        bins = _record(data, first, rate_hz, search_hz, rough.g)
+        if bins is None:
+            break
+        pole = fit_pole(bins, (rough.g, rough.damped), background)
+        p = residual_p(pole)
+        if best is None or p > best[2]:
+            best = bins, pole, p, first
+        if p > MISFIT_P:
+            break
+    if best is None:
+        return _nothing(len(data), ("short",))
+    return _assemble(*best, search_hz=search_hz, onset=onset, onset_std=onset_std)
+
+
+def _attempts() -> Iterator[tuple[float, bool]]:
+    """Cuts and backgrounds in the order in which they are tried."""
+    yield CUT, False
+    for cut in LATER_CUTS:
+        yield cut, False
+        yield cut, True
+
+
+def _rough_pole(data: Reals, rate_hz: float, search_hz: tuple[float, float], first: int) -> PoleFit | None:
+    """The pole of all that comes a reciprocal bandwidth after the hint, where the onset cannot be."""
+    if len(data) - first < 4:
+        return None
+    bins = transform(data[first:], rate_hz, search_hz)
+    if len(bins.values) < _FEWEST_BINS or not np.any(bins.values):
+        return None
+    return fit_pole(bins, start(bins))
+
+
+def _record(data: Reals, first: int, rate_hz: float, search_hz: tuple[float, float], g: float) -> Bins | None:
+    """The bins of the record that begins at a cut; None where too little is left."""
+    last = min(len(data), first + math.ceil(LONGEST * rate_hz / g))
+    if last - first < SHORTEST * rate_hz / g:
+        return None
+    bins = transform(data[first:last], rate_hz, search_hz)
+    return bins if len(bins.values) >= _FEWEST_BINS and np.any(bins.values) else None
+
+
+def _refined_onset(
+    data: Reals, rate_hz: float, search_hz: tuple[float, float], hint: float, pole: PoleFit
+) -> tuple[float, float]:
+    """Return the likeliest onset within two reciprocal bandwidths of the hint, and its standard deviation, samples."""
+    reciprocal = rate_hz / (search_hz[1] - search_hz[0])
+    first = max(0, math.floor(hint - 4.0 * reciprocal))
+    last = min(len(data), math.ceil(hint + 2.0 * reciprocal + 4.0 * rate_hz / pole.g))
+    bins = transform(data[first:last], rate_hz, search_hz)
+    noise = pole.noise * bins.length / max(1, len(data))
+    low, high = max(0.0, hint - 2.0 * reciprocal - first), hint + 2.0 * reciprocal - first
+    for _ in range(3):
+        trials = np.linspace(low, min(high, bins.length - 1.0), _ONSET_STEPS)
+        gain = _onset_gain(bins, trials, pole)
+        top = int(np.argmax(gain))
+        width = trials[1] - trials[0]
+        low, high = max(0.0, trials[top] - 2.0 * width), trials[top] + 2.0 * width
+    return first + float(trials[top]), _spread(gain, width, top, noise)
+
+
+def _onset_gain(bins: Bins, onsets: Reals, pole: PoleFit) -> Reals:
+    """By how much a tone from each trial onset on lowers the sum of squares, amplitude free; without the image.
+
+    The tone's transform is (w^n0 - z^(N-n0)) / (1 - z w), w = exp(-i w_k / fs).
+    """
+    eigenvalue = complex(-pole.g, pole.damped) / bins.rate_hz
+    turn = bins.omega / bins.rate_hz
+    ends = np.exp(eigenvalue * (bins.length - onsets))
+    shape = (np.exp(-1j * onsets[:, None] * turn) - ends[:, None]) / (1.0 - np.exp(eigenvalue - 1j * turn))
+    power = np.sum(shape.real**2 + shape.imag**2, axis=1)
+    return np.asarray(np.abs(shape.conj() @ bins.values) ** 2 / np.maximum(power, np.finfo(float).tiny))
+
+
+def _spread(gain: Reals, width: float, top: int, noise: float) -> float:
+    """Standard deviation from the curvature of the log-likelihood gain / (2 noise) about its top."""
+    centre = min(max(top, 1), len(gain) - 2)
+    curvature = (2.0 * gain[centre] - gain[centre - 1] - gain[centre + 1]) / width**2
+    return math.sqrt(2.0 * noise / curvature) if curvature > 0.0 else math.inf
+
+
+def _assemble(
+    bins: Bins, pole: PoleFit, p: float, first: int, *, search_hz: tuple[float, float], onset: float, onset_std: float
+) -> RingdownFit:
+    omega = math.hypot(pole.g, pole.damped)
+    frequency, q = omega / (2.0 * math.pi), omega / (2.0 * pole.g)
+    covariance = _log_covariance(pole)
+    std_f, std_q = math.sqrt(covariance[0, 0]), math.sqrt(covariance[1, 1])
+    reach = float(special.stdtrit(pole.freedom, 0.975)) * std_q
+    fitted = bins.values - pole.residual
+    signal = float(np.sum(np.abs(fitted) ** 2))
+    noise = 2.0 * pole.noise * len(bins.values)
+    snr_db = 10.0 * math.log10(signal / noise) if noise > 0.0 and signal > 0.0 else None
+    reasons = _reasons(pole, p, frequency, q, search_hz)
+    return RingdownFit(
+        frequency_hz=frequency,
+        q=q,
+        std_ln_f=std_f,
+        std_ln_q=std_q,
+        correlation=float(covariance[0, 1] / (std_f * std_q)) if std_f > 0.0 and std_q > 0.0 else 0.0,
+        q_low=q * math.exp(-reach),
+        q_high=q * math.exp(reach),
+        level=bins.level,
+        snr_db=snr_db,
+        fit_p=p,
+        onset_sample=onset,
+        onset_std=onset_std,
+        first_sample=first,
+        samples=bins.length,
+        amplitude=abs(pole.amplitude),
+        decrement_q=None,
+        background=pole.background,
+        usable=not reasons,
+        reasons=reasons,
+    )
+
+
+def _log_covariance(pole: PoleFit) -> Reals:
+    """Covariance of (ln fn, ln q) from that of (ln g, wd): wn^2 = g^2 + wd^2, q = wn / (2 g)."""
+    square = pole.g**2 + pole.damped**2
+    of_f = [pole.g**2 / square, pole.damped / square]
+    slope = np.array([of_f, [of_f[0] - 1.0, of_f[1]]])
+    return np.asarray(slope @ pole.covariance @ slope.T)
+
+
+def _reasons(pole: PoleFit, p: float, frequency: float, q: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
+    width, band = frequency / q, search_hz[1] - search_hz[0]
+    words = []
+    if not pole.converged:
+        words.append("not_converged")
+    if not search_hz[0] + width / 2 < frequency < search_hz[1] - width / 2:
+        words.append("band_edge")
+    if width > band / 2:
+        words.append("too_wide")
+    if p < 1e-4:
+        words.append("misfit")
+    return tuple(words)
+
+
+def _steepest(data: Reals, rate_hz: float, search_hz: tuple[float, float]) -> float:
+    """Index of the highest point of the band's envelope, its edges smoothed by a Hann window."""
+    length = fft.next_fast_len(len(data), real=True)
+    bins = transform(np.pad(data, (0, length - len(data))), rate_hz, search_hz)
+    window = np.hanning(len(bins.values) + 2)[1:-1]
+    envelope = np.abs(fft.ifft(bins.values * window))
+    return float(np.argmax(envelope)) * bins.length / len(envelope)
+
+
+def _check(
+    samples: NDArray[np.floating], rate_hz: float, search_hz: tuple[float, float], onset_hint: float | None
+) -> None:
+    if samples.ndim != 1:
+        raise ValueError(f"samples of shape {samples.shape}: expected one row of samples")
+    if not 0.0 < search_hz[0] < search_hz[1] < rate_hz / 2:
+        raise ValueError(
+            f"search band {search_hz[0]} to {search_hz[1]} Hz: expected 0 < low < high < {rate_hz / 2} Hz, half the "
+            "sample rate"
+        )
+    if onset_hint is not None and not 0.0 <= onset_hint < len(samples):
+        raise ValueError(f"onset hint {onset_hint}: expected an index into the {len(samples)} samples")
+
+
+def _trouble(samples: NDArray[np.floating], rate_hz: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
+    if len(samples) * (search_hz[1] - search_hz[0]) < _FEWEST_BINS * rate_hz:
+        return ("short",)
+    if not np.all(np.isfinite(samples)):
+        return ("not_finite",)
+    return () if np.any(samples) else ("unexcited",)
+
+
+def _nothing(samples: int, reasons: tuple[str, ...]) -> RingdownFit:
+    return RingdownFit(
+        frequency_hz=None,
+        q=None,
+        std_ln_f=None,
+        std_ln_q=None,
+        correlation=None,
+        q_low=None,
+        q_high=None,
+        level=None,
+        snr_db=None,
+        fit_p=None,
+        onset_sample=None,
+        onset_std=None,
+        first_sample=0,
+        samples=samples,
+        amplitude=None,
+        decrement_q=None,
+        background=False,
+        usable=False,
+        reasons=reasons,
+    )
