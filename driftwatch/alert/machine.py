@@ -1,0 +1,108 @@
+"""The life of one alert, apart from what drives it: (life, finding) -> (life, event), by stream time alone.
+
+Two layers. `ROWS` is the state model of IEC 62682 / ISA-18.2 as a table (state, event) -> state. Above it `step` turns
+findings (violated, returned, neither, cannot tell) into events, through the on and off delays. The states and events
+that are not used yet have their place: a row more in the table, an event more in `Event`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from enum import Enum, StrEnum
+
+from driftwatch.records import AlertState
+
+
+class Event(StrEnum):
+    """What can move an alert from one state to another."""
+
+    VIOLATED = "violated"  # beyond the limit throughout the on delay
+    RETURNED = "returned"  # back inside throughout the off delay
+
+
+ROWS: dict[tuple[AlertState, Event], AlertState] = {
+    (AlertState.NORMAL, Event.VIOLATED): AlertState.UNACKNOWLEDGED,
+    (AlertState.UNACKNOWLEDGED, Event.RETURNED): AlertState.RETURNED_UNACKNOWLEDGED,
+    (AlertState.RETURNED_UNACKNOWLEDGED, Event.VIOLATED): AlertState.UNACKNOWLEDGED,
+}
+"""Where each event leads from each state; what is not listed changes nothing."""
+
+
+def after(state: AlertState, event: Event) -> AlertState:
+    """Return the state that an event leads to; the same one where the event means nothing."""
+    return ROWS.get((state, event), state)
+
+
+class Finding(Enum):
+    """What one judgement says."""
+
+    VIOLATED = "violated"
+    RETURNED = "returned"
+    NEITHER = "neither"  # too near to the limit to say either
+    CANNOT_TELL = "cannot tell"
+
+
+@dataclass(frozen=True, slots=True)
+class Timer:
+    """For how long something has held, counted between judgements that both say so.
+
+    A judgement that says otherwise resets it. One that cannot tell stops it where it is, and the time until the next
+    one that can does not count.
+    """
+
+    elapsed_ns: int = 0
+    last_ns: int | None = None  # stream time of the last judgement that said so; None: stopped
+
+    def advance(self, time_ns: int) -> Timer:
+        """Count up to a judgement that says so."""
+        if self.last_ns is None:
+            return Timer(self.elapsed_ns, time_ns)
+        return Timer(self.elapsed_ns + max(time_ns - self.last_ns, 0), max(time_ns, self.last_ns))
+
+    def stop(self) -> Timer:
+        """Keep what was counted, and count nothing until the next judgement."""
+        return self if self.last_ns is None else Timer(self.elapsed_ns, None)
+
+
+IDLE = Timer()
+
+
+@dataclass(frozen=True, slots=True)
+class Delays:
+    """How long a violation and a return must last before they count."""
+
+    on_ns: int
+    off_ns: int
+
+
+@dataclass(frozen=True, slots=True)
+class Life:
+    """Where an alert stands."""
+
+    state: AlertState = AlertState.NORMAL
+    determinate: bool = False  # nothing is known before the first judgement
+    on: Timer = IDLE
+    off: Timer = IDLE
+
+
+def step(life: Life, finding: Finding, time_ns: int, delays: Delays) -> tuple[Life, Event | None]:
+    """Return the life after one finding, and the event that it caused.
+
+    A finding that repeats what the state already says (violated while unacknowledged, returned while normal) keeps
+    the opposite timer at zero. An event comes at the first finding at which its timer has reached its delay.
+    """
+    if finding is Finding.CANNOT_TELL:
+        return replace(life, determinate=False, on=life.on.stop(), off=life.off.stop()), None
+    on = life.on.advance(time_ns) if finding is Finding.VIOLATED else IDLE
+    off = life.off.advance(time_ns) if finding is Finding.RETURNED else IDLE
+    event = _due(finding, on, off, delays)
+    state = life.state if event is None else after(life.state, event)
+    return Life(state, True, on, off), event if state is not life.state else None
+
+
+def _due(finding: Finding, on: Timer, off: Timer, delays: Delays) -> Event | None:
+    if finding is Finding.VIOLATED and on.elapsed_ns >= delays.on_ns:
+        return Event.VIOLATED
+    if finding is Finding.RETURNED and off.elapsed_ns >= delays.off_ns:
+        return Event.RETURNED
+    return None

@@ -1,0 +1,49 @@
+"""What an alert record says in words."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from driftwatch.alert.machine import Event
+
+if TYPE_CHECKING:
+    from driftwatch.alert.band import Band, Figure, Judgement
+    from driftwatch.records import Track
+
+
+def limits_text(band: Band) -> str:
+    """Return the limits of a band as a person writes them: ``890..915 Hz``, ``below 915 Hz``."""
+    unit = _unit(band.quantity)
+    if band.low is None:
+        return f"below {band.high:.7g}{unit}"
+    if band.high is None:
+        return f"above {band.low:.7g}{unit}"
+    return f"within {band.low:.7g}..{band.high:.7g}{unit}"
+
+
+def band_words(event: Event | None, held_s: float, band: Band, figure: Figure, judgement: Judgement) -> str:
+    """Return what happened at a band."""
+    if event is None:
+        return "can tell"
+    name = "Q" if band.quantity == "q" else "frequency"
+    unit = _unit(band.quantity)
+    value = f"{name} {figure.value:.6g}{unit}"
+    if event is Event.RETURNED:
+        by = f" by {band.deadband:.6g}{unit}" if band.deadband else ""
+        return f"{value} {limits_text(band)}{by} with probability {_chance(judgement.inside)} for {held_s:.6g} s"
+    limit = band.low if judgement.side == "below" else band.high
+    return f"{value} {judgement.side} {limit:.7g}{unit} with probability {_chance(judgement.beyond)} for {held_s:.6g} s"
+
+
+def track_words(track: Track) -> str:
+    """Return what is known of a mode: ``held, unexcited``."""
+    return str(track.status) if track.reason is None else f"{track.status}, {track.reason}"
+
+
+def _unit(quantity: str) -> str:
+    return "" if quantity == "q" else " Hz"
+
+
+def _chance(probability: float) -> str:
+    """Return a probability with as many nines as it needs, never rounded up to 1."""
+    return f"{probability:.2f}" if probability < 0.995 else f"{min(probability, 0.9999):.4f}"
