@@ -62,7 +62,7 @@ UNITS = {"frequency": "Hz", "q": "1"}
 """Unit of each quantity that a band can limit."""
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(slots=True)  # never changed; not frozen, which would cost more than the judgement
 class Figure:
     """The figure that a band judges, as a track point gives it."""
 
@@ -96,7 +96,7 @@ def probability_below(figure: Figure, limit: float, quantity: str) -> float:
     return 0.5 * math.erfc(-distance / std * _SQRT_HALF)
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(slots=True)  # never changed; not frozen, which would cost more than the judgement
 class Judgement:
     """How probable it is that the true value is beyond a band's limits, and inside them by the deadband."""
 

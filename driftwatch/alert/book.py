@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 from driftwatch.alert.band import UNITS, Band, figure_of, judge
-from driftwatch.alert.machine import Delays, Event, Finding, Life
+from driftwatch.alert.machine import UNKNOWN, Delays, Event, Finding, Life
 from driftwatch.alert.watch import Seen, Subject, Watch
 from driftwatch.alert.words import band_words, track_words
 from driftwatch.records import NS, Alert, AlertState, Condition, Priority, Track, TrackStatus
@@ -90,7 +90,7 @@ class AlertBook:
         settings = AlertSettings() if settings is None else settings
         self._modes = {(each.channel, each.mode): _ModeAlerts(station, each, settings) for each in modes}
         subject = _condition_subject(station, settings.no_data.name, Condition.NO_DATA, settings.no_data)
-        self._no_data = Watch(subject, Life(determinate=True))
+        self._no_data = Watch(subject, Life())
         self._samples_ns: int | None = None
 
     def on_track(
@@ -166,10 +166,10 @@ class _ModeAlerts:
     """The alerts of one mode."""
 
     def __init__(self, station: str, watched: WatchedMode, settings: AlertSettings) -> None:
-        self._bands = [(band, Watch(_band_subject(station, watched, band))) for band in watched.bands]
+        self._bands = [(band, Watch(_band_subject(station, watched, band), UNKNOWN)) for band in watched.bands]
         name = f"{watched.channel}/{watched.mode}/{settings.lost.name}"
         subject = _condition_subject(station, name, Condition.LOST, settings.lost, watched)
-        self._lost = Watch(subject, Life(determinate=True))
+        self._lost = Watch(subject, Life())
         self._last_words = str(TrackStatus.SEARCHING)
         self._last_because: tuple[int, ...] = ()
         self.followed = False

@@ -65,6 +65,7 @@ class Timer:
 
 
 IDLE = Timer()
+"""A timer that counts nothing yet."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,7 +81,7 @@ class Life:
     """Where an alert stands."""
 
     state: AlertState = AlertState.NORMAL
-    determinate: bool = False  # nothing is known before the first judgement
+    determinate: bool = True
     on: Timer = IDLE
     off: Timer = IDLE
 
@@ -88,21 +89,33 @@ class Life:
 def step(life: Life, finding: Finding, time_ns: int, delays: Delays) -> tuple[Life, Event | None]:
     """Return the life after one finding, and the event that it caused.
 
-    A finding that repeats what the state already says (violated while unacknowledged, returned while normal) keeps
-    the opposite timer at zero. An event comes at the first finding at which its timer has reached its delay.
+    Only what can move the alert from where it stands is timed. An event comes at the first finding at which its timer
+    has reached its delay. What changes nothing returns the same life.
     """
     if finding is Finding.CANNOT_TELL:
+        if not life.determinate:
+            return life, None
         return replace(life, determinate=False, on=life.on.stop(), off=life.off.stop()), None
-    on = life.on.advance(time_ns) if finding is Finding.VIOLATED else IDLE
-    off = life.off.advance(time_ns) if finding is Finding.RETURNED else IDLE
-    event = _due(finding, on, off, delays)
-    state = life.state if event is None else after(life.state, event)
-    return Life(state, True, on, off), event if state is not life.state else None
+    event = _EVENT_OF.get(finding)
+    if event is None or (life.state, event) not in ROWS:
+        idle = life.determinate and life.on is IDLE and life.off is IDLE
+        return (life if idle else Life(life.state)), None
+    return _timed(life, event, time_ns, delays)
 
 
-def _due(finding: Finding, on: Timer, off: Timer, delays: Delays) -> Event | None:
-    if finding is Finding.VIOLATED and on.elapsed_ns >= delays.on_ns:
-        return Event.VIOLATED
-    if finding is Finding.RETURNED and off.elapsed_ns >= delays.off_ns:
-        return Event.RETURNED
-    return None
+_EVENT_OF = {Finding.VIOLATED: Event.VIOLATED, Finding.RETURNED: Event.RETURNED}
+
+
+def _timed(life: Life, event: Event, time_ns: int, delays: Delays) -> tuple[Life, Event | None]:
+    """Time an event that would move the alert; the timer of the other one starts again from zero."""
+    if event is Event.VIOLATED:
+        on, off = life.on.advance(time_ns), IDLE
+        due = on.elapsed_ns >= delays.on_ns
+    else:
+        on, off = IDLE, life.off.advance(time_ns)
+        due = off.elapsed_ns >= delays.off_ns
+    return Life(ROWS[life.state, event] if due else life.state, True, on, off), event if due else None
+
+
+UNKNOWN = Life(determinate=False)
+"""Where an alert begins of which nothing is known before the first judgement."""

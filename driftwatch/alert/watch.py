@@ -6,7 +6,7 @@ import uuid
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from driftwatch.alert.machine import Delays, Event, Finding, Life, step
+from driftwatch.alert.machine import IDLE, Delays, Event, Finding, Life, step
 from driftwatch.records import NS, Alert, AlertState, Condition, Priority
 
 if TYPE_CHECKING:
@@ -42,7 +42,7 @@ class Subject:
     delays: Delays
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(slots=True)  # never changed; not frozen, which would cost more than the judgement
 class Seen:
     """One judgement with the figures and the records behind it."""
 
@@ -60,9 +60,9 @@ class Watch:
     Before the first one `since_ns` is the first moment of the alert and the occurrence is the nil UUID.
     """
 
-    def __init__(self, subject: Subject, life: Life | None = None) -> None:
+    def __init__(self, subject: Subject, life: Life) -> None:
         self.subject = subject
-        self._life = Life() if life is None else life
+        self._life = life
         self._since_ns: int | None = None
         self._occurrence = NO_OCCURRENCE
         self._timed: Finding | None = None
@@ -86,7 +86,7 @@ class Watch:
     @property
     def quiet(self) -> bool:
         """Whether nothing stands and no violation is being timed."""
-        return self._life.state is AlertState.NORMAL and self._life.determinate and self._life.on.last_ns is None
+        return self._life.state is AlertState.NORMAL and self._life.determinate and self._life.on is IDLE
 
     def see(self, seen: Seen, time_ns: int, words: Callable[[Event | None, float], str]) -> Alert | None:
         """Take one judgement; return the record of what it changed.
