@@ -3,14 +3,14 @@
 from __future__ import annotations
 
 import errno
-import ipaddress
 from typing import TYPE_CHECKING
-from urllib.parse import urlsplit
 
 import zmq
+from pydantic_core import PydanticCustomError
 
 from driftwatch.bus.errors import BusError
 from driftwatch.bus.wire import HEARTBEAT, encode_heartbeat, encode_json
+from driftwatch.config import check_endpoint
 from driftwatch.records import topic_of
 
 if TYPE_CHECKING:
@@ -34,29 +34,13 @@ def checked_endpoint(endpoint: str) -> str:
     BusError
         When it is no ``tcp://HOST:PORT``, or lies beyond loopback.
     """
-    host, port = _host_and_port(endpoint)
-    if host is None or port is None:
-        raise BusError(f"{endpoint!r} is no endpoint; expected tcp://HOST:PORT, such as tcp://127.0.0.1:5571")
-    if not _is_loopback(host):
-        raise BusError(
-            f"{endpoint!r} is open to the network; without keys only this computer may listen; "
-            "expected tcp://127.0.0.1:PORT"
-        )
-    return endpoint
-
-
-def _host_and_port(endpoint: str) -> tuple[str | None, str | None]:
-    parts = urlsplit(endpoint)
-    _, _, port = parts.netloc.rpartition(":")
-    good = parts.scheme == "tcp" and not parts.path and (port == "*" or (port.isdecimal() and int(port) < 2**16))
-    return (parts.hostname, port) if good else (None, None)
-
-
-def _is_loopback(host: str) -> bool:
+    # A star stands for any free port: good for binding, though not for a configuration that others must know.
     try:
-        return ipaddress.ip_address(host).is_loopback
-    except ValueError:
-        return host == "localhost"
+        check_endpoint(endpoint.removesuffix("*") + "1" if endpoint.endswith(":*") else endpoint)
+    except PydanticCustomError as error:
+        context = error.context or {}
+        raise BusError(f"got {endpoint!r}; expected {context.get('expected')}; {context.get('remedy')}") from None
+    return endpoint
 
 
 class Publisher:
@@ -84,6 +68,7 @@ class Publisher:
         self._socket = (context or self._owned or zmq.Context()).socket(zmq.PUB)
         self._socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
         self._socket.setsockopt(zmq.LINGER, LINGER_MS)
+        self._socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
         try:
             self._socket.bind(endpoint)
         except zmq.ZMQError as error:

@@ -12,8 +12,8 @@ if TYPE_CHECKING:
     from driftwatch.records import Envelope
     from driftwatch.store.writer import Writer
 
-GROUP_S = 0.2
-"""Time between two commits, seconds: the longest that a record waits for the end of its group."""
+COMMIT_EVERY_S = 0.15
+"""Time between two commits, seconds. With `flush_due` called every 50 ms no record waits longer than 200 ms."""
 
 GROUP_RECORDS = 5000
 """Most records in a group, so that a fast replay holds few of them at a time."""
@@ -31,8 +31,8 @@ class Keeper:
     out
         Called with each group after that, for what is printed; None: nothing is.
 
-    The keeper reads no clock: its caller calls `flush_due` after each `take` and at least every 50 ms or so, and says
-    what time it is on one monotonic clock, in seconds. `flush` at the end.
+    The keeper reads no clock: its caller calls `flush_due` at least every 50 ms and says what time it
+    is on one monotonic clock, in seconds, and calls `flush` at the end.
     """
 
     def __init__(
@@ -58,14 +58,14 @@ class Keeper:
         self._group.extend(envelopes)
 
     def flush_due(self, now_monotonic: float) -> None:
-        """Commit and publish the group if the last commit is `GROUP_S` ago, or the group is large.
+        """Commit and publish the group if the last commit is `COMMIT_EVERY_S` ago, or the group is large.
 
         Raises
         ------
         CommitError
             As `flush`.
         """
-        if now_monotonic - self._committed_at >= GROUP_S or len(self._group) >= GROUP_RECORDS:
+        if now_monotonic - self._committed_at >= COMMIT_EVERY_S or len(self._group) >= GROUP_RECORDS:
             self._committed_at = now_monotonic
             self.flush()
 

@@ -25,7 +25,7 @@ def database_path(url: str, base: Path) -> Path:
         When the URL names another kind of database, or no file.
     """
     name = url.removeprefix(_SCHEME)
-    if ":" in name.partition("/")[0] or not name or name == ":memory:":
+    if "://" in name or not name or name == ":memory:":
         raise StoreUnreachableError(
             f"{url!r} names no file of a database; expected a path or {_SCHEME}PATH, such as {_SCHEME}driftwatch.db"
         )
