@@ -1,10 +1,12 @@
 """The house: what may lie where, how large a file may grow, and what the command's help may load."""
 
 import json
+import re
 import subprocess
 import sys
 from pathlib import Path
 
+import click
 import pytest
 
 ROOT = Path(__file__).parent.parent
@@ -116,3 +118,55 @@ def test_tests_mirror_the_package() -> None:
     """A directory of tests is named for a room, or holds checks against values from outside, or what tests read."""
     directories = {path.parts[1] for path in tracked("tests") if len(path.parts) > 2}
     assert directories <= ROOMS | {"outside", "real", "tools"}
+
+
+# ---------------------------------------------------------------------------------------------- what the guides say
+
+CODE = re.compile(r"```[a-z]*\n(.*?)```|`([^`\n]+)`", re.DOTALL)
+COMMAND_LINE = re.compile(r"(?:^|[\s/])driftwatch +(?P<command>[a-z]+)(?P<rest>[^\n|;&]*)")
+PATH = re.compile(r"(?<![\w/.-])(?:tools|config|tests|driftwatch|\.ci)/[\w./-]*\w")
+
+
+def code_in(text: str) -> list[str]:
+    """Return the fenced blocks and the back-quoted words of a page."""
+    return [fenced or quoted for fenced, quoted in CODE.findall(text)]
+
+
+def guide(name: str) -> list[str]:
+    page = ROOT / name
+    assert page.exists(), f"{name} is not written yet"
+    return code_in(page.read_text(encoding="utf-8"))
+
+
+def unknown_in(code: str) -> list[str]:
+    """Return the commands and options of `code` that do not exist."""
+    from driftwatch.cli import COMMANDS, main
+
+    context, wrong = click.Context(main), []
+    for line in COMMAND_LINE.finditer(code):
+        name = line["command"]
+        command = main.get_command(context, name) if name in COMMANDS else None
+        if command is None:
+            wrong.append(name)
+            continue
+        known = {option for parameter in command.params for option in parameter.opts} | {"--help"}
+        wrong += [f"{name} {option}" for option in re.findall(r"--[a-z-]+", line["rest"]) if option not in known]
+    return wrong
+
+
+@pytest.mark.parametrize("name", ["README.md", "DEVELOPERS.md"])
+def test_commands_and_options_in_the_guides_exist(name: str) -> None:
+    assert [wrong for code in guide(name) for wrong in unknown_in(code)] == []
+
+
+@pytest.mark.parametrize("name", ["README.md", "DEVELOPERS.md"])
+def test_paths_in_the_guides_exist(name: str) -> None:
+    paths = {path for code in guide(name) for path in PATH.findall(code)}
+    assert sorted(path for path in paths if not (ROOT / path).exists()) == []
+
+
+def test_a_command_that_does_not_exist_would_be_found() -> None:
+    """The instrument of the tests above."""
+    page = "Type `driftwatch fly --high`, `driftwatch replay --sideways`, or\n```sh\n$ .venv/bin/driftwatch swim x.wav\ntools/none --fast\n```\n"
+    assert [wrong for code in code_in(page) for wrong in unknown_in(code)] == ["fly", "replay --sideways", "swim"]
+    assert [path for code in code_in(page) for path in PATH.findall(code)] == ["tools/none"]
