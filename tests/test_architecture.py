@@ -167,6 +167,7 @@ def test_paths_in_the_guides_exist(name: str) -> None:
 
 def test_a_command_that_does_not_exist_would_be_found() -> None:
     """The instrument of the tests above."""
-    page = "Type `driftwatch fly --high`, `driftwatch replay --sideways`, or\n```sh\n$ .venv/bin/driftwatch swim x.wav\ntools/none --fast\n```\n"
+    page = "Type `driftwatch fly --high`, `driftwatch replay --sideways`, or\n"
+    page += "```sh\n$ .venv/bin/driftwatch swim x.wav\ntools/none --fast\n```\n"
     assert [wrong for code in code_in(page) for wrong in unknown_in(code)] == ["fly", "replay --sideways", "swim"]
     assert [path for code in code_in(page) for path in PATH.findall(code)] == ["tools/none"]
