@@ -4,11 +4,12 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from driftwatch.config import ResonatorConfig, SimulatedSourceConfig
+from driftwatch.config import Profile, ResonatorConfig, SimulatedSourceConfig
 from driftwatch.records import Block, TimeQuality, sample_time_ns
 from driftwatch.stream.course import Course
 from driftwatch.stream.resonator import SEGMENT, Motion, Resonator
@@ -136,3 +137,54 @@ class _Tone:
         cycles = self.frequency_hz.integral(seconds)
         peak = np.sqrt(2) * self.level.at(seconds)
         return np.asarray(peak * np.sin(2 * np.pi * (cycles - np.floor(cycles))))
+
+
+# ---------------------------------------------------------------------------------------------- the truth
+
+
+def truth_of(source: SimulatedSource) -> dict[str, Any]:
+    """Return what is known of a source of known length, ready for JSON; seconds count from the first sample."""
+    config = source.config
+    samples = source.length or 0
+    return {
+        "rate_hz": config.rate_hz,
+        "inputs": config.inputs,
+        "samples": samples,
+        "seconds": samples / config.rate_hz,
+        "seed": config.seed,
+        "noise": config.noise,
+        "resonators": [_resonator_truth(part, samples, config.rate_hz) for part in config.resonator],
+        "tones": [
+            {"input": part.input, "frequency_hz": _plain(part.frequency_hz), "level": _plain(part.level)}
+            for part in config.tone
+        ],
+        "words": _WORDS,
+    }
+
+
+_WORDS = {
+    "frequency_hz": "undamped natural frequency; [[seconds, value], ...] are corner points with straight lines between",
+    "q": "1/(2 zeta)",
+    "level": "rms that the random force causes, full scale is 1; of acceleration: wn times the velocity's, so without "
+    "the force's own white part",
+    "impacts_s": "instants at which a decay of amplitude impact_peak begins",
+    "noise": "rms of white noise on every input",
+}
+
+
+def _resonator_truth(part: ResonatorConfig, samples: int, rate_hz: int) -> dict[str, Any]:
+    onsets = motion_of(part).impacts(0, samples, rate_hz)
+    return {
+        "input": part.input,
+        "quantity": part.quantity,
+        "frequency_hz": _plain(part.frequency_hz),
+        "q": _plain(part.q),
+        "level": _plain(part.level),
+        "impacts_s": [onset / rate_hz for onset in onsets],
+        "impact_peak": part.impact_peak if onsets else None,
+    }
+
+
+def _plain(profile: Profile) -> float | Profile:
+    """Return a number where nothing changes."""
+    return profile[0][1] if len(profile) == 1 else profile

@@ -1,10 +1,11 @@
-"""What every source of samples looks like, and how it fails.
+"""What every source of samples looks like, and how samples fail to come or to be kept.
 
 ::
 
     StreamError
     ├── SourceRefusedError   before anything starts: what was asked for cannot be read
-    └── SourceFailedError    in the midst: what was being read stopped
+    ├── SourceFailedError    in the midst: what was being read stopped
+    └── NotWrittenError      a recording could not be written
 """
 
 from __future__ import annotations
@@ -18,7 +19,7 @@ if TYPE_CHECKING:
 
 
 class StreamError(Exception):
-    """Samples cannot be had; the text says what came, what was expected, and what to do."""
+    """Samples cannot be had or kept; the text says what came, what was expected, and what to do."""
 
 
 class SourceRefusedError(StreamError):
@@ -37,6 +38,10 @@ class SourceRefusedError(StreamError):
 
 class SourceFailedError(StreamError):
     """Reading stopped in the midst; what was delivered before stands."""
+
+
+class NotWrittenError(StreamError):
+    """A recording could not be written; nothing is left of it."""
 
 
 class Source(Protocol):
