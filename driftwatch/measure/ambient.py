@@ -22,7 +22,6 @@ from driftwatch.measure.whittle import (
     Array,
     Lines,
     cumulated,
-    expected,
     lines_of,
     pool,
     signal_and_floor,
@@ -42,7 +41,7 @@ NARROWEST = 1.0
 
 _TILT_OCTAVE = 2.0  # standard deviation of the floor's slope: a power of frequency, 2 being 6 dB an octave
 _FLOOR_SPREAD = 2.0  # standard deviation of the log floor about its first guess
-_ROUGH, _FINE = 0.5, 0.02  # standard deviations: when to pool anew, when to stop
+_ROUGH, _FINE = 1.0, 0.05  # standard deviations: when to pool anew, when to stop
 _ROUGH_MOST, _FINE_MOST = 5, 14  # evaluations of the model
 _ROWS = 64  # windows at a time: their arrays stay in the cache
 _FIGURES = (
@@ -115,8 +114,24 @@ def fit(
     for begin in range(0, windows.shape[0], _ROWS):
         rows = slice(begin, begin + _ROWS)
         reasons += _fit_rows(windows[rows], lines, figures[:, rows])
-    *values, converged = figures
-    return AmbientFit(*values, converged=converged == 1.0, reasons=tuple(reasons))
+    return _assembled(figures, tuple(reasons))
+
+
+def _assembled(figures: Array, reasons: tuple[tuple[str, ...], ...]) -> AmbientFit:
+    column = dict(zip(_FIGURES, figures, strict=True))
+    return AmbientFit(
+        frequency_hz=column["frequency_hz"],
+        ln_q=column["ln_q"],
+        ln_frequency_std=column["ln_frequency_std"],
+        ln_q_std=column["ln_q_std"],
+        correlation=column["correlation"],
+        level=column["level"],
+        snr_db=column["snr_db"],
+        fit_p=column["fit_p"],
+        gain=column["gain"],
+        converged=column["converged"] == 1.0,
+        reasons=reasons,
+    )
 
 
 def _fit_rows(windows: NDArray[np.complexfloating], lines: Lines, figures: Array) -> list[tuple[str, ...]]:
@@ -158,20 +173,21 @@ def _periodogram(windows: NDArray[np.complexfloating], lines: Lines) -> Array:
 
 def _fit_power(power: Array, mean: Array, lines: Lines) -> tuple[Array, list[tuple[str, ...]]]:
     """Fit periodograms of positive finite mean; return figures, shape (figures, rows), and reasons."""
-    level = np.sqrt(0.5 * np.sum(power / lines.colour(lines.omega), axis=1) * lines.spacing / (2 * np.pi))
+    level = np.sqrt(0.5 * np.sum(power * lines.own_unit, axis=1) * lines.spacing / (2 * np.pi))
     power = power / mean[:, None]
     sums = cumulated(power)
-    theta = detection.start(power, sums, lines)
+    theta = detection.start(sums, lines)
     prior = _prior(theta, lines)
     pools = pool(sums, lines, theta[:, WN], np.exp(theta[:, LN_G]))
     rough = maximise(theta, pools, prior, lines, _ROUGH, _ROUGH_MOST)
     pools = pool(sums, lines, rough.theta[:, WN], np.exp(rough.theta[:, LN_G]))
     best = maximise(rough.theta, pools, prior, lines, _FINE, _FINE_MOST)
-    gain = best.likelihood - detection.floor_only(pools, prior.tilt_precision)
+    gain = best.likelihood - detection.floor_only(pools, prior.precision[1])
     signal, floor = signal_and_floor(best.theta, lines)
-    largest = np.max(power / (signal + floor), axis=1)
-    fit_p = residuals.p_value(largest, lines.count, expected(best.theta, pools)[0], pools)
     snr = 10.0 * np.log10(np.sum(signal, axis=1) / np.sum(floor, axis=1))
+    signal += floor
+    largest = np.max(np.divide(power, signal, out=power), axis=1)
+    fit_p = residuals.p_value(largest, lines.count, best.model, pools)
     frequency, ln_q, frequency_std, q_std, correlation = _moments(best)
     values = np.stack((frequency, ln_q, frequency_std, q_std, correlation, level, snr, fit_p, gain, best.converged))
     return values, _reasons(best, gain, fit_p, lines)
@@ -179,7 +195,8 @@ def _fit_power(power: Array, mean: Array, lines: Lines) -> tuple[Array, list[tup
 
 def _prior(theta: Array, lines: Lines) -> Prior:
     tilt = _TILT_OCTAVE * 0.5 * np.log(lines.high / lines.low)
-    return Prior(theta[:, FLOOR].copy(), _FLOOR_SPREAD**-2, tilt**-2)
+    mean = np.stack((theta[:, FLOOR], np.zeros(theta.shape[0])), axis=1)
+    return Prior(mean, np.array([_FLOOR_SPREAD**-2, tilt**-2]))
 
 
 def _moments(best: Optimum) -> tuple[Array, Array, Array, Array, Array]:

@@ -16,18 +16,16 @@ _SECTIONS = 16  # of the band, whose least mean begins the search for the floor
 _CORE_SHARE = 0.63  # of a Lorentzian's power within 1.5 g of its middle
 
 
-def start(power: Array, sums: Array, lines: Lines) -> Array:
+def start(sums: Array, lines: Lines) -> Array:
     """Return where to begin the fit: the band's most conspicuous bump.
 
-    Boxes of 1, 2, 4 ... lines are moved over the band; the fullest of each width is compared by the likelihood of
+    Boxes of 2, 4, 8 ... lines are moved over the band; the fullest of each width is compared by the likelihood of
     two levels, inside and outside, against one. The width comes from how the power grows with the box.
 
     Parameters
     ----------
-    power
-        Shape (rows, lines), periodograms of mean 1.
     sums
-        Shape (rows, lines + 1), their running sums.
+        Shape (rows, lines + 1), running sums of periodograms of mean 1.
     lines
         Their frequencies.
 
@@ -36,7 +34,7 @@ def start(power: Array, sums: Array, lines: Lines) -> Array:
     array, shape (rows, 5)
         Parameters as in `whittle`.
     """
-    widths, full, place = _boxes(power, sums)
+    widths, full, place = _boxes(sums)
     count = float(lines.count)
     inside = np.maximum(full / widths, 1e-300)
     outside = np.maximum((count - full) / (count - widths), 1e-9)
@@ -46,21 +44,28 @@ def start(power: Array, sums: Array, lines: Lines) -> Array:
     floor = np.minimum(_least_section(sums), 0.9)[:, None]
     excess = np.take_along_axis(full, best, axis=1) - floor * width
     g = 0.5 * lines.spacing * _half_width(widths, full - floor * widths, excess)
-    theta = np.empty((power.shape[0], 5))
+    theta = np.empty((sums.shape[0], 5))
     middle = np.take_along_axis(place, best, axis=1) + 0.5 * (width - 1.0)
     theta[:, WN] = lines.omega[0] + lines.spacing * middle[:, 0]
     theta[:, LN_G] = np.log(g)
     theta[:, LN_P] = np.log(np.maximum(excess[:, 0], 0.1) * lines.spacing / (2 * np.pi))
-    theta[:, FLOOR] = np.log(floor[:, 0])
     theta[:, TILT] = 0.0
+    theta[:, FLOOR] = np.log(np.maximum(floor[:, 0] - _tail(theta, lines), 0.1 * floor[:, 0]))
     return theta
 
 
-def _boxes(power: Array, sums: Array) -> tuple[Array, Array, Array]:
+def _tail(theta: Array, lines: Lines) -> Array:
+    """Return what the resonance may leave at the band's further edge, shape (rows,)."""
+    g = np.exp(theta[:, LN_G])
+    away = np.maximum(theta[:, WN] - lines.low, lines.high - theta[:, WN])
+    return np.asarray(2.0 * np.exp(theta[:, LN_P]) * g / (np.square(g) + np.square(away)), dtype=np.float64)
+
+
+def _boxes(sums: Array) -> tuple[Array, Array, Array]:
     """Return the widths, shape (widths,), and the fullest box of each: its sum and first line, shape (rows, widths)."""
-    count = power.shape[1]
-    widths = [1 << k for k in range(count.bit_length()) if (1 << k) <= count // 2]
-    full = np.empty((power.shape[0], len(widths)))
+    count = sums.shape[1] - 1
+    widths = [1 << k for k in range(1, count.bit_length()) if (1 << k) <= count // 2]
+    full = np.empty((sums.shape[0], len(widths)))
     place = np.empty_like(full)
     for column, width in enumerate(widths):
         stride = max(1, width // 4)
@@ -109,5 +114,5 @@ def floor_only(pools: Pools, tilt_precision: float) -> Array:
     slope = np.sum(weight * about * flat, axis=1, keepdims=True) / ((information + tilt_precision) * level)
     slope = np.clip(slope, -0.8, 0.8)
     floor = (level * colour) * (1.0 + slope * about)
-    likelihood = -np.sum(weight * (np.log(floor) + pools.power / floor), axis=1)
+    likelihood = -np.sum(weight * (np.log(floor) + pools.power / floor - 1.0), axis=1)
     return np.asarray(likelihood - 0.5 * tilt_precision * np.square(slope[:, 0]), dtype=np.float64)

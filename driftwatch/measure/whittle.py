@@ -55,7 +55,12 @@ class Lines:
     low: float  # the search band, rad/s
     high: float
     velocity_power: int
-    omega: Array  # shape (count,), rad/s, rising
+    omega: Array  # shape (count,), rad/s, rising; so the following
+    half_omega: Array  # w/2
+    half_inverse: Array  # 1/(2w)
+    own_unit: Array  # (w/wc)^-2k: undoes the conversion to velocity
+    upper: Array  # the floor's shape: colour times the share of the upper edge's level
+    lower: Array  # the same for the lower edge
 
     @property
     def spacing(self) -> float:
@@ -67,15 +72,6 @@ class Lines:
         """Length T of the window."""
         return self.length / self.rate_hz
 
-    def colour(self, omega: Array) -> Array:
-        """Return (w/wc)^2k."""
-        return np.asarray((omega / self.centre) ** (2 * self.velocity_power), dtype=np.float64)
-
-    def tilt(self, omega: Array) -> Array:
-        """Return the place in the band, -1 at its lower and 1 at its upper edge."""
-        return (omega - 0.5 * (self.low + self.high)) * (2.0 / (self.high - self.low))
-
-
 @lru_cache(maxsize=256)
 def lines_of(
     length: int, rate_hz: float, centre_hz: float, search_hz: tuple[float, float], velocity_power: int
@@ -86,8 +82,25 @@ def lines_of(
     above = int(np.floor((search_hz[1] - centre_hz) / spacing_hz + 1e-9))
     first, last = max(below, -(length // 2)), min(above, (length - 1) // 2)
     omega = 2 * np.pi * (centre_hz + np.arange(first, last + 1, dtype=np.float64) * spacing_hz)
-    low, high = (2 * np.pi * edge for edge in search_hz)
-    return Lines(first, omega.size, length, rate_hz, 2 * np.pi * centre_hz, low, high, velocity_power, omega)
+    low, high, centre = 2 * np.pi * search_hz[0], 2 * np.pi * search_hz[1], 2 * np.pi * centre_hz
+    colour = (omega / centre) ** (2 * velocity_power)
+    place = (omega - low) / (high - low)
+    return Lines(
+        first=first,
+        count=omega.size,
+        length=length,
+        rate_hz=rate_hz,
+        centre=centre,
+        low=low,
+        high=high,
+        velocity_power=velocity_power,
+        omega=omega,
+        half_omega=0.5 * omega,
+        half_inverse=0.5 / omega,
+        own_unit=1.0 / colour,
+        upper=colour * place,
+        lower=colour * (1.0 - place),
+    )
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,6 +110,7 @@ class Pools:
     seconds: float  # length T of the windows
     centre: float  # rad/s
     count: Array  # lines in the pool, may be 0
+    root_count: Array  # its square root
     power: Array  # mean periodogram of the pool
     half_omega: Array  # w/2 at the pool's middle
     half_inverse: Array  # 1/(2w) there
@@ -133,20 +147,21 @@ def pool(sums: Array, lines: Lines, wn: Array, g: Array) -> Pools:
     count = np.diff(edges, axis=1).astype(np.float64)
     power = np.diff(np.take_along_axis(sums, edges, axis=1), axis=1) / np.maximum(count, 1.0)
     omega = lines.omega[0] + lines.spacing * (0.5 * (edges[:, 1:] + edges[:, :-1]) - 0.5)
-    tilt = lines.tilt(omega)
-    colour = 0.5 * lines.colour(omega)
+    place = (omega - lines.low) / (lines.high - lines.low)
+    colour = (omega / lines.centre) ** (2 * lines.velocity_power) if lines.velocity_power else np.ones_like(omega)
     warp = 0.5 + 0.5 * np.square(wn[:, None] / omega)  # du/dw
-    spread = np.maximum(np.square(count) - 1.0, 0.0) * (lines.spacing**2 / 12) * np.square(warp)
+    spread = np.maximum(np.square(count) - 1.0, 0.0) * np.square(warp) * (lines.spacing**2 / 12)
     return Pools(
         seconds=lines.seconds,
         centre=lines.centre,
         count=count,
+        root_count=np.sqrt(count),
         power=power,
         half_omega=0.5 * omega,
         half_inverse=0.5 / omega,
         spread=spread,
-        upper=colour * (1.0 + tilt),
-        lower=colour * (1.0 - tilt),
+        upper=colour * place,
+        lower=colour * (1.0 - place),
     )
 
 
@@ -164,46 +179,44 @@ def _edges(lines: Lines, wn: Array, g: Array) -> NDArray[np.int64]:
 
 
 @dataclass(frozen=True, slots=True)
-class Shape:
-    """Coefficients of S = q D - r D^2 - sigma u D^2 and their derivatives; every array has shape (rows, 1)."""
+class Short:
+    """What exp(-g T) adds to S g in windows that are short against the memory; every array has shape (rows, 1).
 
-    g: Array
-    q: Array  # g + kappa
-    q_g: Array  # derivative by g
-    q_wn: Array  # derivative by wn
-    r: Array  # 2 g^2 kappa
-    r_g: Array
-    r_wn: Array
-    sigma: Array
+    S g = d + kappa' (d - 2 d^2) - sigma' x d^2 with x = u/g, d = 1/(1 + x^2), kappa' = kappa/g, sigma' = sigma/g.
+    """
+
+    kappa: Array  # kappa'
+    kappa_g: Array  # its derivative by ln g
+    kappa_wn: Array  # by wn/g
+    sigma: Array  # sigma'
     sigma_g: Array
     sigma_wn: Array
-    short: bool  # whether exp(-g T) matters for any row
+    matters: bool  # whether exp(-g T) changes anything in any row
 
     @classmethod
     def of(cls, wn: Array, g: Array, seconds: float, centre: float) -> Self:
         """Return the coefficients for wn and g of shape (rows, 1)."""
         decay = g * seconds
-        e = np.where(decay < _UNDERFLOW, np.exp(-decay), 0.0)
+        soon = decay < _UNDERFLOW
+        kappa = 1.0 / decay
+        if not np.any(soon):
+            return cls(kappa, -kappa, kappa, kappa, kappa, kappa, matters=False)
+        e = np.where(soon, np.exp(-decay), 0.0)
         psi = (centre - np.sqrt(np.maximum(wn * wn - g * g, 0.0))) * seconds
         ec, es = e * np.cos(psi), e * np.sin(psi)
-        kappa = (1.0 - ec) / seconds
         return cls(
-            g=g,
-            q=g + kappa,
-            q_g=1.0 + ec,
-            q_wn=-es,
-            r=2.0 * g * g * kappa,
-            r_g=4.0 * g * kappa + 2.0 * g * g * ec,
-            r_wn=-2.0 * g * g * es,
-            sigma=2.0 * g * es / seconds,
-            sigma_g=2.0 * es / seconds - 2.0 * g * es,
-            sigma_wn=-2.0 * g * ec,
-            short=bool(np.any(e > 0.0)),
+            kappa=kappa * (1.0 - ec),
+            kappa_g=-kappa * (1.0 - ec) + ec,
+            kappa_wn=-es,
+            sigma=2.0 * kappa * es,
+            sigma_g=-2.0 * es * (1.0 + kappa),
+            sigma_wn=-2.0 * ec,
+            matters=True,
         )
 
 
 def expected(theta: Array, pools: Pools) -> tuple[Array, Array]:
-    """Return the expected periodogram and the derivatives of its logarithm.
+    """Return the expected periodogram and its derivatives.
 
     Parameters
     ----------
@@ -215,97 +228,92 @@ def expected(theta: Array, pools: Pools) -> tuple[Array, Array]:
     Returns
     -------
     E : shape (rows, pools)
-    J : shape (rows, 5, pools)
-        Derivatives of ln E by wn/g (wn in units of the row's g), ln g, ln P, f, d.
+    J : shape (6, rows, pools)
+        Derivatives of E by wn/g (wn in units of the row's g), ln g, ln P, f, d; the last one is left blank.
     """
-    wn, g = theta[:, WN, None], np.exp(theta[:, LN_G, None])
-    shape = Shape.of(wn, g, pools.seconds, pools.centre)
-    u = pools.half_omega - pools.half_inverse * (wn * wn)
-    d = 1.0 / (u * u + g * g)
-    s, slope, s_g = _pooled_shape(shape, pools.spread, d)
-    jacobian = np.empty((theta.shape[0], 5, u.shape[1]))
-    ud = u * d
-    slope *= -2.0  # now dS/du = slope u D, and dS/dg has the same with g in the place of u
-    by_wn = slope * ud
-    s_g += slope * (g * d)
-    if shape.short:
-        s, by_wn, s_g = _short(shape, s, by_wn, s_g, u, d)
-    by_wn *= -2.0 * wn  # du/dwn = -wn/w
+    wn, logs = theta[:, WN, None], np.exp(theta[:, LN_G:, None])
+    g, level, lift = logs[:, 0], logs[:, 2], logs[:, 3]
+    height = 2.0 * logs[:, 1] / g
+    short = Short.of(wn, g, pools.seconds, pools.centre)
+    columns = np.empty((6, *pools.power.shape))
+    by_wn, by_g, signal, floor, by_tilt = columns[:5]
+    x = pools.half_omega * (1.0 / g)
+    x -= pools.half_inverse * (wn * (wn / g))
+    d = x * x
+    d += 1.0
+    np.divide(1.0, d, out=d)
+    _resonance(short, height, pools.spread * (height * (1.0 + short.kappa) / (g * g)), x, d, columns)
     by_wn *= pools.half_inverse
-    if shape.short:
-        by_wn += _by_phase(shape, u, d)
-    level = np.exp(theta[:, FLOOR, None])
-    lift = np.exp(theta[:, TILT, None])
-    twice_power = 2.0 * np.exp(theta[:, LN_P, None])
-    upper, lower = (level * lift) * pools.upper, (level / lift) * pools.lower
-    floor = upper + lower
-    signal = twice_power * s
-    total = signal + floor
-    inverse = 1.0 / total
-    weight = (twice_power * g) * inverse
-    np.multiply(by_wn, weight, out=jacobian[:, 0])
-    np.multiply(s_g, weight, out=jacobian[:, 1])
-    np.multiply(signal, inverse, out=jacobian[:, 2])
-    np.multiply(floor, inverse, out=jacobian[:, 3])
-    np.multiply(upper - lower, inverse, out=jacobian[:, 4])
-    return total, jacobian
+    by_wn *= -2.0 * wn  # dx/dwn = -wn/(w g)
+    if short.matters:
+        by_wn += height * (short.kappa_wn * (d - 2.0 * d * d) - short.sigma_wn * (x * d * d))
+    upper = (level * lift) * pools.upper
+    lower = (level / lift) * pools.lower
+    np.add(upper, lower, out=floor)
+    np.subtract(upper, lower, out=by_tilt)
+    return signal + floor, columns
 
 
-def _pooled_shape(shape: Shape, spread: Array, d: Array) -> tuple[Array, Array, Array]:
-    """Return S without sigma, dS/dD times D, and dS/dg at fixed D, the curvature inside a pool included.
+def _resonance(short: Short, height: Array, bend: Array, x: Array, d: Array, columns: Array) -> None:
+    """Fill in the resonance's part and its derivatives by x and by ln g.
 
-    With S'' = q (6 D^2 - 8 g^2 D^3) for the leading term: S = q D + (3 q v - r) D^2 - 4 g^2 q v D^3.
+    With q = height (1 + kappa'), r = 2 height kappa' and the curvature inside a pool, bend = q v / g^2, the part is
+    q d + (3 bend - r) d^2 - 4 bend d^3.
     """
-    g, q = shape.g, shape.q
-    bend = 3.0 * spread
-    cube = spread * d
-    cube *= 4.0 * g * g  # 4 g^2 v D
-    square = bend - cube
-    square *= q
-    square -= shape.r  # (3 q v - r) - 4 g^2 q v D
+    q, r = height * (1.0 + short.kappa), (2.0 * height) * short.kappa
+    by_x, by_g, signal = columns[:3]
+    curve = d * -4.0
+    curve += 3.0
+    curve *= bend  # bend (3 - 4 d)
+    square = curve - r
     square *= d
-    s = d * (q + square)
-    slope = q + 2.0 * square
-    slope -= (q * d) * cube
-    slope *= d
-    s_g = bend - cube
-    s_g *= shape.q_g
-    s_g -= cube * (2.0 * q / g)
-    s_g -= shape.r_g
-    s_g *= d
-    s_g += shape.q_g
-    s_g *= d
-    return s, slope, s_g
+    np.add(square, q, out=signal)
+    bend *= d
+    bend *= d
+    bend *= -4.0
+    by_x[:] = signal
+    by_x += square
+    by_x += bend  # derivative by d: q + 2 (3 bend - r) d - 12 bend d^2
+    signal *= d
+    by_x *= d
+    by_x *= d
+    by_x *= x
+    by_x *= -2.0
+    # by ln g: the height and x fall with g, the bend with its square
+    np.multiply(curve, -3.0 + short.kappa_g / (1.0 + short.kappa), out=by_g)
+    by_g -= height * (2.0 * short.kappa_g) - r
+    by_g *= d
+    by_g += height * short.kappa_g - q
+    by_g *= d
+    if short.matters:
+        _add_short(short, height, x, d, columns)
+    by_g -= x * by_x
 
 
-def _short(shape: Shape, s: Array, by_u: Array, s_g: Array, u: Array, d: Array) -> tuple[Array, Array, Array]:
-    """Add what exp(-g T) leaves in a window that is short against the memory."""
-    d2 = d * d
-    ud2 = u * d2
-    return (
-        s - shape.sigma * ud2,
-        by_u - shape.sigma * (d2 - 4.0 * u * ud2 * d),
-        s_g - shape.sigma_g * ud2 + shape.sigma * (4.0 * shape.g) * ud2 * d,
-    )
-
-
-def _by_phase(shape: Shape, u: Array, d: Array) -> Array:
-    """Return dS/dwn by way of psi."""
-    return np.asarray((shape.q_wn - (shape.r_wn + shape.sigma_wn * u) * d) * d, dtype=np.float64)
+def _add_short(short: Short, height: Array, x: Array, d: Array, columns: Array) -> None:
+    by_x, by_g, signal = columns[:3]
+    xd2 = x * d * d
+    signal -= (height * short.sigma) * xd2
+    by_x -= (height * short.sigma) * (d * d - 4.0 * x * xd2 * d)
+    by_g -= (height * (short.sigma_g - short.sigma)) * xd2
 
 
 def signal_and_floor(theta: Array, lines: Lines) -> tuple[Array, Array]:
     """Return the model's two parts on every line, shape (rows, lines) each."""
-    wn, g = theta[:, WN, None], np.exp(theta[:, LN_G, None])
-    shape = Shape.of(wn, g, lines.seconds, lines.centre)
-    u = 0.5 * lines.omega - (0.5 / lines.omega) * (wn * wn)
-    d = 1.0 / (u * u + g * g)
-    bracket = shape.q - shape.r * d
-    if shape.short:
-        bracket -= shape.sigma * (u * d)
-    signal = (2.0 * np.exp(theta[:, LN_P, None])) * d
-    signal *= bracket
-    tilt, colour = lines.tilt(lines.omega), 0.5 * lines.colour(lines.omega)
-    level, lift = np.exp(theta[:, FLOOR, None]), np.exp(theta[:, TILT, None])
-    floor = (level * lift) * (colour * (1.0 + tilt)) + (level / lift) * (colour * (1.0 - tilt))
+    wn, logs = theta[:, WN, None], np.exp(theta[:, LN_G:, None])
+    g, level, lift = logs[:, 0], logs[:, 2], logs[:, 3]
+    short = Short.of(wn, g, lines.seconds, lines.centre)
+    height = 2.0 * logs[:, 1] / g
+    x = lines.half_omega * (1.0 / g)
+    x -= lines.half_inverse * (wn * (wn / g))
+    d = x * x
+    d += 1.0
+    np.divide(1.0, d, out=d)
+    signal = d * (-2.0 * height * short.kappa)
+    signal += height * (1.0 + short.kappa)
+    if short.matters:
+        signal -= (height * short.sigma) * (x * d)
+    signal *= d
+    floor = (level * lift) * lines.upper
+    floor += (level / lift) * lines.lower
     return signal, floor
