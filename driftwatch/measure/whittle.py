@@ -40,6 +40,7 @@ WN, LN_G, LN_P, FLOOR, TILT = range(5)
 POOLS = 32
 """Pools of lines in a window: some nine to a half-power width."""
 
+_LEAST = 1e-12  # of the expected periodogram, whose mean over the band is about 1
 _UNDERFLOW = 37.0  # exp(-37) does not change 1 in double precision
 
 
@@ -71,6 +72,7 @@ class Lines:
     def seconds(self) -> float:
         """Length T of the window."""
         return self.length / self.rate_hz
+
 
 @lru_cache(maxsize=256)
 def lines_of(
@@ -236,7 +238,7 @@ def expected(theta: Array, pools: Pools) -> tuple[Array, Array]:
     height = 2.0 * logs[:, 1] / g
     short = Short.of(wn, g, pools.seconds, pools.centre)
     columns = np.empty((6, *pools.power.shape))
-    by_wn, by_g, signal, floor, by_tilt = columns[:5]
+    by_wn, _, signal, floor, by_tilt = columns[:5]
     x = pools.half_omega * (1.0 / g)
     x -= pools.half_inverse * (wn * (wn / g))
     d = x * x
@@ -251,7 +253,8 @@ def expected(theta: Array, pools: Pools) -> tuple[Array, Array]:
     lower = (level / lift) * pools.lower
     np.add(upper, lower, out=floor)
     np.subtract(upper, lower, out=by_tilt)
-    return signal + floor, columns
+    # pools much wider than the resonance, as a search may meet them, drive the curvature's term below nothing
+    return np.maximum(signal + floor, _LEAST), columns
 
 
 def _resonance(short: Short, height: Array, bend: Array, x: Array, d: Array, columns: Array) -> None:
