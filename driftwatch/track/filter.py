@@ -10,7 +10,6 @@ each measurement.
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
@@ -203,9 +202,3 @@ def loosen(state: State, shift_f: float, shift_q: float, over_s: float) -> State
         p_rr=state.p_rr + (shift_f / over_s) ** 2,
         p_qq=state.p_qq + shift_q * shift_q,
     )
-
-
-def is_sound(state: State) -> bool:
-    """Say whether a state holds numbers and a covariance (used by tests and by the tracker's own guard)."""
-    minor = state.p_ff * state.p_qq - state.p_fq * state.p_fq
-    return math.isfinite(state.ln_f + state.rate + state.ln_q) and state.p_ff > 0.0 and state.p_rr > 0.0 and minor > 0.0

@@ -7,12 +7,13 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
+import pytest
 from driftwatch.records import NS, Measurement, Method
 
 Truth = Callable[[float], float]
 
 
-def measurement(
+def make_measurement(
     f: float | None,
     q: float | None,
     *,
@@ -61,8 +62,21 @@ class Scatter:
     follows_q: bool = True  # the stated variance of ln q grows with the measured q
 
 
-def windows(seed: int, count: int, frequency: Truth, q: Truth, scatter: Scatter) -> Iterator[tuple[int, Measurement]]:
+@pytest.fixture(scope="session")
+def measurement() -> Callable[..., Measurement]:
+    return make_measurement
+
+
+@pytest.fixture(scope="session")
+def windows() -> Callable[..., Iterator[tuple[int, Measurement]]]:
+    return scattered_windows
+
+
+def scattered_windows(
+    seed: int, count: int, frequency: Truth, q: Truth, **how: float
+) -> Iterator[tuple[int, Measurement]]:
     """Yield (end in ns, measurement): each window averages the truth and independent errors of its steps."""
+    scatter = Scatter(**how)  # type: ignore[arg-type]
     m = scatter.window_steps
     rng = np.random.default_rng(seed)
     normal = rng.standard_normal((count + m - 1, 2))
@@ -79,7 +93,7 @@ def windows(seed: int, count: int, frequency: Truth, q: Truth, scatter: Scatter)
         std_q = scatter.std_q * (math.sqrt(measured_q / true_q) if scatter.follows_q else 1.0)
         yield (
             round(last * scatter.step_s * NS),
-            measurement(
+            make_measurement(
                 math.exp(float(np.mean(ln_f[k:last]))),
                 measured_q,
                 std_f=scatter.std_f,
