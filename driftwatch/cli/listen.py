@@ -59,7 +59,8 @@ def _object(endpoint: str, raw: bytes) -> dict[str, Any]:
         message = None
     if not isinstance(message, dict) or not message.keys() >= {"kind", "run", "sequence", "time"}:
         raise click.ClickException(
-            f"{endpoint} sent {raw[:60]!r}, which is no record; expected a daemon of driftwatch there; check the endpoint"
+            f"{endpoint} sent {raw[:60]!r}, which is no record; "
+            "expected a daemon of driftwatch there; check the endpoint"
         )
     return message
 

@@ -17,6 +17,9 @@ if TYPE_CHECKING:
 
 DEFAULT_STORE = "driftwatch.db"
 
+UNCUT = ("run", "time", "from", "origin")
+"""Heads of columns that are never wrapped."""
+
 _Function = TypeVar("_Function", bound="Callable[..., Any]")
 
 
@@ -119,9 +122,9 @@ def _print_ruled(heads: Sequence[str], rows: Sequence[Sequence[str]]) -> None:
     from rich.table import Table
     from rich.text import Text
 
-    table = Table(box=box.SIMPLE_HEAD)
-    for head in heads:
-        table.add_column(head)
+    table = Table(box=box.SIMPLE_HEAD, padding=(0, 1, 0, 0), pad_edge=False)
+    for head in heads:  # names may wrap on a narrow terminal; a moment cut short tells nothing
+        table.add_column(head, no_wrap=head in UNCUT, overflow="fold")
     for row in rows:
         table.add_row(*map(Text, row))
     Console().print(table)

@@ -14,7 +14,7 @@ from driftwatch.records import time_text
 if TYPE_CHECKING:
     from driftwatch.store.queries import RunSummary
 
-_HEADS = ["run", "from", "origin", "duration", "measurements", "track points", "alerts", "standing", "end"]
+_HEADS = ["run", "from", "origin", "duration", "readings", "tracks", "alerts", "standing", "end"]
 
 
 @click.command("runs")
@@ -23,7 +23,8 @@ _HEADS = ["run", "from", "origin", "duration", "measurements", "track points", "
 def command(store: str | None, config: str | None, as_json: bool) -> None:
     """Print the runs in a store, in the order in which they were written, with the alerts that stand.
 
-    Times are stream time. A run without an end still goes on, or was cut off.
+    Times are stream time. A run without an end still goes on, or was cut off. The table shows the begin of each run's
+    UUID, which --run of other commands takes; --json shows all of it.
 
     Example: driftwatch runs --config line3.toml
     """
@@ -41,7 +42,7 @@ def _row(run: RunSummary) -> list[str]:
     counts = [str(run.counts.get(kind, 0)) for kind in ("measurement", "track", "alert")]
     standing = ", ".join(f"{alert.alert} {alert.state}" for alert in run.standing) or "none"
     end = "none" if run.end is None else (run.end.reason or "ended")
-    return [run.run, moment(run.first_ns), run.origin, span(run.first_ns, run.last_ns), *counts, standing, end]
+    return [run.run[:8], moment(run.first_ns), run.origin, span(run.first_ns, run.last_ns), *counts, standing, end]
 
 
 def _summary(run: RunSummary) -> dict[str, Any]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 import subprocess
 import sys
 from collections.abc import Callable
@@ -11,7 +12,7 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner, Result
 from driftwatch.bus.wire import encode
-from driftwatch.cli import main
+from driftwatch.cli import looking, main
 from driftwatch.records import Envelope, Method, Phase, Track, TrackStatus, fields_of
 from driftwatch.store.writer import Writer
 
@@ -117,7 +118,13 @@ def test_runs_tell_origin_length_counts_standing_alerts_and_end(stored: list[Env
     assert [one["alert"] for one in found["standing"]] == ["drive end/rocking/warning"]  # type: ignore[attr-defined]
     head, line = _call("runs").stdout.splitlines()
     assert head.startswith("run ")
-    for part in (stored[0].run, "replay", "5 s", "drive end/rocking/warning unacknowledged", "end of the recordings"):
+    for part in (
+        stored[0].run[:8],
+        "replay",
+        "5 s",
+        "drive end/rocking/warning unacknowledged",
+        "end of the recordings",
+    ):
         assert part in line
 
 
@@ -186,3 +193,17 @@ def test_help_ends_its_text_with_an_example(name: str) -> None:
     result = _call(name, "--help")
     assert result.exit_code == 0
     assert f"Example: driftwatch {name}" in result.stdout
+
+
+@pytest.mark.parametrize("command", ["readings", "runs"])
+def test_a_table_on_a_narrow_terminal_keeps_every_figure(
+    stored: list[Envelope], command: str, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setenv("COLUMNS", "80")
+    monkeypatch.setattr(looking.sys.stdout, "isatty", lambda: True)
+    with pytest.raises(SystemExit):
+        main([command])
+    shown = re.sub(r"\x1b\[\d*m", "", capsys.readouterr().out)  # without bold
+    assert "…" not in shown
+    assert f"2026-01-01T00:00:0{'2' if command == 'readings' else '1'}.000Z" in shown
+    assert max(map(len, shown.splitlines())) <= 80
