@@ -86,6 +86,12 @@ class Life:
     off: Timer = IDLE
 
 
+_EVENT_OF = {Finding.VIOLATED: Event.VIOLATED, Finding.RETURNED: Event.RETURNED}
+
+UNKNOWN = Life(determinate=False)
+"""Where an alert begins of which nothing is known before the first judgement."""
+
+
 def step(life: Life, finding: Finding, time_ns: int, delays: Delays) -> tuple[Life, Event | None]:
     """Return the life after one finding, and the event that it caused.
 
@@ -103,9 +109,6 @@ def step(life: Life, finding: Finding, time_ns: int, delays: Delays) -> tuple[Li
     return _timed(life, event, time_ns, delays)
 
 
-_EVENT_OF = {Finding.VIOLATED: Event.VIOLATED, Finding.RETURNED: Event.RETURNED}
-
-
 def _timed(life: Life, event: Event, time_ns: int, delays: Delays) -> tuple[Life, Event | None]:
     """Time an event that would move the alert; the timer of the other one starts again from zero."""
     if event is Event.VIOLATED:
@@ -115,7 +118,3 @@ def _timed(life: Life, event: Event, time_ns: int, delays: Delays) -> tuple[Life
         on, off = IDLE, life.off.advance(time_ns)
         due = off.elapsed_ns >= delays.off_ns
     return Life(ROWS[life.state, event] if due else life.state, True, on, off), event if due else None
-
-
-UNKNOWN = Life(determinate=False)
-"""Where an alert begins of which nothing is known before the first judgement."""

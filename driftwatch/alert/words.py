@@ -30,9 +30,9 @@ def band_words(event: Event | None, held_s: float, band: Band, figure: Figure, j
     value = f"{name} {figure.value:.6g}{unit}"
     if event is Event.RETURNED:
         by = f" by {band.deadband:.6g}{unit}" if band.deadband else ""
-        return f"{value} {limits_text(band)}{by} with probability {_chance(judgement.inside)} for {held_s:.6g} s"
+        return f"{value} {limits_text(band)}{by} with probability {_chance(judgement.inside)}{_held(held_s)}"
     limit = band.low if judgement.side == "below" else band.high
-    return f"{value} {judgement.side} {limit:.7g}{unit} with probability {_chance(judgement.beyond)} for {held_s:.6g} s"
+    return f"{value} {judgement.side} {limit:.7g}{unit} with probability {_chance(judgement.beyond)}{_held(held_s)}"
 
 
 def track_words(track: Track) -> str:
@@ -42,6 +42,10 @@ def track_words(track: Track) -> str:
 
 def _unit(quantity: str) -> str:
     return "" if quantity == "q" else " Hz"
+
+
+def _held(seconds: float) -> str:
+    return f" for {seconds:.6g} s" if seconds > 0.0 else ""
 
 
 def _chance(probability: float) -> str:
