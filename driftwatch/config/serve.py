@@ -39,6 +39,9 @@ def unserved(config: Configuration, *, live: bool = True) -> list[Problem]:
 def _sources(config: Configuration) -> Iterator[Problem]:
     if not config.source:
         yield Problem("source", "none", "at least one [[source]] to run live", "add one, or replay recordings instead")
+    if len(config.source) > 1:
+        came = f"{len(config.source)}, more than one {NOT_SERVED}"
+        yield Problem("source", came, "one [[source]] to run live", "start one run for each, with a file of its own")
     for index, source in enumerate(config.source):
         if source.kind not in _SERVED_KINDS:
             key = f'source[{index + 1}] "{source.name}" . kind'

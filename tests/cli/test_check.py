@@ -1,0 +1,149 @@
+"""`check` explains a valid configuration, and names everything wrong with any other; it starts and writes nothing."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+from typing import Any
+
+import pytest
+from click.testing import CliRunner, Result
+from driftwatch.cli import main
+
+CONFIGS = Path(__file__).parents[2] / "config"
+
+
+def check(*arguments: str | Path) -> Result:
+    return CliRunner().invoke(main, ["check", *map(str, arguments)], catch_exceptions=False)
+
+
+def written(tmp_path: Path, text: str) -> Path:
+    file = tmp_path / "a.toml"
+    file.write_text(text, encoding="utf-8")
+    return file
+
+
+SOUND = """schema = 1
+[[channel]]
+name = "a.b"
+[[mode]]
+name = "m"
+channel = "a.b"
+search_hz = [820, 980]
+"""
+
+
+@pytest.mark.parametrize("name", ["demo", "bearing-housing", "resonator-in-chamber", "post-mortem"])
+def test_a_ready_configuration_is_explained(name: str) -> None:
+    done = check(CONFIGS / f"{name}.toml")
+    assert done.exit_code == 0
+    assert done.stderr == ""
+    for part in (
+        "is valid",
+        "Sources",
+        "Channels",
+        "Modes",
+        "tells at best",
+        "Bands",
+        "Where it goes",
+        "no protective",
+    ):
+        assert part in done.stdout
+
+
+def test_the_explanation_names_windows_bands_and_where_the_rows_go() -> None:
+    text = check(CONFIGS / "demo.toml").stdout
+    for part in (
+        "8192 samples/s, 2 inputs",
+        "98.1 m/s2",
+        "340 to 480",
+        "32768",
+        "frequency 408 to 425 Hz",
+        "0.95 sure for 3 s",
+        "inside by 1 Hz for 10 s",
+        "Q over 75",
+        ".state/demo.db, kept 7 days",
+        "tcp://127.0.0.1:5571",
+    ):
+        assert part in text, part
+
+
+def test_no_line_of_a_table_is_wider_than_a_page_where_there_is_no_terminal() -> None:
+    lines = check(CONFIGS / "bearing-housing.toml").stdout.splitlines()
+    assert max(len(line.rstrip()) for line in lines if "│" in line or "─" in line) <= 120
+
+
+def test_json_is_one_object_with_the_same_figures() -> None:
+    done = check("--json", CONFIGS / "demo.toml")
+    (line,) = done.stdout.splitlines()
+    said: dict[str, Any] = json.loads(line)
+    assert (done.exit_code, done.stderr) == (0, "")
+    assert (said["kind"], said["schema"], said["station"]) == ("check", 1, "washing plant infeed")
+    assert [(mode["channel"], mode["mode"]) for mode in said["modes"]] == [
+        ("drive end", "housing rocking"),
+        ("drive end", "grate bar"),
+        ("tail end", "cover plate"),
+    ]
+    first = said["modes"][0]
+    assert (first["window_s"], first["window_samples"], first["step_samples"]) == (4.0, 32768, 8192)
+    assert first["bands"][0]["priority"] == "high"
+    assert all(one["frequency_std_hz"] > 0 and one["q_std"] > 0 for one in first["resolutions"])
+    assert len(said["config_sha256"]) == 64
+
+
+def test_json_of_a_file_for_replays_has_null_for_what_the_recording_knows(tmp_path: Path) -> None:
+    said = json.loads(check("--json", written(tmp_path, SOUND)).stdout)
+    assert (said["sources"], said["channels"][0]["unit"]) == ([], "FS")
+    assert said["modes"][0]["window_samples"] is None
+    assert said["modes"][0]["latency_s"] is None
+
+
+WRONG = SOUND.replace("search_hz = [820, 980]", "search_hz = [980, 820]\nwindow = 4") + "[sotre]\n"
+
+
+def test_everything_wrong_is_listed_a_line_each_and_the_exit_status_is_2(tmp_path: Path) -> None:
+    done = check(written(tmp_path, WRONG))
+    assert (done.exit_code, done.stdout) == (2, "")
+    lines = done.stderr.splitlines()
+    assert len(lines) == 3
+    assert all(line.startswith("Error: ") for line in lines)
+    for part in ('mode[1] "m" . search_hz: got [980, 820]', "did you mean window_s?", "did you mean store?"):
+        assert part in done.stderr
+
+
+def test_json_of_a_wrong_file_is_one_object_a_problem(tmp_path: Path) -> None:
+    done = check("--json", written(tmp_path, WRONG))
+    problems = [json.loads(line) for line in done.stdout.splitlines()]
+    assert done.exit_code == 2
+    assert [problem["kind"] for problem in problems] == ["problem"] * 3
+    assert {key for problem in problems for key in problem} == {"kind", "key", "came", "expected", "remedy"}
+
+
+def test_what_is_not_served_is_refused_and_a_sound_card_only_remarked(tmp_path: Path) -> None:
+    done = check(written(tmp_path, SOUND.replace("search_hz", 'methods = ["halfpower"]\nsearch_hz')))
+    assert done.exit_code == 2
+    assert "not served by this version" in done.stderr
+    done = check(written(tmp_path, SOUND + '[[source]]\nname = "card"\nkind = "soundcard"\n'))
+    assert done.exit_code == 0
+    assert "Worth a second look" in done.stdout
+    assert '"soundcard", not served by this version' in done.stdout
+
+
+def test_a_missing_file_is_one_line_and_exit_status_2(tmp_path: Path) -> None:
+    done = check(tmp_path / "no.toml")
+    assert done.exit_code == 2
+    assert (
+        done.stderr
+        == f"Error: {tmp_path}/no.toml: got no such file; expected a configuration in TOML; check the path\n"
+    )
+
+
+def test_checking_writes_nothing(tmp_path: Path) -> None:
+    file = written(tmp_path, SOUND)
+    check(file)
+    assert list(tmp_path.iterdir()) == [file]
+
+
+def test_the_help_ends_with_an_example() -> None:
+    text = check("--help").stdout
+    assert "Example: driftwatch check config/demo.toml" in text
