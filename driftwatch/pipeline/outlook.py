@@ -183,7 +183,8 @@ def remarks(config: Configuration) -> Iterator[str]:
             yield f'channel "{channel.name}": no mode is followed on it'
         yield from _sensor_remarks(config, channel)
         yield from _overlaps(config, channel)
-    for mode in config.mode:
+    for mode, outlook in zip(config.mode, outlooks(config), strict=True):
+        yield from _late_remark(mode, outlook)
         yield from _band_remarks(mode)
 
 
@@ -206,6 +207,16 @@ def _overlaps(config: Configuration, channel: ChannelConfig) -> Iterator[str]:
                 f'modes "{lower.name}" and "{upper.name}" of "{channel.name}": their search bands overlap, '
                 "so both may follow the same resonance"
             )
+
+
+def _late_remark(mode: ModeConfig, outlook: ModeOutlook) -> Iterator[str]:
+    """A band far narrower than the rate needs long blocks: they cost time and memory."""
+    if outlook.latency_s is not None and outlook.latency_s > mode.window_s:
+        yield (
+            f'mode "{mode.name}" of "{mode.channel}": a search band of {mode.search_hz.width:g} Hz is so narrow for '
+            f"{outlook.rate_hz} samples a second that figures come {outlook.latency_s:.0f} s late; widen it or sample "
+            "slower"
+        )
 
 
 def _band_remarks(mode: ModeConfig) -> Iterator[str]:

@@ -124,3 +124,10 @@ def test_what_is_worth_a_second_look_is_said(old: str, new: str, words: str) -> 
 def test_a_mode_without_bands_is_said_to_raise_no_alert() -> None:
     (line,) = remarks(loads(BASE.split("[[mode.band]]")[0]))
     assert line == 'mode "m" of "a": no band, so it is followed and raises no alert'
+
+
+def test_a_search_band_too_narrow_for_the_rate_is_said_to_make_figures_late() -> None:
+    text = BASE.split("[[mode.band]]")[0].replace("[820, 980]", "[900, 900.5]")
+    text = text.replace("rate_hz = 8192", "rate_hz = 48000").replace("window_s = 4.0\nstep_s = 1.0", "window_s = 64.0")
+    late, _ = remarks(loads(text))
+    assert "a search band of 0.5 Hz is so narrow for 48000 samples a second that figures come" in late
