@@ -1,7 +1,8 @@
 """What a configuration may expect: its real windows, its latency, and what the windows can resolve at best.
 
-The bounds are those of `driftwatch.measure.limits`, for a resonance as the configuration suggests it: at the middle
-of its frequency band, with the Qs that its bands name, or else with a few that its windows can tell.
+The bounds are Au's law for random response over a known weak floor and the Cramer-Rao bound of a decay, for a resonance
+as the configuration suggests it: in the middle of its frequency band, with the Qs that its bands name, or else with a
+few that its windows can tell.
 """
 
 from __future__ import annotations
@@ -13,6 +14,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from driftwatch.measure.ambient import NARROWEST, WIDEST
+from driftwatch.measure.limits import ambient_law
 from driftwatch.measure.limits_decay import full_decay, record_factor
 from driftwatch.pipeline.channel import zoom_of
 from driftwatch.pipeline.mode_line import ModeLine
@@ -128,15 +130,9 @@ def _resolutions(mode: ModeConfig) -> Iterator[Resolution]:
 
 
 def _ambient(frequency_hz: float, q: float, window_s: float, width_hz: float) -> tuple[float, float]:
-    """Return the smallest standard deviations of ln fn and ln Q (Au 2014), the mode in the middle of its band.
-
-    cov(f) = sqrt(zeta / (2 pi N B_f)), cov(Q) = sqrt(Q / (pi N B_z)), N = fn T periods, for a band fn (1 +- k zeta)
-    """
-    k = width_hz * q / frequency_hz
-    periods = frequency_hz * window_s
-    b_f = 2.0 / math.pi * (math.atan(k) - k / (k * k + 1.0))
-    b_z = 2.0 / math.pi * (math.atan(k) + k / (k * k + 1.0) - 2.0 * math.atan(k) ** 2 / k)
-    return math.sqrt(0.5 / q / (2.0 * math.pi * periods * b_f)), math.sqrt(q / (math.pi * periods * b_z))
+    """Return the smallest standard deviations of ln fn and ln Q, the mode in the middle of its search band."""
+    law = ambient_law(frequency_hz, q, window_s, kappa=width_hz * q / frequency_hz)
+    return law.ln_frequency_std, law.ln_q_std
 
 
 def _decay(frequency_hz: float, q: float, window_s: float, width_hz: float) -> tuple[float, float]:
