@@ -109,7 +109,8 @@ class Reader:
         try:
             with self._engine.begin() as connection:
                 keys = {row.id: _key(row) for row in connection.execute(sa.select(HEADER))}
-                rows = connection.execution_options(yield_per=_CHUNK).execute(_selected(kind, wanted or Wanted()))
+                selected = _selected(kind, wanted or Wanted(), keys)
+                rows = connection.execution_options(yield_per=_CHUNK).execute(selected)
                 for row in rows:
                     yield form.envelope(keys[row[0]], row)
         except sa.exc.DBAPIError as error:
@@ -215,9 +216,9 @@ def _summary(
     return RunSummary(run, station, origin, quality, first, last, ends[-1] if ends else None, counts, standing)
 
 
-def _selected(kind: str, wanted: Wanted) -> sa.Select[Any]:
+def _selected(kind: str, wanted: Wanted, keys: dict[int, HeaderKey]) -> sa.Select[Any]:
     table = TABLES[kind]
-    narrow = sa.select(table).where(*_conditions(table, wanted))
+    narrow = sa.select(table).where(*_conditions(table, wanted, keys))
     order = (table.c.time_ns, table.c.header, table.c.sequence)
     if wanted.limit is None:
         return narrow.order_by(*order)
@@ -227,10 +228,12 @@ def _selected(kind: str, wanted: Wanted) -> sa.Select[Any]:
     return sa.select(latest).order_by(latest.c.time_ns, latest.c.header, latest.c.sequence)
 
 
-def _conditions(table: sa.Table, wanted: Wanted) -> list[sa.ColumnElement[bool]]:
+def _conditions(table: sa.Table, wanted: Wanted, keys: dict[int, HeaderKey]) -> list[sa.ColumnElement[bool]]:
     found: list[sa.ColumnElement[bool]] = []
     if wanted.run is not None:
-        found.append(table.c.header.in_(sa.select(HEADER.c.id).where(HEADER.c.run == wanted.run)))
+        # Nearly always one number: as an equality it lets the index give the rows in the order of time.
+        headers = [number for number, key in keys.items() if key[0] == wanted.run]
+        found.append(table.c.header == headers[0] if len(headers) == 1 else table.c.header.in_(headers))
     found.extend(
         table.c[name] == value
         for name, value in (("channel", wanted.channel), ("mode", wanted.mode), ("method", wanted.method))

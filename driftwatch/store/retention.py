@@ -23,7 +23,7 @@ if TYPE_CHECKING:
     from driftwatch.store.writer import Writer
 
 STEP_ROWS = 1000
-"""Rows that one step takes away at most: a few milliseconds."""
+"""Rows that one step takes away at most: about ten milliseconds."""
 
 _DAY_NS = 86_400 * NS
 _FRAME = ("run", "alert")
@@ -70,7 +70,9 @@ def prune(writer: Writer, keep_days: float, now_ns: int, rows: int = STEP_ROWS) 
 def _remove_old(connection: Connection, kind: str, cut_ns: int, rows: int) -> int:
     table = TABLES[kind]
     old_runs = sa.select(HEADER.c.id).where(HEADER.c.opened_ns < cut_ns)
-    old = sa.select(table.c.header, table.c.sequence).where(table.c.time_ns < cut_ns, table.c.header.in_(old_runs))
+    # The sum keeps the planner from reading whole runs by their number: the index by time finds the old rows at once.
+    of_old_run = (table.c.header + 0).in_(old_runs)
+    old = sa.select(table.c.header, table.c.sequence).where(table.c.time_ns < cut_ns, of_old_run)
     if kind == "alert":
         old = old.where(~_last_word(table))
     chosen = old.order_by(table.c.time_ns).limit(rows)
