@@ -8,11 +8,12 @@ from driftwatch.config.errors import Problem
 from driftwatch.config.keys import place
 from driftwatch.config.models import Configuration
 from driftwatch.config.modes import ModeConfig
-from driftwatch.records import Method
+from driftwatch.records import Condition, Method
 
 NOT_SERVED = "not served by this version"
 
 _SERVED_METHODS = (Method.AMBIENT, Method.RINGDOWN)
+_SERVED_CONDITIONS = (Condition.NO_DATA, Condition.LOST)
 _SERVED_KINDS = ("simulated", "recording")
 
 
@@ -55,9 +56,16 @@ def _regimes(config: Configuration) -> Iterator[Problem]:
 
 
 def _alerts(config: Configuration) -> Iterator[Problem]:
+    served = " or ".join(condition.value for condition in _SERVED_CONDITIONS)
+    seen: set[Condition] = set()
     for index, alert in enumerate(config.alert):
         key = f'alert[{index + 1}] "{alert.name}" . condition'
-        yield Problem(key, _refused(alert.condition.value), "bands alone to raise alerts", "take it out")
+        if alert.condition not in _SERVED_CONDITIONS:
+            yield Problem(key, _refused(alert.condition.value), served, "take it out")
+        elif alert.condition in seen:
+            came = f'"{alert.condition.value}" a second time, {NOT_SERVED}'
+            yield Problem(key, came, "each condition once", "take one of them out")
+        seen.add(alert.condition)
 
 
 def _methods(mode: ModeConfig, where: str) -> Iterator[Problem]:

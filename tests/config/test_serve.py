@@ -32,7 +32,8 @@ def found(config: Configuration, *, live: bool = True) -> list[tuple[str, str]]:
 
 
 def test_what_is_served_has_no_problem() -> None:
-    config = loads(BASE)
+    named = '[[alert]]\nname = "n"\ncondition = "no_data"\n[[alert]]\nname = "l"\ncondition = "lost"\n'
+    config = loads(BASE + named)
     assert unserved(config) == unserved(config, live=False) == []
 
 
@@ -48,7 +49,13 @@ UNSERVED = [
         'regime[1] "r"',
         "a regime",
     ),
-    ("[[mode]]", '[[alert]]\nname = "n"\ncondition = "no_data"\n[[mode]]', 'alert[1] "n" . condition', '"no_data"'),
+    ("[[mode]]", '[[alert]]\nname = "n"\ncondition = "rate"\n[[mode]]', 'alert[1] "n" . condition', '"rate"'),
+    (
+        "[[mode]]",
+        '[[alert]]\nname = "n"\ncondition = "lost"\n[[alert]]\nname = "n2"\ncondition = "lost"\n[[mode]]',
+        'alert[2] "n2" . condition',
+        '"lost" a second time',
+    ),
 ]
 
 
