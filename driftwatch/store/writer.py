@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from functools import cache
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -26,8 +27,11 @@ if TYPE_CHECKING:
 
     from driftwatch.records import Envelope
 
-_INSERTS = {kind: str(sa.insert(table).compile(dialect=sqlite.dialect())) for kind, table in TABLES.items()}
-"""The text of each insert, prepared: a row of 24 columns through the expression language costs more than the row."""
+
+@cache
+def _insert(kind: str) -> str:
+    """Return the text of a kind's insert, prepared: rows go to the driver as they are."""
+    return str(sa.insert(TABLES[kind]).compile(dialect=sqlite.dialect()))
 
 
 class Writer:
@@ -96,7 +100,7 @@ class Writer:
             synchronous=any(isinstance(envelope.body, Alert) for envelope in envelopes)
         ) as connection:
             for kind, rows in self._rows(connection, envelopes, headers).items():
-                connection.exec_driver_sql(_INSERTS[kind], rows)
+                connection.exec_driver_sql(_insert(kind), rows)
         self._headers = headers
 
     def _rows(
