@@ -17,12 +17,16 @@ from driftwatch.config.values import is_number
 
 Document = Mapping[str, Any]
 
+LOST_NAME = "lost"
+"""Name of the alert of a lost mode where the file gives it none."""
+
 
 def cross_problems(document: Document) -> Iterator[Problem]:
     """Yield what is wrong between the tables of a document."""
     yield from _something_to_follow(document)
     for loc, items in _named_arrays(document):
         yield from _same_names(document, loc, items)
+    yield from _taken_names(document)
     yield from _channel_problems(document)
     yield from _mode_problems(document)
     yield from _regime_problems(document)
@@ -106,6 +110,18 @@ def _same_names(document: Document, loc: Loc, items: Sequence[tuple[int, Documen
                 f"a name that differs from {place(document, (*loc, earlier))}, without regard to case",
                 "rename one of them",
             )
+
+
+def _taken_names(document: Document) -> Iterator[Problem]:
+    """Yield the bands named like the alert of a lost mode: both would be channel/mode/name."""
+    named = [_text(alert, "name") for _, alert in _tables(document, "alert") if alert.get("condition") == "lost"]
+    taken = {name.casefold() for name in named or [LOST_NAME] if name}
+    for index, mode in _tables(document, "mode"):
+        for number, band in _tables(mode, "band"):
+            name = _text(band, "name")
+            if name is not None and name.casefold() in taken:
+                key = place(document, ("mode", index, "band", number, "name"))
+                yield Problem(key, f'"{name}"', "another name than that of the alert of a lost mode", "rename the band")
 
 
 def _unknown_name(key: str, name: str, known: list[str], what: str) -> Iterator[Problem]:

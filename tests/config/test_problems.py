@@ -159,6 +159,7 @@ ONE_WRONG_VALUE = [
     ("band", "deadband = -1", f"{B} . deadband", ["at least 0"]),
     ("band", "deadband = 12.5", f"{B} . deadband", ["got 12.5", "less than half the band's width, 12.5"]),
     ("band", 'priority = "top"', f"{B} . priority", ['"top"', "'low', 'medium', 'high' or 'urgent'"]),
+    ("band", 'name = "Lost"', 'mode[1] "m" . band[1] "Lost" . name', ["another name", "lost mode"]),
     ("alert", 'condition = "band"', 'alert[1] "n" . condition', ['"band"', "no band", "[[mode.band]]"]),
     ("alert", 'condition = "gloom"', 'alert[1] "n" . condition', ['"gloom"', "'no_data'"]),
     ("store", 'url = "postgres://x/y"', "store . url", ['"postgres://x/y"', "sqlite:/// and the path of a file"]),
