@@ -349,6 +349,16 @@ def test_a_header_promises_the_frames_that_were_written(tmp_path: Path, name: st
     assert (header.frames, header.surplus) == (1234, 0)
 
 
+def test_a_chunk_of_odd_length_before_the_samples_is_stepped_over_with_its_padding(tmp_path: Path) -> None:
+    path = write(tmp_path / "a.wav", noise(1000), "PCM_16")
+    content = path.read_bytes()
+    at = content.index(b"data")
+    path.write_bytes(content[:at] + struct.pack("<4sI3sx", b"note", 3, b"odd") + content[at:])
+    header = promised_frames(path)
+    assert header is not None
+    assert header.frames == 1000
+
+
 def test_other_formats_have_no_header_of_chunks(tmp_path: Path) -> None:
     assert promised_frames(write(tmp_path / "a.flac", noise(100), "PCM_16")) is None
 

@@ -143,6 +143,17 @@ def test_the_samples_have_the_closed_forms_spectrum(quantity: str) -> None:
     assert stats.gamma.ppf(tail, shape) < total < stats.gamma.isf(tail, shape)
 
 
+def test_acceleration_is_the_derivative_of_the_same_force_s_velocity_stretch_after_stretch() -> None:
+    """Over wn, so that its level is the velocity's: the velocity of the run-in and of every stretch, differentiated."""
+    stretches = [256, 512, 256, 1024]
+    motions = [Motion(flat(900.0), flat(40.0), flat(0.3), quantity) for quantity in ("velocity", "acceleration")]
+    velocity, acceleration = (Resonator(np.random.default_rng(0), RATE, motion) for motion in motions)
+    v = np.concatenate([velocity.take(n) for n in (TAPS - 1, *stretches)])
+    a = np.concatenate([acceleration.take(n) for n in stretches])
+    wn = Pole.from_q(900.0, 40.0).angular_frequency_rad_s
+    np.testing.assert_allclose(a, np.correlate(v, differentiator(), "valid") * RATE / wn, rtol=0, atol=1e-12)
+
+
 @pytest.mark.parametrize("quantity", ["displacement", "velocity"])
 def test_the_start_is_stationary(quantity: str) -> None:
     """First samples over 2000 seeds: a chi-square variable, false-alarm probability 1e-6 in all."""
