@@ -564,7 +564,7 @@ class FieldInfo:
     name: str  # in the dataclass
     edge_name: str  # on the wire: without the ``_ns`` of a time
     type: type  # float, int, str, bool, tuple or an enumeration
-    item: type | None  # what a tuple holds
+    item: typing.Any  # what a tuple holds: a type, or None
     optional: bool  # may be None
     is_time: bool  # integer nanoseconds here, RFC 3339 on the wire
 

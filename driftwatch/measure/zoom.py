@@ -100,6 +100,8 @@ class Zoom:
         for request in requests:
             _check(rate_hz, request)
         self.rate_hz = rate_hz
+        self.hop: int
+        self.edge: int
         widths = [_edge_widths(rate_hz, request) for request in requests]
         decimations = _decimations(rate_hz, requests, widths)
         unit = math.lcm(*decimations)

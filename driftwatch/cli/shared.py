@@ -1,0 +1,87 @@
+"""What several commands do alike: read a configuration, print records, turn known errors into one line."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from typing import TYPE_CHECKING, NoReturn
+
+import click
+
+if TYPE_CHECKING:
+    from pathlib import Path
+
+    from driftwatch.config import Configuration, Problem
+    from driftwatch.records import Envelope
+
+CAUTION = (
+    "driftwatch advises; it is no protective system. Where a failure can hurt someone a qualified person decides, "
+    "and trips and guards work without it."
+)
+
+
+def refuse(lines: Sequence[object]) -> NoReturn:
+    """Print what is wrong, a line each, and leave with exit status 2: nothing was started."""
+    for line in lines:
+        click.echo(f"Error: {line}", err=True)
+    sys.exit(2)
+
+
+def load_served(path: str | Path, *, live: bool) -> Configuration:
+    """Return a configuration that this version can serve; leave with every problem otherwise."""
+    from driftwatch.config import ConfigError, load, unserved
+
+    try:
+        config = load(path)
+    except ConfigError as error:
+        refuse(error.problems)
+    problems = unserved(config, live=live)
+    if problems:
+        refuse(problems)
+    return config
+
+
+def refuse_misfit(config: Configuration, rate_hz: int, inputs: int) -> None:
+    """Leave with every problem when a configuration does not fit samples of this rate and so many inputs."""
+    from driftwatch.config import check_rate
+
+    problems: list[Problem] = check_rate(config, rate_hz, inputs)
+    if problems:
+        refuse(problems)
+
+
+def print_json(envelopes: Sequence[Envelope]) -> None:
+    """Print records to standard output, one JSON object a line."""
+    from driftwatch.bus.wire import encode_json
+
+    out = sys.stdout.buffer
+    out.writelines(encode_json(envelope) + b"\n" for envelope in envelopes)
+    out.flush()
+
+
+@contextmanager
+def nothing_started() -> Iterator[None]:
+    """Turn the known errors of opening things into exit status 2."""
+    from driftwatch.bus.errors import BusError
+    from driftwatch.store.errors import StoreError
+    from driftwatch.stream.source import SourceRefusedError
+
+    try:
+        yield
+    except SourceRefusedError as error:
+        refuse(error.problems)
+    except (BusError, StoreError) as error:
+        refuse([error])
+
+
+@contextmanager
+def work_failed() -> Iterator[None]:
+    """Turn the known errors of work under way into one line and exit status 1."""
+    from driftwatch.store.errors import StoreError
+    from driftwatch.stream.source import StreamError
+
+    try:
+        yield
+    except (StoreError, StreamError) as error:
+        raise click.ClickException(str(error)) from error

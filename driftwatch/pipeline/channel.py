@@ -1,0 +1,210 @@
+"""One channel: samples in, measurements and track points out.
+
+The channel owns the raw samples and the zoom; each of its modes owns its baseband (`ModeLine`). Blocks of the zoom
+lie on a fixed grid anchored at sample 0. Missing samples are zeros that no usable window may touch; after a long gap
+the channel begins again at the grid's block that holds the first new sample.
+"""
+
+from __future__ import annotations
+
+import uuid
+from collections.abc import Iterator, Sequence
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from driftwatch.measure.zoom import VELOCITY_POWER, BandRequest, Zoom
+from driftwatch.pipeline.buffer import SampleBuffer
+from driftwatch.pipeline.missing import Incident, Missing, MissingList, unfinite_runs
+from driftwatch.pipeline.mode_line import ModeLine
+from driftwatch.pipeline.reading import Reading
+from driftwatch.records import Fault, Health, Phase, Track, sample_time_ns
+
+if TYPE_CHECKING:
+    from driftwatch.config import ChannelConfig, ModeConfig
+
+
+class ChannelLine:
+    """The pipeline of one channel.
+
+    Parameters
+    ----------
+    channel
+        Which input, and in which quantity.
+    modes
+        What is followed on it, at least one.
+    rate_hz, start_ns
+        Sample rate, and stream time of sample 0.
+
+    Raises
+    ------
+    ValueError
+        When a search band does not fit the sample rate.
+    """
+
+    def __init__(self, channel: ChannelConfig, modes: Sequence[ModeConfig], rate_hz: int, start_ns: int) -> None:
+        self.name = channel.name
+        self._input = channel.input - 1
+        self._rate_hz = rate_hz
+        self._start_ns = start_ns
+        self._zoom = zoom_of(channel, modes, rate_hz)
+        self._missing = MissingList()
+        self._unfinite = Incident(rate_hz)
+        self._lines = [ModeLine(channel, mode, self._zoom, number, start_ns) for number, mode in enumerate(modes)]
+        self._longest = max(line.longest for line in self._lines) + self._zoom.fft_length
+        self._position = 0  # stream index of the next sample
+        self._begin_at(0)
+
+    @property
+    def late(self) -> int:
+        """Most samples from the end of a window to its result."""
+        return max(line.late for line in self._lines)
+
+    @property
+    def latency_s(self) -> float:
+        """Longest wait from the end of a window to its result, seconds."""
+        return self.late / self._rate_hz
+
+    def push(self, first_sample: int, samples: NDArray[np.float32]) -> list[Reading]:
+        """Take a block in and return what it makes known.
+
+        Parameters
+        ----------
+        first_sample
+            Stream index of the first row.
+        samples
+            Shape (samples, inputs).
+
+        Raises
+        ------
+        ValueError
+            When the block lies before one that came already.
+        """
+        if first_sample < self._position:
+            raise ValueError(
+                f"channel {self.name}: a block at sample {first_sample} came after sample {self._position}; "
+                "expected blocks in order"
+            )
+        readings: list[Reading] = []
+        if first_sample > self._position:
+            readings.extend(self._skip(first_sample, "gap"))
+        column = samples[:, self._input]
+        for begin, end, finite in unfinite_runs(column):
+            readings.extend(self._good(column[begin:end]) if finite else self._bad(end - begin))
+        readings.extend(self._advance())
+        return readings
+
+    def tick(self, time_ns: int) -> list[Track]:
+        """Let a second without samples pass; return the track points whose status changed."""
+        return [track for line in self._lines if (track := line.tick(time_ns)) is not None]
+
+    def finish(self) -> list[Reading]:
+        """Return what the last samples still make known."""
+        readings = self._flush()
+        if self._unfinite.first is not None:
+            readings.append(self._unfinite_ends())
+        return readings
+
+    # ------------------------------------------------------------------------------------------ grid
+
+    def _begin_at(self, sample: int) -> None:
+        """Begin anew with the block of the grid that holds `sample`; what came before counts as zero."""
+        self._block = sample // self._zoom.hop
+        first = self._block * self._zoom.hop
+        self._raw: SampleBuffer[np.float32] = SampleBuffer(np.float32, first - self._zoom.edge)
+        self._raw.append_zeros(sample - self._raw.end)
+        self._position = sample
+        for line in self._lines:
+            line.begin_at(first, sample)
+
+    def _advance(self) -> list[Reading]:
+        """Zoom every block that is complete, then let the modes measure."""
+        zoom = self._zoom
+        while (end := (self._block + 1) * zoom.hop + zoom.edge) <= self._raw.end:
+            streams = zoom.block(self._raw.view(end - zoom.fft_length, end), self._block)
+            for line, stream in zip(self._lines, streams, strict=True):
+                line.extend(stream)
+            self._block += 1
+        readings = [
+            reading for line in self._lines for reading in line.measure(self._raw, self._missing, self._position)
+        ]
+        keep = min(self._block * zoom.hop - zoom.edge, *(line.keeps_from for line in self._lines))
+        self._raw.forget(keep)
+        self._missing.forget(keep)
+        return readings
+
+    def _flush(self) -> list[Reading]:
+        """Go on with zeros until everything up to the position is measured; the position stays."""
+        position = self._position
+        wanted = position + max(line.lookahead for line in self._lines) + self._zoom.hop + self._zoom.edge
+        self._raw.append_zeros(max(0, wanted - self._raw.end))
+        readings = self._advance()
+        for line in self._lines:
+            readings.extend(line.last(self._raw, self._missing, position))
+        return [Reading(min(reading.ready, position), reading.time_ns, reading.body) for reading in readings]
+
+    # ------------------------------------------------------------------------------------------ what is missing
+
+    def _skip(self, until: int, reason: str) -> list[Reading]:
+        """Pass over missing samples up to stream index `until`."""
+        self._missing.add(Missing(self._position, until, reason))
+        if until - self._position <= self._longest:
+            self._raw.append_zeros(until - self._position)
+            self._position = until
+            return []
+        readings = self._flush()
+        self._begin_at(until)
+        return [Reading(min(reading.ready, until), reading.time_ns, reading.body) for reading in readings]
+
+    def _good(self, samples: NDArray[np.float32]) -> Iterator[Reading]:
+        self._raw.append(samples)
+        self._position += len(samples)
+        if self._unfinite.is_over(self._position):
+            yield self._unfinite_ends()
+
+    def _bad(self, count: int) -> Iterator[Reading]:
+        """Pass over samples that are no numbers, and say so."""
+        first, end = self._position, self._position + count
+        if self._unfinite.bad(first, end):
+            yield self._unfinite_record(Phase.BEGIN, first, ready=first)
+        yield from self._skip(end, "not_finite")
+
+    def _unfinite_ends(self) -> Reading:
+        end = self._unfinite.end
+        reading = self._unfinite_record(Phase.END, end, ready=end + self._rate_hz)
+        self._unfinite.first = None
+        return reading
+
+    def _unfinite_record(self, phase: Phase, at: int, ready: int) -> Reading:
+        first = self._unfinite.first or 0
+        health = Health(
+            channel=self.name,
+            fault=Fault.NOT_FINITE,
+            phase=phase,
+            incident=str(uuid.uuid5(uuid.NAMESPACE_URL, f"{self.name}/not_finite/{first}")),
+            since_ns=sample_time_ns(self._start_ns, first, self._rate_hz),
+            seconds=(at - first) / self._rate_hz,
+            first_sample=first,
+            lost_samples=0 if phase is Phase.BEGIN else self._unfinite.lost,
+            value=None,
+            limit=None,
+            unit=None,
+            detail="samples are not numbers; windows that touch them are not used; check what wrote them",
+        )
+        return Reading(ready, sample_time_ns(self._start_ns, at, self._rate_hz), health)
+
+
+def zoom_of(channel: ChannelConfig, modes: Sequence[ModeConfig], rate_hz: int) -> Zoom:
+    """Return the zoom that serves the modes of a channel.
+
+    Raises
+    ------
+    ValueError
+        When a search band does not fit the sample rate.
+    """
+    power = VELOCITY_POWER[channel.quantity]
+    requests = [
+        BandRequest((mode.search_hz.low, mode.search_hz.high), mode.window_s, mode.step_s, power) for mode in modes
+    ]
+    return Zoom(rate_hz, requests)

@@ -1,0 +1,163 @@
+"""Where impacts fell into a mode's baseband, and how long each disturbs what follows.
+
+Onsets are looked for in segments on a fixed grid, one for each block of the zoom, with fixed context on either side.
+"""
+
+from __future__ import annotations
+
+import itertools
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from driftwatch.measure import onset
+
+if TYPE_CHECKING:
+    from driftwatch.measure.zoom import Band
+    from driftwatch.pipeline.buffer import SampleBuffer
+    from driftwatch.pipeline.missing import MissingList
+
+SETTLED = 4.0
+"""A decay is over when the power has come down to so many times the mean power before its onset: random response
+alone is stronger for one fiftieth of the time."""
+
+
+@dataclass(slots=True)
+class Impact:
+    """One impact and what it disturbs, in baseband samples."""
+
+    onset: float
+    before: float  # mean power before it
+    looked: int  # up to where its end was looked for
+    doubtful: bool  # so near the begin of the samples that the begin itself may look like it
+    settled: int | None = None  # where its decay is over; None: not yet
+
+
+class Impacts:
+    """Finds the impacts of one mode.
+
+    Parameters
+    ----------
+    band
+        The zoom's band.
+    segment
+        Baseband samples in a segment: one block of the zoom.
+    """
+
+    def __init__(self, band: Band, segment: int) -> None:
+        self._band = band
+        self._segment = segment
+        self._detector = onset.detector(band.rate_hz, band.search_hz)
+        self.before, self.after = self._detector.before, self._detector.after
+        self._reciprocal = band.rate_hz / (band.search_hz[1] - band.search_hz[0])  # bandwidth's, in samples
+        self._chunk = max(4, round(4.0 * self._reciprocal))
+        self.memory: int = band.window + self.before + self._chunk  # baseband that must stay before what is wanted next
+        self._impacts: list[Impact] = []
+        self.begin_at(0, 0)
+
+    def begin_at(self, first: int, sample: int) -> None:
+        """Begin anew: the baseband starts at `first`, the samples in it at `sample`."""
+        self._begin: int = sample
+        self._begun = False
+        self._origin: int = first
+        self._next: int = first  # where the next segment begins, before it is shifted by what is looked at behind it
+        self._impacts.clear()
+
+    @property
+    def settled_until(self) -> int:
+        """Baseband index up to which every onset is known."""
+        return max(self._next - self.after, self._origin)
+
+    def look(self, baseband: SampleBuffer[np.complex64], missing: MissingList) -> list[Impact]:
+        """Look through every segment that is complete; return the new impacts."""
+        count = (baseband.end - self._next) // self._segment
+        if count <= 0:
+            return []
+        found = self._detector.find(self._rows(baseband, count))
+        begins = [self._next - self.after - self.before + row * self._segment for row in range(count)]
+        places = [begin + one.position for begin, ones in zip(begins, found, strict=True) for one in ones]
+        new = [] if self._begun else [self._new(baseband, float(self._begin))]
+        self._begun = True
+        self._next += count * self._segment
+        for place in places:
+            if self._is_edge_of_gap(place, missing):
+                continue
+            if new and new[-1].doubtful and place - self._begin < 2.0 * self._reciprocal:
+                self._impacts.remove(new.pop())  # the begin itself is no second one
+            self._settle(baseband, math.floor(place))
+            new.append(self._new(baseband, place))
+        self._settle(baseband, self.settled_until)
+        return new
+
+    def _new(self, baseband: SampleBuffer[np.complex64], place: float) -> Impact:
+        doubtful = place < self._begin + self.before
+        power = 0.0 if doubtful else self._power_before(baseband, place)
+        impact = Impact(place, power, math.ceil(place) + 1, doubtful)
+        self._impacts.append(impact)
+        return impact
+
+    def _is_edge_of_gap(self, place: float, missing: MissingList) -> bool:
+        """Say whether the edge of a gap, filled with zeros, may look like an onset here."""
+        first, end = math.floor(place) - self.before, math.ceil(place) + self._detector.future
+        step = self._band.decimation
+        return any(run.end > self._begin * step for run in missing.within(first * step, end * step))
+
+    def _rows(
+        self, baseband: SampleBuffer[np.complex64], count: int
+    ) -> np.ndarray[tuple[int, int], np.dtype[np.complex64]]:
+        """Return the segments with their context, shape (count, before + segment + after); zeros before the begin."""
+        first = self._next - self.after - self.before
+        end = self._next + count * self._segment
+        held = max(first, self._origin)
+        stretch = np.concatenate((np.zeros(held - first, np.complex64), baseband.view(held, end)))
+        length = self.before + self._segment + self.after
+        windows = np.lib.stride_tricks.sliding_window_view(stretch, length)[:: self._segment]
+        return np.ascontiguousarray(windows[:count])
+
+    def within(self, first: int, end: int) -> bool:
+        """Say whether an impact disturbs the baseband from `first` to before `end`."""
+        return bool(self._disturbed(first, end))
+
+    def quiet_stretch(self, first: int, end: int) -> tuple[int, int]:
+        """Return begin and end of the longest stretch from `first` to before `end` that no impact disturbs."""
+        edges = [(first, first), *self._disturbed(first, end), (end, end)]
+        quiet = [(left[1], right[0]) for left, right in itertools.pairwise(edges)]
+        return max(quiet, key=lambda stretch: stretch[1] - stretch[0])
+
+    def forget(self, before: int) -> None:
+        """Let go of impacts that are over before baseband index `before`; the last one stays, for its level."""
+        self._impacts = [
+            one for one in self._impacts[:-1] if one.settled is None or one.settled > before
+        ] + self._impacts[-1:]
+
+    def _disturbed(self, first: int, end: int) -> list[tuple[int, int]]:
+        """Return what impacts disturb of a stretch, each as (begin, end), clipped to it and in order."""
+        return [
+            (max(first, math.floor(one.onset) - 1), end if one.settled is None else min(end, one.settled))
+            for one in self._impacts
+            if not one.doubtful and one.onset - 1 < end and (one.settled is None or one.settled > first)
+        ]
+
+    def _power_before(self, baseband: SampleBuffer[np.complex64], place: float) -> float:
+        """Return the mean power over a window's length before an onset, or before the impact that still rings then."""
+        end = math.floor(place) - 1
+        first = max(self._begin, end - self._band.window)
+        earlier = self._disturbed(first, end) if end > first else []
+        if earlier and self._impacts[-1].settled is None:
+            return self._impacts[-1].before
+        first = max([first, *(stretch[1] for stretch in earlier)])
+        if end <= first:
+            return 0.0
+        return float(np.mean(np.square(np.abs(baseband.view(first, end)))))
+
+    def _settle(self, baseband: SampleBuffer[np.complex64], until: int) -> None:
+        """Look for the end of each decay that goes on, chunk by chunk on its own grid, up to baseband index `until`."""
+        for number, one in enumerate(self._impacts):
+            after = self._impacts[number + 1].onset if number + 1 < len(self._impacts) else math.inf
+            while one.settled is None and one.looked + self._chunk <= until:
+                chunk = baseband.view(one.looked, one.looked + self._chunk)
+                one.looked += self._chunk
+                if one.looked > after or np.mean(np.square(np.abs(chunk))) <= SETTLED * one.before:
+                    one.settled = one.looked

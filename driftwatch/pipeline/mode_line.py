@@ -1,0 +1,265 @@
+"""One mode on one channel: baseband in, measurements and track points out.
+
+Windows lie on a fixed grid anchored at sample 0. A measurement is a function of its window's samples and the
+configuration alone; batches only save time, for every estimator treats each row of a batch by itself.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+from typing import TYPE_CHECKING
+
+import numpy as np
+from numpy.typing import NDArray
+
+from driftwatch.measure import ambient, ringdown
+from driftwatch.pipeline.buffer import SampleBuffer
+from driftwatch.pipeline.impacts import Impact, Impacts
+from driftwatch.pipeline.missing import MissingList
+from driftwatch.pipeline.reading import Reading
+from driftwatch.pipeline.wording import Extent, Subject, ambient_bodies, ringdown_body, unusable_body
+from driftwatch.records import Measurement, Method, Track, sample_time_ns
+from driftwatch.track.mode_tracker import ModeTracker
+
+if TYPE_CHECKING:
+    from driftwatch.config import ChannelConfig, ModeConfig
+    from driftwatch.measure.zoom import Zoom
+
+_Measured = tuple[int, Measurement]  # stream index at which it is known, and what it is
+
+CERTAIN_DB = 20.0
+"""A decay where the samples begin must stand so far above its residuals: random response fits no decay that well."""
+
+LEAST_QUIET = 0.5
+"""Share of an ambient window that must be free of impacts."""
+
+
+class ModeLine:
+    """The pipeline of one mode.
+
+    Parameters
+    ----------
+    channel, mode
+        What is measured.
+    zoom, number
+        The channel's zoom, and which of its bands is this mode's.
+    start_ns
+        Stream time of sample 0.
+    """
+
+    def __init__(self, channel: ChannelConfig, mode: ModeConfig, zoom: Zoom, number: int, start_ns: int) -> None:
+        self._mode = mode
+        self._band = zoom.bands[number]
+        self._zoom = zoom
+        self._start_ns = start_ns
+        self._subject = Subject(channel.name, mode.name, channel.unit, channel.scale, zoom.rate_hz)
+        self._tracker = ModeTracker(
+            channel.name, mode.name, self._band.search_hz, mode.window_s, self._band.step / self._band.rate_hz
+        )
+        self._now_ns = start_ns  # time of the last track point or tick
+        self._silent_ns = start_ns  # time of the last tick
+        self._impacts = Impacts(self._band, zoom.hop // self._band.decimation)
+        self._run_up = round(ringdown.context_s(self._band.search_hz) * zoom.rate_hz)  # wanted before an onset
+        self.longest = (
+            self._band.window * self._band.decimation + self._run_up + self._impacts.memory * self._band.decimation
+        )
+        self.begin_at(0, 0)
+
+    # ------------------------------------------------------------------------------------------ grid
+
+    @property
+    def late(self) -> int:
+        """Most samples from the end of a window to its result."""
+        return self._zoom.hop + self._zoom.edge + self.lookahead
+
+    @property
+    def lookahead(self) -> int:
+        """Samples behind a window's end that are looked at before it is measured."""
+        return self._impacts.after * self._band.decimation
+
+    @property
+    def keeps_from(self) -> int:
+        """Stream index of the first raw sample that may still be wanted."""
+        window = self._window * self._band.step * self._band.decimation
+        onset = self._impacts.settled_until * self._band.decimation - self._run_up
+        return min(
+            window, onset, *(math.floor(one.onset) * self._band.decimation - self._run_up for one in self._waiting)
+        )
+
+    def begin_at(self, first: int, sample: int) -> None:
+        """Begin anew: the baseband starts at stream index `first`, the samples at `sample`."""
+        step = self._band.step * self._band.decimation
+        self._baseband: SampleBuffer[np.complex64] = SampleBuffer(np.complex64, first // self._band.decimation)
+        self._window = -(-sample // step)  # number of the next window
+        self._waiting: list[Impact] = []  # those whose decay is not complete yet
+        self._impacts.begin_at(first // self._band.decimation, -(-sample // self._band.decimation))
+
+    def extend(self, stream: NDArray[np.complex64]) -> None:
+        """Take the next piece of baseband in."""
+        self._baseband.append(stream)
+
+    def _ready(self, baseband_end: int) -> int:
+        """Return the stream index at which baseband up to `baseband_end` and what is looked at behind it is known."""
+        hop = self._zoom.hop // self._band.decimation
+        block = -(-(baseband_end + self._impacts.after) // hop)
+        return block * self._zoom.hop + self._zoom.edge
+
+    # ------------------------------------------------------------------------------------------ measuring
+
+    def measure(self, raw: SampleBuffer[np.float32], missing: MissingList, position: int) -> list[Reading]:
+        """Return what the baseband so far makes known.
+
+        Parameters
+        ----------
+        raw
+            The channel's samples.
+        missing
+            Which of them are not there.
+        position
+            Stream index up to which samples came: no usable window reaches beyond.
+        """
+        self._waiting += self._impacts.look(self._baseband, missing)
+        measured: list[_Measured] = []
+        windows = list(self._complete_windows(missing, position))
+        if Method.AMBIENT in self._mode.methods:
+            measured += self._ambient(windows)
+        if Method.RINGDOWN in self._mode.methods:
+            measured += self._ringdown(raw, missing, position)
+        else:
+            self._waiting.clear()
+        self._forget()
+        return list(self._tracked(measured))
+
+    def last(self, raw: SampleBuffer[np.float32], missing: MissingList, position: int) -> list[Reading]:
+        """Return what ends with the stretch of samples: windows that a gap cut, and decays that go on no longer."""
+        measured: list[_Measured] = []
+        if Method.AMBIENT in self._mode.methods and missing.within(position, position + 1):
+            measured += self._cut_windows(position)
+        if Method.RINGDOWN in self._mode.methods:
+            for impact in self._waiting:
+                measured += self._decay(impact, position, raw, missing, position)
+            self._waiting.clear()
+        return list(self._tracked(measured))
+
+    def tick(self, time_ns: int) -> Track | None:
+        """Let a second without samples pass; return a track point if the status changes."""
+        self._now_ns = self._silent_ns = max(self._now_ns, time_ns)
+        return self._tracker.tick(time_ns)
+
+    def _tracked(self, measured: list[_Measured]) -> Iterator[Reading]:
+        """Yield measurements in the order in which they are known, each with the track point after it.
+
+        What was measured before a silence and is known after it does not wake a track that the silence has ended.
+        """
+        for ready, body in sorted(measured, key=lambda pair: pair[0]):
+            end_ns = sample_time_ns(self._start_ns, body.first_sample + body.samples, self._subject.rate_hz)
+            yield Reading(ready, end_ns, body)
+            if end_ns >= self._silent_ns:
+                self._now_ns = max(self._now_ns, end_ns)
+                yield Reading(ready, self._now_ns, self._tracker.update(body, end_ns, self._now_ns))
+
+    # ------------------------------------------------------------------------------------------ ambient
+
+    def _extent(self, window: int) -> Extent:
+        """Return the samples of window number `window`."""
+        decimation = self._band.decimation
+        return Extent(window * self._band.step * decimation, self._band.window * decimation)
+
+    def _complete_windows(self, missing: MissingList, position: int) -> Iterator[tuple[int, str | None]]:
+        """Yield the number of each window that can be measured now, with what spoils it; pass over all others."""
+        while (extent := self._extent(self._window)).end <= position:
+            end = extent.end // self._band.decimation
+            if end > self._baseband.end or end > self._impacts.settled_until:
+                return
+            gaps = missing.within(extent.first_sample, extent.end)
+            if not gaps or gaps[0].first > extent.first_sample:  # a window that begins in a gap is not announced
+                yield self._window, gaps[0].reason if gaps else None
+            self._window += 1
+
+    def _cut_windows(self, position: int) -> Iterator[_Measured]:
+        """Yield the windows that began before a gap at `position` and would have ended in it."""
+        while (extent := self._extent(self._window)).first_sample < position:
+            body = unusable_body(self._subject, Method.AMBIENT, extent, ("gap",))
+            yield position, body
+            self._window += 1
+
+    def _ambient(self, windows: list[tuple[int, str | None]]) -> Iterator[_Measured]:
+        """Yield the measurement of each window: whole ones in one batch, each with an impact by itself."""
+        whole: list[Extent] = []
+        for window, spoilt in windows:
+            extent = self._extent(window)
+            if spoilt is not None:
+                body = unusable_body(self._subject, Method.AMBIENT, extent, (spoilt,))
+                yield self._ready(extent.end // self._band.decimation), body
+            elif self._impacts.within(*self._baseband_of(extent)):
+                yield self._ready(extent.end // self._band.decimation), self._around_impacts(extent)
+            else:
+                whole.append(extent)
+        if whole:
+            for extent, body in zip(whole, ambient_bodies(self._subject, whole, self._fit(whole)), strict=True):
+                yield self._ready(extent.end // self._band.decimation), body
+
+    def _baseband_of(self, extent: Extent) -> tuple[int, int]:
+        return extent.first_sample // self._band.decimation, extent.end // self._band.decimation
+
+    def _fit(self, extents: list[Extent]) -> ambient.AmbientFit:
+        """Fit extents of one length."""
+        rows = np.stack([self._baseband.view(*self._baseband_of(extent)) for extent in extents])
+        band = self._band
+        return ambient.fit(rows, band.rate_hz, band.centre_hz, band.search_hz, band.velocity_power)
+
+    def _around_impacts(self, extent: Extent) -> Measurement:
+        """Measure the longest stretch of a window that no impact disturbs, or say that too little is left."""
+        first, end = self._impacts.quiet_stretch(*self._baseband_of(extent))
+        decimation = self._band.decimation
+        if end - first < LEAST_QUIET * self._band.window:
+            return unusable_body(self._subject, Method.AMBIENT, extent, ("impact",))
+        quiet = Extent(first * decimation, (end - first) * decimation)
+        return next(ambient_bodies(self._subject, [quiet], self._fit([quiet]), also=("impact",)))
+
+    # ------------------------------------------------------------------------------------------ ringdown
+
+    def _ringdown(self, raw: SampleBuffer[np.float32], missing: MissingList, position: int) -> Iterator[_Measured]:
+        """Yield the measurement of each decay that is complete: it is over, or the record is full."""
+        while self._waiting:
+            end = self._decay_end(self._waiting[0])
+            if end is None or end * self._band.decimation > position:
+                return
+            yield from self._decay(self._waiting.pop(0), end * self._band.decimation, raw, missing, self._ready(end))
+
+    def _decay_end(self, impact: Impact) -> int | None:
+        """Return the baseband index at which a decay is complete; None while that is not known."""
+        full = math.ceil(impact.onset) + self._band.window
+        if impact.settled is not None:
+            return min(full, impact.settled)
+        return full if full <= self._impacts.settled_until else None
+
+    def _decay(
+        self, impact: Impact, end: int, raw: SampleBuffer[np.float32], missing: MissingList, ready: int
+    ) -> Iterator[_Measured]:
+        """Yield the measurement of a decay up to stream index `end`; none where the samples only begin there."""
+        onset = impact.onset * self._band.decimation
+        first = max(round(onset) - self._run_up, raw.kept)
+        for gap in missing.within(first, end):
+            if gap.first <= onset:
+                first = gap.end
+            else:
+                end = min(end, gap.first)
+        extent = Extent(round(onset), max(end - round(onset), 0))
+        if first > onset or extent.samples == 0:
+            body = unusable_body(self._subject, Method.RINGDOWN, extent, ("gap",))
+        else:
+            fit = ringdown.fit(raw.view(first, end), self._subject.rate_hz, self._band.search_hz, onset - first)
+            used = Extent(first + fit.first_sample, fit.samples) if fit.usable else extent
+            body = ringdown_body(self._subject, used, fit)
+        if not impact.doubtful or (body.usable and (body.snr_db or 0.0) >= CERTAIN_DB):
+            yield ready, body
+
+    # ------------------------------------------------------------------------------------------ memory
+
+    def _forget(self) -> None:
+        """Let go of the baseband before the next window and the next look for onsets."""
+        wanted = min(self._window * self._band.step, self._impacts.settled_until)
+        self._baseband.forget(wanted - self._impacts.memory)
+        self._impacts.forget(wanted)

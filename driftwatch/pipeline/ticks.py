@@ -1,0 +1,30 @@
+"""Ticks for the time in which no samples come."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Iterator
+
+from driftwatch.records import NS, Block, Tick, sample_time_ns
+
+
+def with_ticks(blocks: Iterable[Block], rate_hz: int) -> Iterator[Block | Tick]:
+    """Yield the blocks, and in each gap between two of them a tick a second.
+
+    A gap of hours is ticked every minute after its first hour and every hour after its first day: whatever waits
+    for a delay has long ended, and a gap of years must not take minutes.
+    """
+    end: int | None = None
+    for block in blocks:
+        if end is not None and block.first_sample > end:
+            start_ns = block.time_ns - sample_time_ns(0, block.first_sample, rate_hz)
+            yield from _ticks(sample_time_ns(start_ns, end, rate_hz), block.time_ns)
+        end = block.first_sample + len(block.samples)
+        yield block
+
+
+def _ticks(from_ns: int, until_ns: int) -> Iterator[Tick]:
+    now_ns = from_ns + NS
+    while now_ns < until_ns:
+        yield Tick(now_ns)
+        silent_s = (now_ns - from_ns) // NS
+        now_ns += NS if silent_s < 3600 else 60 * NS if silent_s < 86_400 else 3600 * NS
