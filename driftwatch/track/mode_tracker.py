@@ -7,7 +7,7 @@ import math
 from driftwatch.records import NS, Measurement, Method, Track, TrackStatus
 from driftwatch.track import filter as kalman
 from driftwatch.track.consistency import Cusum, Drifted
-from driftwatch.track.reading import Reading, agree, at_state_q, new_part, reading_of, share_no_sample
+from driftwatch.track.reading import Reading, agree, new_part, reading_of, share_no_sample, with_var_q
 
 GATE = 28.74
 """Squared distance beyond which a reading is not taken at once: chi-square, 2 degrees, the tail of 5 sigma (5.7e-7)."""
@@ -22,7 +22,7 @@ NOT_FOUND = frozenset({"no_mode", "misfit", "band_edge", "too_wide", "not_conver
 """Reasons that say the mode should have been seen and was not; the others say that nothing could be learned."""
 
 DAY_S = 86_400.0
-_NOISE_SHARE = 0.1  # of the newest reading in the smoothed process noise
+_SMOOTHING = 0.1  # share of the newest reading in what is usual
 _Z95 = 1.959963984540054
 
 
@@ -84,7 +84,9 @@ class ModeTracker:
         self._noise = kalman.Noise(0.0, 0.0)
         self._spacing_s = window_s
         self._pending: list[Reading] = []
+        self._refused_since_ns: int | None = None  # begin of a run of readings outside the gate
         self._before: Reading | None = None
+        self._usual_var_q: float | None = None
         self._used_ns: int | None = None
         self._heard_ns: int | None = None
         self._missing_since_ns: int | None = None
@@ -96,7 +98,7 @@ class ModeTracker:
         """What is known of the mode now."""
         return self._status
 
-    def update(self, measurement: Measurement, time_ns: int) -> Track:
+    def update(self, measurement: Measurement, time_ns: int, now_ns: int | None = None) -> Track:
         """Take one measurement, usable or not, and return the track point after it.
 
         Parameters
@@ -105,6 +107,8 @@ class ModeTracker:
         time_ns : int
             Stream time of the end of the samples it used. The track point speaks for this time, not for the window's
             middle: a drift is followed without the lag of half a window.
+        now_ns : int, optional
+            A later stream time for the track point to speak for: a decay is known after windows that ended later.
         """
         self._regime = measurement.regime
         self._heard_ns = time_ns if self._heard_ns is None else max(self._heard_ns, time_ns)
@@ -115,7 +119,7 @@ class ModeTracker:
             self._find(reading)
         else:
             self._follow(self._state, reading)
-        return self._track(time_ns)
+        return self._track(time_ns if now_ns is None else now_ns)
 
     def tick(self, time_ns: int) -> Track | None:
         """Tell that time went by without samples; return a track point if that changes the status."""
@@ -143,11 +147,12 @@ class ModeTracker:
 
     def _follow(self, state: kalman.State, reading: Reading) -> None:
         now = self._carried(state, reading.end_ns)
-        reading = at_state_q(reading, now.ln_q)
         if kalman.innovation(now, reading).distance <= GATE:
             self._accept(now, reading)
-        elif not self._confirm(reading) and reading.end_ns - self._pending[0].end_ns >= self._pending_ns(reading):
-            self._hold("misfit", reading.end_ns)
+        elif not self._confirm(reading):
+            self._refused_since_ns = reading.end_ns if self._refused_since_ns is None else self._refused_since_ns
+            if reading.end_ns - self._refused_since_ns >= self._pending_ns(reading):
+                self._hold("misfit", reading.end_ns)
 
     def _confirm(self, reading: Reading) -> bool:
         """Start at a reading if a remembered one vouches for it; else remember it and return False."""
@@ -174,13 +179,14 @@ class ModeTracker:
         self._spacing_s = max(newest.window_s, apart_s) if newest.decay else newest.window_s
         self._noise = kalman.noise_for(newest, self._spacing_s, self._memory)
         self._state = kalman.start(first, newest, self._noise)
-        self._before = None
+        self._before, self._usual_var_q = None, None
         self._cusum_f.reset()
         self._cusum_q.reset()
         self._used(newest)
 
     def _accept(self, now: kalman.State, reading: Reading) -> None:
         """Update the state by what the reading tells beyond the one before it."""
+        reading = self._steadied(reading)
         new = new_part(reading, self._before)
         if new is None:
             return
@@ -188,11 +194,28 @@ class ModeTracker:
         self._adapt_noise(reading)
         self._used(reading)
 
+    def _steadied(self, reading: Reading) -> Reading:
+        """Return a window's reading with the variance of ln q that its like have had of late.
+
+        The variance grows with the very q that was found (Au 2014), so readings that are low by chance claim to be
+        the better ones, and their weighted mean would sit up to one variance of ln q too low however many there are.
+        The usual variance does not know the reading's error. What differs by more than a factor of two is no chance
+        but another kind of window (shorter, noisier), and stands as it is.
+        """
+        if reading.decay:
+            return reading
+        usual, self._usual_var_q = self._usual_var_q, reading.var_q
+        if usual is None or not 0.5 <= reading.var_q / usual <= 2.0:
+            return reading
+        self._usual_var_q = usual * (reading.var_q / usual) ** _SMOOTHING
+        return with_var_q(reading, usual)
+
     def _used(self, reading: Reading) -> None:
         self._used_ns = reading.end_ns if self._used_ns is None else max(self._used_ns, reading.end_ns)
         if not reading.decay:
             self._before = reading
         self._pending.clear()
+        self._refused_since_ns = None
         self._missing_since_ns, self._missed_decays = None, 0
         self._status, self._reason = TrackStatus.TRACKING, None
 
@@ -219,7 +242,7 @@ class ModeTracker:
             self._spacing_s = reading.window_s
         fresh = kalman.noise_for(reading, self._spacing_s, self._memory)
         first_window = self._before is None and not reading.decay
-        self._noise = fresh if first_window else kalman.blend(self._noise, fresh, _NOISE_SHARE)
+        self._noise = fresh if first_window else kalman.blend(self._noise, fresh, _SMOOTHING)
 
     # ------------------------------------------------------------------------------------------ unusable ones
 

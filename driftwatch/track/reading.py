@@ -9,7 +9,6 @@ from driftwatch.records import NS, Measurement, Method
 
 _SMALLEST_NEW_PART = 0.01  # share of a window below which it tells nothing new
 _LARGEST_CORRELATION = 0.999  # a covariance must stay positive definite
-_RESCALE = math.log(2.0)  # how far a variance is moved from a reading's own q to the state's
 
 
 @dataclass(slots=True)  # never changed; not frozen, which would cost 1.4 us each
@@ -86,16 +85,8 @@ def _reading(measurement: Measurement, end_ns: int, f: float, std_f: float, q: f
     )
 
 
-def at_state_q(reading: Reading, ln_q: float) -> Reading:
-    """Return a window's reading with its variance of ln q taken at the state's q instead of at its own.
-
-    The variance of ln q grows like q itself (Au 2014). Taken at the reading's own q, readings that are low by chance
-    claim to be the better ones, and their weighted mean sits about one variance of ln q too low however many there
-    are. Taken at the predicted q the weight does not know the reading's error.
-    """
-    if reading.decay:
-        return reading
-    scale = math.exp(min(max(ln_q - reading.ln_q, -_RESCALE), _RESCALE))
+def with_var_q(reading: Reading, var_q: float) -> Reading:
+    """Return a reading with another variance of ln q and the same correlation."""
     return Reading(
         reading.start_ns,
         reading.end_ns,
@@ -103,9 +94,9 @@ def at_state_q(reading: Reading, ln_q: float) -> Reading:
         reading.ln_f,
         reading.ln_q,
         reading.var_f,
-        reading.cov * math.sqrt(scale),
-        reading.var_q * scale,
-        decay=False,
+        reading.cov * math.sqrt(var_q / reading.var_q),
+        var_q,
+        reading.decay,
     )
 
 

@@ -269,6 +269,16 @@ def test_a_decay_among_windows_is_used_with_all_its_weight(follower):
     assert point.q_std < 0.005 * 40.0 < before.q_std
 
 
+def test_a_window_that_is_really_worse_weighs_less(follower):
+    """Three times the usual deviation is no chance: such a reading moves the state by a ninth of a usual one's pull."""
+    pulls = []
+    for std_q in (0.08, 0.24):
+        mode = follower(step_s=4.0)
+        before = mode.feed(100)
+        pulls.append(mode.feed(1, q=44.0, std_q=std_q).q - before.q)
+    assert pulls[0] / pulls[1] == pytest.approx(9.0, rel=0.05)  # up to the gain itself, about a twenty-fifth
+
+
 def test_the_interval_of_q_is_that_of_its_logarithm(follower):
     point = follower().feed(30)
     ratio = math.exp(1.959964 * point.q_std / point.q)
