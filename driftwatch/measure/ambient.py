@@ -18,13 +18,14 @@ from driftwatch.measure.scoring import Optimum, Prior, maximise
 from driftwatch.measure.whittle import (
     FLOOR,
     LN_G,
+    LN_P,
+    TILT,
     WN,
     Array,
     Lines,
     cumulated,
     lines_of,
     pool,
-    signal_and_floor,
 )
 
 FEWEST_LINES = 8
@@ -40,9 +41,11 @@ NARROWEST = 1.0
 """Half-power width in lines (gT/pi) below which a window does not resolve a resonance."""
 
 _TILT_OCTAVE = 2.0  # standard deviation of the floor's slope: a power of frequency, 2 being 6 dB an octave
-_FLOOR_SPREAD = 2.0  # standard deviation of the log floor about its first guess
+_FLOOR_SPREAD = 2.5  # standard deviation of the log floor about its first guess,
+_FLOOR_SHARE = 0.5  # which is this much of the least section's mean: that still holds some of the resonance's tail
 _ROUGH, _FINE = 1.0, 0.05  # standard deviations: when to pool anew, when to stop
-_ROUGH_MOST, _FINE_MOST = 5, 14  # evaluations of the model
+_ROUGH_MOST, _FINE_MOST = 2, 10  # evaluations of the model
+_PLAIN = (1e-25, 1e30)  # mean of squares that single precision holds with all their spread
 _ROWS = 64  # windows at a time: their arrays stay in the cache
 _FIGURES = (
     "frequency_hz",
@@ -138,44 +141,66 @@ def _fit_rows(windows: NDArray[np.complexfloating], lines: Lines, figures: Array
     """Fit a few windows; fill in their figures, shape (figures, windows), and return their reasons."""
     if lines.count < FEWEST_LINES:
         return [("not_resolved",)] * windows.shape[0]
-    power = _periodogram(windows, lines)
-    mean = np.sum(power, axis=1) / lines.count
+    power, sums, mean = _periodogram(transforms.fft(windows, axis=1), lines)
     finite = np.isfinite(mean)
     good = np.flatnonzero(finite & (mean > 0.0))
-    fitted: list[tuple[str, ...]] = []
-    if good.size:
-        values, fitted = _fit_power(power[good] if good.size < mean.size else power, mean[good], lines)
-        figures[:, good] = values
-    figures[_FIGURES.index("level"), mean == 0.0] = 0.0
     reasons: list[tuple[str, ...]] = [("no_mode",) if known else ("not_finite",) for known in finite]
-    for row, words in zip(good, fitted, strict=True):
-        reasons[row] = words
+    figures[_FIGURES.index("level"), mean == 0.0] = 0.0
+    if good.size == 0:
+        return reasons
+    if good.size < mean.size:
+        power, sums, mean = power[good], sums[good], mean[good]
+    figures[:, good], words = _fit_power(power, sums, mean, lines)
+    for row, why in zip(good, words, strict=True):
+        reasons[row] = why
     return reasons
 
 
-def _periodogram(windows: NDArray[np.complexfloating], lines: Lines) -> Array:
-    """Return |transform|^2 / (length rate) on the in-band lines, shape (windows, lines), unit^2/Hz."""
-    spectrum = transforms.fft(windows, axis=1)
-    power = np.empty((windows.shape[0], lines.count))
+def _periodogram(spectrum: NDArray[np.complexfloating], lines: Lines) -> tuple[NDArray[np.floating], Array, Array]:
+    """Return |transform|^2 / (length rate), unit^2/Hz, on the in-band lines.
+
+    Returns
+    -------
+    power : shape (windows, lines)
+        Divided by its mean, in the spectrum's own precision.
+    sums : shape (windows, lines + 1)
+        Its running sums.
+    mean : shape (windows,)
+    """
+    with np.errstate(invalid="ignore", over="ignore", under="ignore", divide="ignore"):
+        power = _squares(spectrum, lines)
+        sums = cumulated(power)
+        mean = sums[:, -1] / lines.count
+        extreme = np.flatnonzero(~((mean > _PLAIN[0]) & (mean < _PLAIN[1])))
+        if extreme.size:  # squares beyond single precision's range
+            exact = _squares(spectrum[extreme].astype(np.complex128), lines)
+            sums[extreme] = cumulated(exact)
+            mean[extreme] = sums[extreme, -1] / lines.count
+            power[extreme] = exact / mean[extreme, None]
+        each = np.where(mean > 0.0, 1.0 / mean, 0.0)
+        unit = each.astype(power.dtype)
+        unit[extreme] = 1.0
+        power *= unit[:, None]
+        sums *= each[:, None]
+    return power, sums, mean / (lines.length * lines.rate_hz)
+
+
+def _squares(spectrum: NDArray[np.complexfloating], lines: Lines) -> NDArray[np.floating]:
+    """Return |spectrum|^2 on the in-band lines, shape (windows, lines)."""
+    power = np.empty((spectrum.shape[0], lines.count), dtype=spectrum.real.dtype)
     below = max(0, min(-lines.first, lines.count))  # lines under the centre lie at the transform's end
     for into, begin in ((slice(0, below), lines.first + lines.length), (slice(below, None), max(lines.first, 0))):
         part = power[:, into]
-        if part.shape[1]:
-            slab = spectrum[:, begin : begin + part.shape[1]]
-            real, imag = slab.real.astype(np.float64), slab.imag.astype(np.float64)
-            with np.errstate(invalid="ignore", over="ignore"):
-                real *= real
-                imag *= imag
-                np.add(real, imag, out=part)
-    power *= 1.0 / (lines.length * lines.rate_hz)
+        slab = spectrum[:, begin : begin + part.shape[1]]
+        np.multiply(slab.real, slab.real, out=part)
+        part += slab.imag * slab.imag
     return power
 
 
-def _fit_power(power: Array, mean: Array, lines: Lines) -> tuple[Array, list[tuple[str, ...]]]:
+def _fit_power(
+    power: NDArray[np.floating], sums: Array, mean: Array, lines: Lines
+) -> tuple[Array, list[tuple[str, ...]]]:
     """Fit periodograms of positive finite mean; return figures, shape (figures, rows), and reasons."""
-    level = np.sqrt(0.5 * np.sum(power * lines.own_unit, axis=1) * lines.spacing / (2 * np.pi))
-    power = power / mean[:, None]
-    sums = cumulated(power)
     theta = detection.start(sums, lines)
     prior = _prior(theta, lines)
     pools = pool(sums, lines, theta[:, WN], np.exp(theta[:, LN_G]))
@@ -183,19 +208,32 @@ def _fit_power(power: Array, mean: Array, lines: Lines) -> tuple[Array, list[tup
     pools = pool(sums, lines, rough.theta[:, WN], np.exp(rough.theta[:, LN_G]))
     best = maximise(rough.theta, pools, prior, lines, _FINE, _FINE_MOST)
     gain = best.likelihood - detection.floor_only(pools, prior.precision[1])
-    signal, floor = signal_and_floor(best.theta, lines)
-    snr = 10.0 * np.log10(np.sum(signal, axis=1) / np.sum(floor, axis=1))
-    signal += floor
-    largest = np.max(np.divide(power, signal, out=power), axis=1)
-    fit_p = residuals.p_value(largest, lines.count, best.model, pools)
-    frequency, ln_q, frequency_std, q_std, correlation = _moments(best)
-    values = np.stack((frequency, ln_q, frequency_std, q_std, correlation, level, snr, fit_p, gain, best.converged))
+    fit_p = residuals.p_value(residuals.largest(power, best.theta, lines), lines.count, best.model, pools)
+    level = np.sqrt(0.5 * mean * _own_unit(power, lines) * lines.spacing / (2 * np.pi))
+    values = np.stack((*_moments(best), level, _snr_db(best.theta, lines), fit_p, gain, best.converged))
     return values, _reasons(best, gain, fit_p, lines)
+
+
+def _own_unit(power: NDArray[np.floating], lines: Lines) -> Array:
+    """Return the sum of the periodogram, whose mean is 1, before the conversion to velocity."""
+    if lines.velocity_power == 0:
+        return np.full(power.shape[0], float(lines.count))
+    return np.asarray(np.sum(power * lines.own_unit.astype(power.dtype), axis=1), dtype=np.float64)
+
+
+def _snr_db(theta: Array, lines: Lines) -> Array:
+    """Return signal variance over noise variance in the band, in dB, of the velocity."""
+    wn, g = theta[:, WN], np.exp(theta[:, LN_G])
+    ends = [np.arctan((edge - wn * wn / edge) / (2.0 * g)) for edge in (lines.low, lines.high)]
+    signal = np.exp(theta[:, LN_P]) * np.maximum(ends[1] - ends[0], 1e-300) / np.pi
+    level, lift = np.exp(theta[:, FLOOR]), np.exp(theta[:, TILT])
+    shares = (level * lift) * float(np.mean(lines.upper)) + (level / lift) * float(np.mean(lines.lower))
+    return np.asarray(10.0 * np.log10(signal / (shares * (lines.high - lines.low) / (2 * np.pi))), dtype=np.float64)
 
 
 def _prior(theta: Array, lines: Lines) -> Prior:
     tilt = _TILT_OCTAVE * 0.5 * np.log(lines.high / lines.low)
-    mean = np.stack((theta[:, FLOOR], np.zeros(theta.shape[0])), axis=1)
+    mean = np.stack((theta[:, FLOOR] + np.log(_FLOOR_SHARE), np.zeros(theta.shape[0])), axis=1)
     return Prior(mean, np.array([_FLOOR_SPREAD**-2, tilt**-2]))
 
 

@@ -13,11 +13,18 @@ from __future__ import annotations
 from functools import lru_cache
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy import special
 
-from driftwatch.measure.whittle import Array, Pools
+from driftwatch.measure.whittle import Array, Lines, Pools, on_lines
 
 _FITTED = 4.0  # parameters that the data determine; the fifth, the tilt, is mostly its prior's
+
+
+def largest(power: NDArray[np.floating], theta: Array, lines: Lines) -> Array:
+    """Return the largest ratio of periodogram to expectation, shape (rows,)."""
+    model = on_lines(theta, lines, power.dtype.type)
+    return np.asarray(np.max(np.divide(power, model, out=model), axis=1), dtype=np.float64)
 
 
 def p_value(largest: Array, lines: int, model: Array, pools: Pools) -> Array:

@@ -11,6 +11,8 @@ from driftwatch.measure.whittle import FLOOR, LN_G, WN, Array, Lines, Pools, exp
 
 _LARGEST_STEP = np.array([1.0, 0.7, 1.5, 1.5, 0.7])  # in units of g for wn, else in logarithms
 _SLACK = 1e-3  # loss of log-likelihood that is no reason to go back
+_DIAGONAL = np.arange(5)
+_ROUNDING = 1e-9  # share of the information that rounding may take: keeps a far-off trial's equations solvable
 _RIDGE = 1e-6  # lines' worth of information that keeps an idle parameter's equation solvable
 
 
@@ -126,6 +128,7 @@ def _evaluate(theta: Array, pools: Pools, prior: Prior) -> tuple[Array, Array, A
     likelihood = -np.sum(terms, axis=1)
     products = np.matmul(columns.transpose(1, 0, 2), columns.transpose(1, 2, 0))
     information = products[:, :5, :5] + prior.information
+    information[:, _DIAGONAL, _DIAGONAL] *= 1.0 + _ROUNDING
     away = theta[:, FLOOR:] - prior.mean
     pull = away * prior.precision
     score = products[:, :5, 5].copy()

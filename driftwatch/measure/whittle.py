@@ -126,10 +126,10 @@ class Pools:
         return type(self)(self.seconds, self.centre, *arrays)
 
 
-def cumulated(power: Array) -> Array:
+def cumulated(power: NDArray[np.floating]) -> Array:
     """Return the running sum over the lines, shape (rows, lines + 1), beginning with 0."""
     sums = np.zeros((power.shape[0], power.shape[1] + 1))
-    np.cumsum(power, axis=1, out=sums[:, 1:])
+    np.cumsum(power, axis=1, dtype=np.float64, out=sums[:, 1:])
     return sums
 
 
@@ -301,22 +301,25 @@ def _add_short(short: Short, height: Array, x: Array, d: Array, columns: Array) 
     by_g -= (height * (short.sigma_g - short.sigma)) * xd2
 
 
-def signal_and_floor(theta: Array, lines: Lines) -> tuple[Array, Array]:
-    """Return the model's two parts on every line, shape (rows, lines) each."""
+def on_lines(theta: Array, lines: Lines, kind: type[np.floating] = np.float64) -> NDArray[np.floating]:
+    """Return the expected periodogram on every line, shape (rows, lines), in single precision where that will do."""
     wn, logs = theta[:, WN, None], np.exp(theta[:, LN_G:, None])
     g, level, lift = logs[:, 0], logs[:, 2], logs[:, 3]
     short = Short.of(wn, g, lines.seconds, lines.centre)
     height = 2.0 * logs[:, 1] / g
-    x = lines.half_omega * (1.0 / g)
-    x -= lines.half_inverse * (wn * (wn / g))
+    middle = lines.omega[lines.count // 2]
+    omega, inverse = (lines.omega - middle).astype(kind), (0.5 / lines.omega).astype(kind)
+    x = inverse * (wn / g).astype(kind)
+    x += (0.5 / g).astype(kind)
+    x *= omega - (wn - middle).astype(kind)  # u = (w - wn) (1/2 + wn/2w)
     d = x * x
     d += 1.0
     np.divide(1.0, d, out=d)
-    signal = d * (-2.0 * height * short.kappa)
-    signal += height * (1.0 + short.kappa)
+    signal = d * (-2.0 * height * short.kappa).astype(kind)
+    signal += (height * (1.0 + short.kappa)).astype(kind)
     if short.matters:
-        signal -= (height * short.sigma) * (x * d)
+        signal -= (height * short.sigma).astype(kind) * (x * d)
     signal *= d
-    floor = (level * lift) * lines.upper
-    floor += (level / lift) * lines.lower
-    return signal, floor
+    signal += (level * lift).astype(kind) * lines.upper.astype(kind)
+    signal += (level / lift).astype(kind) * lines.lower.astype(kind)
+    return np.asarray(signal, dtype=kind)
