@@ -83,21 +83,24 @@ def start(first: Reading, newest: Reading, noise: Noise) -> State:
     """Return the state after two readings that share no sample and agree.
 
     The prior of the rate is what the two readings suggest: zero, give or take their distance and their own
-    uncertainty over the time between them.
+    uncertainty over the time between them. Where they differ by more than 2 standard deviations the mode may have
+    drifted, or the first reading may be of something else (a window that a step cut in two): the excess joins the
+    first one's variance, so that no drift is taken for certain from two readings.
     """
     apart_s = max((newest.moment_ns - first.moment_ns) / NS, 0.5 * newest.window_s)
     moved_f, moved_q = newest.ln_f - first.ln_f, newest.ln_q - first.ln_q
+    both_f, both_q = newest.var_f + first.var_f, newest.var_q + first.var_q
     prior = State(
         time_ns=first.moment_ns,
         ln_f=first.ln_f,
         rate=0.0,
         ln_q=first.ln_q,
-        p_ff=first.var_f,
+        p_ff=first.var_f + max(moved_f * moved_f - 4.0 * both_f, 0.0),
         p_fr=0.0,
         p_fq=first.cov,
-        p_rr=(moved_f * moved_f + first.var_f + newest.var_f) / (apart_s * apart_s),
+        p_rr=(moved_f * moved_f + both_f) / (apart_s * apart_s),
         p_rq=0.0,
-        p_qq=first.var_q + moved_q * moved_q,
+        p_qq=first.var_q + max(moved_q * moved_q - 4.0 * both_q, 0.0),
     )
     return update(predict(prior, newest.end_ns, noise), newest)
 

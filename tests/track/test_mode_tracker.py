@@ -3,6 +3,7 @@
 import dataclasses
 import math
 
+import numpy as np
 import pytest
 from driftwatch.records import NS, REASONS, Method, Track, TrackStatus
 from driftwatch.track.mode_tracker import ModeTracker
@@ -137,6 +138,31 @@ def test_a_step_is_followed_within_three_windows(follower, step_s, f, q):
     assert point.status is TRACKING
     assert abs(point.frequency_hz - f) < 2.0 * point.frequency_std_hz
     assert abs(math.log(point.q / q)) < 2.0 * point.q_std / point.q
+
+
+def test_a_window_that_a_step_cut_in_two_is_not_taken_for_a_drift(follower):
+    """First a reading half-way, then the new value: at every point the new value lies within 4 stated deviations."""
+    mode = follower()
+    mode.feed(60)
+    mode.feed(1, f=886.0)
+    mode.miss(3, "misfit")
+    for _ in range(20):
+        point = mode.feed(1, f=872.0)
+        moved_on = point.frequency_hz < 899.0
+        assert not moved_on or abs(point.frequency_hz - 872.0) < 4.0 * point.frequency_std_hz
+    assert moved_on
+
+
+def test_decays_that_scatter_more_than_they_state_are_still_followed(measurement):
+    """A mode whose frequency depends on how hard it is hit: 3e-4 from hit to hit, stated 1e-5."""
+    tracker = ModeTracker("a", "m", (800.0, 1000.0), 1.0, 1.0)
+    scatter = np.random.default_rng(0).standard_normal(60)
+    points = [
+        tracker.update(measurement(900.0 * (1 + 3e-4 * x), 400.0, std_f=1e-5, method=Method.RINGDOWN), 5 * k * NS)
+        for k, x in enumerate(scatter)
+    ]
+    assert all(point.status in (TRACKING, HELD) for point in points[1:])
+    assert all(abs(point.frequency_hz - 900.0) < 900.0 * 3e-4 * 5 for point in points[1:])
 
 
 def test_figures_that_jump_about_without_agreeing_are_held_as_misfit_and_then_lost(follower):
