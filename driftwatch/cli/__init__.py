@@ -49,7 +49,9 @@ class _Group(click.Group):
             if ctx.params.get("debug"):
                 traceback.print_exc()
             else:
-                click.echo(f"Error: {type(error).__name__}: {error} (--debug shows where)", err=True)
+                click.echo(
+                    f"Error: {type(error).__name__}: {error} (`driftwatch --debug COMMAND` shows where)", err=True
+                )
             sys.exit(1)
 
 
@@ -70,6 +72,8 @@ def main(ctx: click.Context, debug: bool) -> None:  # noqa: ARG001 - read from t
     if ctx.invoked_subcommand is None:
         click.echo(ctx.get_help())
         click.echo(
-            "\nWhere to begin: `driftwatch run config/demo.toml` watches three simulated resonances; "
-            "`driftwatch check CONFIG` explains a configuration of your own."
+            "\nWhere to begin:\n"
+            "  driftwatch run config/demo.toml     watches three simulated resonances\n"
+            "  driftwatch check config/demo.toml   explains a configuration\n"
+            "  driftwatch COMMAND --help           explains a command, with an example"
         )

@@ -5,7 +5,6 @@ from __future__ import annotations
 import math
 from typing import TYPE_CHECKING, Any
 
-from driftwatch.cli.view import figure
 from driftwatch.records import NS, time_text
 
 if TYPE_CHECKING:
@@ -26,7 +25,8 @@ def with_std(value: float | None, std: float | None) -> str:
         return NONE
     if std is None or not std > 0 or not math.isfinite(std):
         return f"{value:.6g}"
-    return figure(value, std)
+    places = decimals_of(std)
+    return f"{value:.{places}f} ± {std:.{places}f}"
 
 
 def with_interval(value: float | None, low: float | None, high: float | None) -> str:

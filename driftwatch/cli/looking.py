@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-import os
 import sys
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
+
+from driftwatch.cli.shared import drop_output
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Sequence
@@ -91,9 +92,7 @@ def quiet_pipe() -> Iterator[None]:
         yield
         sys.stdout.flush()
     except BrokenPipeError:
-        # What is left in the buffer must go somewhere when the interpreter flushes it.
-        with Path(os.devnull).open("wb") as nowhere:
-            os.dup2(nowhere.fileno(), sys.stdout.fileno())
+        drop_output()
         raise click.exceptions.Exit(0) from None
 
 

@@ -2,18 +2,27 @@
 
 from __future__ import annotations
 
-import signal
+import shlex
+import sys
 import uuid
-from collections.abc import Callable, Iterator
-from contextlib import contextmanager, nullcontext
+from contextlib import ExitStack
 from pathlib import Path
-from threading import Event
 from typing import TYPE_CHECKING
 
 import click
 
-from driftwatch.cli.shared import CAUTION, load_served, nothing_started, print_json, refuse_misfit, work_failed
-from driftwatch.cli.view import RunView
+from driftwatch.cli.progress import progress
+from driftwatch.cli.shared import (
+    CAUTION,
+    Output,
+    load_served,
+    nothing_started,
+    print_json,
+    refuse_misfit,
+    stopped_by_signal,
+    work_failed,
+)
+from driftwatch.cli.view import RunView, folded
 
 if TYPE_CHECKING:
     from driftwatch.config import Configuration
@@ -45,10 +54,11 @@ def command(
 
     Several recordings are one stream, in the order given, with gaps where their dates say so. Without --store the
     rows go into a new database in the current folder, named after the run; the configuration's own store is never
-    touched.
+    touched. Ctrl-C ends it early: what was read by then is stored, and the exit status is 1.
 
-    Example: driftwatch replay config/post-mortem.toml morning.wav noon.wav --start 2026-03-01T06:00:00Z
-    """
+    \b
+    Example: driftwatch replay config/post-mortem.toml before.wav during.wav --start 2026-03-01T06:00:00Z
+    """  # noqa: D301 - \b is click's mark for lines that stay as they are
     configuration = load_served(config, live=False)
     source = _opened(configuration, recordings, start)
     for warning in source.warnings:
@@ -86,46 +96,29 @@ def _replay(
 
     header = RunHeader(configuration.station.name, run, Origin.REPLAY, source.time_quality)
     station = Station(configuration, header, [source])
-    view = RunView(every_s=None)
-    stop = Event()
-    with nothing_started():
-        writer = Writer.open(store, header.station)
-        with writer, Publisher(publish) if publish else nullcontext() as publisher:
-            keeper = Keeper(writer, publisher, print_json if as_json else view.show)
-            with _stoppable(stop), _progress(source) as advance, work_failed():
-                replay(source, station, keeper, advance, stop.is_set)
+    view = RunView(((mode.channel, mode.name) for mode in configuration.mode), every_s=None)
+    with ExitStack() as opened:
+        with nothing_started():  # the port first: where it is taken, no database comes into being
+            publisher = opened.enter_context(Publisher(publish)) if publish else None
+            writer = opened.enter_context(Writer.open(store, header.station))
+        stop = opened.enter_context(stopped_by_signal())
+        output = Output(print_json if as_json else view.show, stop)
+        if not as_json:
+            view.begin()
+        bar = opened.enter_context(progress(source.length, source.rate_hz, shown=not (as_json and sys.stdout.isatty())))
+        with work_failed():
+            replay(source, station, Keeper(writer, publisher, output), bar, stop.is_set)
     if not as_json:
-        for line in view.summary():
-            click.echo(line)
-        click.echo(f"Stored in {writer.path}. To look into it: driftwatch readings --store {store}")
-        click.echo(CAUTION)
+        _close(view, store)
+    if stop.is_set() and not output.closed:
+        done = station.samples / source.rate_hz
+        raise click.ClickException(
+            f"interrupted after {done:.1f} s of signal; what was read is stored in {writer.path}"
+        )
 
 
-@contextmanager
-def _stoppable(stop: Event) -> Iterator[None]:
-    """Let SIGINT and SIGTERM end the replay in good order."""
-    before = {number: signal.signal(number, lambda *_: stop.set()) for number in (signal.SIGINT, signal.SIGTERM)}
-    try:
-        yield
-    finally:
-        for number, handler in before.items():
-            signal.signal(number, handler)
-
-
-@contextmanager
-def _progress(source: RecordingSource) -> Iterator[Callable[[int], None]]:
-    """Show a bar on standard error with the speed in times real time and the time left."""
-    from rich.console import Console
-    from rich.progress import BarColumn, Progress, ProgressColumn, Task, TextColumn, TimeRemainingColumn
-    from rich.text import Text
-
-    class Speed(ProgressColumn):
-        def render(self, task: Task) -> Text:
-            speed = task.finished_speed or task.speed
-            return Text("" if speed is None else f"{speed / source.rate_hz:.0f} x real time")
-
-    columns = (TextColumn("{task.percentage:3.0f} %"), BarColumn(), Speed(), TimeRemainingColumn(), TextColumn("left"))
-    console = Console(stderr=True)
-    with Progress(*columns, console=console, transient=True, disable=not console.is_terminal) as bar:
-        task = bar.add_task("replay", total=source.length)
-        yield lambda sample: bar.update(task, completed=sample)
+def _close(view: RunView, store: str) -> None:
+    for line in view.summary():
+        click.echo(line)
+    click.echo(f"What next:  {shlex.join(['driftwatch', 'readings', '--store', store, '--run', view.run[:8]])}")
+    click.echo(folded(CAUTION))

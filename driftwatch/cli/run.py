@@ -2,19 +2,32 @@
 
 from __future__ import annotations
 
-import signal
+import shlex
 import time
 import uuid
+from collections.abc import Iterator
+from contextlib import ExitStack, contextmanager
 from pathlib import Path
-from threading import Event
 from typing import TYPE_CHECKING
 
 import click
 
-from driftwatch.cli.shared import CAUTION, load_served, nothing_started, print_json, refuse, refuse_misfit, work_failed
-from driftwatch.cli.view import RunView
+from driftwatch.cli.shared import (
+    CAUTION,
+    Output,
+    load_served,
+    nothing_started,
+    print_json,
+    refuse,
+    refuse_misfit,
+    stopped_by_signal,
+    work_failed,
+)
+from driftwatch.cli.view import RunView, folded
 
 if TYPE_CHECKING:
+    from threading import Event
+
     from driftwatch.config import Configuration
     from driftwatch.stream.source import Source
 
@@ -39,10 +52,11 @@ def command(config: Path, store: str | None, publish: str | None, as_json: bool)
     source, pace = _opened(configuration)
     for warning in source.warnings:
         click.echo(f"Warning: {warning}", err=True)
-    stop = Event()
-    for number in (signal.SIGINT, signal.SIGTERM):
-        signal.signal(number, lambda *_: stop.set())
-    _run(configuration, source, pace, store, publish, as_json, stop)
+    view = RunView(((mode.channel, mode.name) for mode in configuration.mode), LINES_EVERY_S)
+    with stopped_by_signal() as stop:
+        _run(configuration, source, pace, store, publish, None if as_json else view, stop)
+    if not as_json:
+        _close(view, str(config), ["--config", str(config)] if store is None else ["--store", store])
 
 
 def _opened(configuration: Configuration) -> tuple[Source, float]:
@@ -72,9 +86,10 @@ def _run(
     pace: float,
     store: str | None,
     publish: str | None,
-    as_json: bool,
+    view: RunView | None,
     stop: Event,
 ) -> None:
+    """Run to the end; without a view print JSON."""
     from driftwatch.bus.publisher import Publisher
     from driftwatch.config import is_simulated
     from driftwatch.daemon.keeper import Keeper
@@ -87,42 +102,53 @@ def _run(
     origin = Origin.SIMULATED if is_simulated(configuration) else Origin.REPLAY
     header = RunHeader(configuration.station.name, str(uuid.uuid4()), origin, source.time_quality)
     station = Station(configuration, header, [source])
-    view = RunView(LINES_EVERY_S)
-    url = store or configuration.store.url
-    with (
-        nothing_started(),
-        Writer.open(url, header.station) as writer,
-        Publisher(publish or configuration.bus.publish) as publisher,
-    ):
-        _announce(configuration, url, publisher.endpoint)
-        keeper = Keeper(writer, publisher, print_json if as_json else view.show)
+    with ExitStack() as opened:
+        with nothing_started():  # the port first: where it is taken, no database comes into being
+            publisher = opened.enter_context(Publisher(publish or configuration.bus.publish))
+            if store is None:
+                opened.enter_context(_folder_of(configuration.store.url))
+            writer = opened.enter_context(Writer.open(store or configuration.store.url, header.station))
+        _announce(configuration, writer.path, publisher.endpoint)
+        if view:
+            view.begin()
+        keeper = Keeper(writer, publisher, Output(view.show if view else print_json, stop))
         pruner = Pruner(writer, configuration.store.keep_days, time.time_ns)
         live = LiveRun(source, station, keeper, pace=pace, publisher=publisher, chore=pruner.step)
         with work_failed():
             live.until(stop)
-    if not as_json:
-        _close(view, url, str(configuration.path))
 
 
-def _announce(configuration: Configuration, url: str, endpoint: str) -> None:
-    click.echo(
-        f"Watching {len(configuration.mode)} modes of {configuration.station.name}. "
-        f"Rows go to {url}, messages to {endpoint}. Ctrl-C ends it.",
-        err=True,
-    )
+@contextmanager
+def _folder_of(url: str) -> Iterator[None]:
+    """Make the folder of the configuration's own store; take it away again if nothing came into it."""
+    folder = Path(url.removeprefix("sqlite:///")).parent
+    missing = not folder.exists() and folder.parent.is_dir()
+    if missing:
+        folder.mkdir()
+    try:
+        yield
+    finally:
+        if missing and not any(folder.iterdir()):
+            folder.rmdir()
 
 
-def _close(view: RunView, url: str, config: str) -> None:
+def _announce(configuration: Configuration, store: Path, endpoint: str) -> None:
+    modes = len(configuration.mode)
+    click.echo(f"Watching {modes} mode{'s' if modes > 1 else ''} of {configuration.station.name}.", err=True)
+    click.echo(f"Rows go to {store}, messages to {endpoint}. Ctrl-C ends it.", err=True)
+
+
+def _close(view: RunView, config: str, store: list[str]) -> None:
     """Print the summary and what to type next."""
     click.echo("")
     for line in view.summary():
         click.echo(line)
     click.echo("What next:")
     for what, words in (
-        ("its figures, newest first", f"driftwatch readings --store {url} --run {view.run}"),
-        ("every run in the store", f"driftwatch runs --store {url}"),
-        ("what a configuration says and can resolve", f"driftwatch check {config}"),
-        ("a recording through the same watch", f"driftwatch replay {config} RECORDING"),
+        ("its figures", ["readings", *store, "--run", view.run[:8]]),
+        ("every run", ["runs", *store]),
+        ("its limits", ["check", config]),
+        ("a recording", ["replay", config, "RECORDING"]),
     ):
-        click.echo(f"  {words:<{72}}  {what}")
-    click.echo(CAUTION)
+        click.echo(f"  {what:<11}  {shlex.join(['driftwatch', *words])}")
+    click.echo(folded(CAUTION))

@@ -1,17 +1,19 @@
-"""What several commands do alike: read a configuration, print records, turn known errors into one line."""
+"""What several commands do alike: read a configuration, print records, end in good order, tell known errors."""
 
 from __future__ import annotations
 
+import os
+import signal
 import sys
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
+from pathlib import Path
+from threading import Event
 from typing import TYPE_CHECKING, NoReturn
 
 import click
 
 if TYPE_CHECKING:
-    from pathlib import Path
-
     from driftwatch.config import Configuration, Problem
     from driftwatch.records import Envelope
 
@@ -61,6 +63,50 @@ def print_json(envelopes: Sequence[Envelope]) -> None:
 
 
 @contextmanager
+def stopped_by_signal() -> Iterator[Event]:
+    """Give an event that SIGINT and SIGTERM set, so that the work ends in good order."""
+    stop = Event()
+    before = {number: signal.signal(number, lambda *_: stop.set()) for number in (signal.SIGINT, signal.SIGTERM)}
+    try:
+        yield stop
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, handler)
+
+
+class Output:
+    """What prints records, until whoever reads standard output has had enough.
+
+    Parameters
+    ----------
+    show
+        Prints a group of records.
+    stop
+        Set when standard output is closed, ``head`` perhaps: the work then ends in good order.
+    """
+
+    def __init__(self, show: Callable[[Sequence[Envelope]], None], stop: Event) -> None:
+        self._show = show
+        self._stop = stop
+        self.closed = False
+
+    def __call__(self, envelopes: Sequence[Envelope]) -> None:
+        """Print a group, or nothing any more."""
+        try:
+            self._show(envelopes)
+        except BrokenPipeError:
+            drop_output()
+            self.closed = True
+            self._stop.set()
+
+
+def drop_output() -> None:
+    """Send what is still printed nowhere; what is left in the buffer must go somewhere when the program ends."""
+    with Path(os.devnull).open("wb") as nowhere:
+        os.dup2(nowhere.fileno(), sys.stdout.fileno())
+
+
+@contextmanager
 def nothing_started() -> Iterator[None]:
     """Turn the known errors of opening things into exit status 2."""
     from driftwatch.bus.errors import BusError
@@ -78,10 +124,11 @@ def nothing_started() -> Iterator[None]:
 @contextmanager
 def work_failed() -> Iterator[None]:
     """Turn the known errors of work under way into one line and exit status 1."""
+    from driftwatch.bus.errors import BusError
     from driftwatch.store.errors import StoreError
     from driftwatch.stream.source import StreamError
 
     try:
         yield
-    except (StoreError, StreamError) as error:
+    except (BusError, StoreError, StreamError) as error:
         raise click.ClickException(str(error)) from error

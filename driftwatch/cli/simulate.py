@@ -5,13 +5,14 @@ from __future__ import annotations
 import json
 import signal
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
 
+from driftwatch.cli.progress import progress
 from driftwatch.cli.shared import refuse, work_failed
 
 if TYPE_CHECKING:
@@ -237,7 +238,7 @@ def _write(source: SimulatedSource, out: Path, subtype: str) -> Written:
     with _terminable(), work_failed(), whole(_truth_path(out)) as unfinished:
         truth = {"recording": out.name, "subtype": subtype, **truth_of(source)}
         unfinished.write_text(json.dumps(truth, indent=2) + "\n", encoding="utf-8")
-        with _progress(source.length) as advance:
+        with progress(source.length, source.rate_hz) as advance:
             return write_recording(source, out, subtype, advance)
 
 
@@ -249,19 +250,6 @@ def _terminable() -> Iterator[None]:
         yield
     finally:
         signal.signal(signal.SIGTERM, before)
-
-
-@contextmanager
-def _progress(length: int | None) -> Iterator[Callable[[int], None]]:
-    """Show a bar on standard error."""
-    from rich.console import Console
-    from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
-
-    columns = (TextColumn("{task.percentage:3.0f} %"), BarColumn(), TimeRemainingColumn(), TextColumn("left"))
-    console = Console(stderr=True)
-    with Progress(*columns, console=console, transient=True, disable=not console.is_terminal) as bar:
-        task = bar.add_task("simulate", total=length)
-        yield lambda sample: bar.update(task, completed=sample)
 
 
 def _tell(summary: dict[str, Any], as_json: bool) -> None:

@@ -2,45 +2,73 @@
 
 from __future__ import annotations
 
-import math
-from collections.abc import Sequence
+import re
+import textwrap
+from collections.abc import Iterable, Sequence
 
 import click
 
-from driftwatch.records import NS, Alert, AlertState, Envelope, Health, Phase, Track, TrackStatus, time_text
+from driftwatch.cli.figures import duration, moment, with_interval, with_std
+from driftwatch.records import NS, Alert, AlertState, Envelope, Fault, Health, Phase, Track, TrackStatus, time_text
+
+WIDTH = 110
+"""No line is wider; what is longer goes on in the next one."""
 
 NAME_WIDTH = 34
-"""Columns for the name of a mode."""
+"""Most columns for the name of a mode."""
+
+LEGEND = "Times are UTC, frequencies ± standard uncertainty, Q with its 95 % interval."
+
+_INDENT = " " * 10  # under the text, beside the time
+_VALUE = re.compile(r"(\d) (\S)")
 
 
-def figure(value: float, std: float) -> str:
-    """Return a value with its standard uncertainty, both to the uncertainty's second digit."""
-    if not (math.isfinite(value) and std > 0 and math.isfinite(std)):
-        return f"{value:g}"
-    decimals = max(0, 1 - math.floor(math.log10(std)))
-    return f"{value:.{decimals}f} ± {std:.{decimals}f}"
+def folded(text: str, indent: str = "") -> str:
+    """Return a text in lines of at most `WIDTH` columns, the second and later ones indented."""
+    joined = _VALUE.sub("\\1\N{NO-BREAK SPACE}\\2", text)  # a value and its unit stay on one line
+    folded = textwrap.fill(joined, WIDTH, subsequent_indent=indent, break_on_hyphens=False, replace_whitespace=False)
+    return folded.replace("\N{NO-BREAK SPACE}", " ")
 
 
-def mode_line(track: Track) -> str:
-    """Return one line about a mode."""
-    name = f"{track.channel} / {track.mode}".ljust(NAME_WIDTH)
-    if track.frequency_hz is None or track.frequency_std_hz is None or track.q is None:
-        return f"{name}  {track.status}{f' ({track.reason})' if track.reason else ''}"
-    parts = [
-        f"{figure(track.frequency_hz, track.frequency_std_hz):>17} Hz",
-        f"Q {track.q:.4g} ({track.q_low:.3g} to {track.q_high:.3g})".ljust(26),
-        f"{track.status}{f' ({track.reason})' if track.reason else ''}",
-    ]
-    return f"{name}  {'  '.join(parts)}"
+def mode_line(name: str, track: Track | None) -> str:
+    """Return one line about a mode; None: nothing is known of it yet."""
+    if track is None:
+        return f"{name}  no reading: less signal than a window"
+    status = f"{track.status}{f' ({track.reason})' if track.reason else ''}".replace("_", " ")
+    if track.frequency_hz is None:
+        return f"{name}  {status}"
+    frequency = with_std(track.frequency_hz, track.frequency_std_hz)
+    q = with_interval(track.q, track.q_low, track.q_high)
+    return f"{name}  {frequency:>19} Hz  Q {q:<22}  {status}"
 
 
 def alert_line(alert: Alert) -> str:
     """Return one line about a transition of an alert."""
     words = f"{alert.alert}: {alert.reason or alert.state}"
     if alert.state is alert.previous_state:
-        return f"{'can tell again' if alert.determinate else 'CANNOT TELL'}  {words}"
-    back = alert.state in (AlertState.NORMAL, AlertState.RETURNED_UNACKNOWLEDGED)
-    return f"{'back inside' if back else f'ALERT {alert.priority}'}  {words}"
+        return f"{alert.alert}: can tell again" if alert.determinate else f"CANNOT TELL  {words}"
+    return f"{'back inside' if _is_back(alert) else f'ALERT {alert.priority}'}  {words}"
+
+
+def health_line(health: Health) -> str:
+    """Return one line about a fault that begins or ends."""
+    where = health.channel or "the input"
+    fault = str(health.fault).replace("_", " ")
+    if health.phase is Phase.END:
+        return f"fault over  {where}: {fault}, after {duration(health.seconds)}"
+    return f"FAULT  {where}: {fault}: {health.detail or 'no more is known'}"
+
+
+def _is_back(alert: Alert) -> bool:
+    return alert.state in (AlertState.NORMAL, AlertState.RETURNED_UNACKNOWLEDGED)
+
+
+def _elided(name: str) -> str:
+    """Return a name no longer than `NAME_WIDTH`: both its ends tell more than its middle."""
+    if len(name) <= NAME_WIDTH:
+        return name
+    kept = NAME_WIDTH - 1
+    return f"{name[: kept // 2]}…{name[kept // 2 - kept :]}"
 
 
 class RunView:
@@ -48,19 +76,35 @@ class RunView:
 
     Parameters
     ----------
+    modes
+        Channel and mode of each line, in the order in which they are shown.
     every_s
         Stream time between two rounds of mode lines; None: no such lines.
     """
 
-    def __init__(self, every_s: float | None) -> None:
+    def __init__(self, modes: Iterable[tuple[str, str]], every_s: float | None) -> None:
+        names = {_key(channel, mode): _elided(f"{channel} / {mode}") for channel, mode in modes}
+        width = max(map(len, names.values()), default=0)
+        self._names = {key: name.ljust(width) for key, name in names.items()}
         self._every_ns = None if every_s is None else round(every_s * NS)
         self._due_ns: int | None = None
         self._tracks: dict[tuple[str, str], Track] = {}
+        self._told: set[str] = set()  # alerts of which something was known before
         self._standing: dict[str, Alert] = {}
-        self._raised = 0
+        self._raised = self._returned = 0
+        self._missing_s = 0.0
         self._first_ns: int | None = None
         self._last_ns = 0
         self.run = ""
+
+    @property
+    def seconds(self) -> float:
+        """Stream time from the first record to the last."""
+        return (self._last_ns - (self._last_ns if self._first_ns is None else self._first_ns)) / NS
+
+    def begin(self) -> None:
+        """Print what the figures mean."""
+        click.echo(LEGEND)
 
     def show(self, envelopes: Sequence[Envelope]) -> None:
         """Take a group of records and print what is worth a line."""
@@ -72,42 +116,59 @@ class RunView:
                 case Alert() as alert:
                     self._alert(alert, envelope.time_ns)
                 case Track() as track:
-                    self._tracks[track.channel, track.mode] = track
+                    self._tracks[_key(track.channel, track.mode)] = track
                 case Health() as health if health.phase is not Phase.CONTINUE:
-                    where = health.channel or "daemon"
-                    self._say(envelope.time_ns, f"{health.fault} {health.phase} on {where}: {health.detail}", "yellow")
+                    self._health(health, envelope.time_ns)
         self._round()
 
     def summary(self) -> list[str]:
         """Return the lines that close a run."""
-        seconds = (self._last_ns - (self._first_ns or self._last_ns)) / NS
-        lines = [f"Run {self.run}: {seconds:.1f} s of signal."]
-        lines += [f"  {mode_line(track)}" for track in self._tracks.values()]
-        unfollowed = [track for track in self._tracks.values() if track.status is TrackStatus.SEARCHING]
-        if unfollowed:
-            lines.append(f"  {len(unfollowed)} of {len(self._tracks)} modes were not found.")
-        lines.append(f"Alerts: {self._raised} raised, {len(self._standing)} standing.")
+        missing = f", {duration(self._missing_s)} of it missing" if self._missing_s else ""
+        lines = [f"Run {self.run}: {self.seconds:.1f} s from {moment(self._first_ns or 0)} on{missing}."]
+        lines += [f"  {line}" for line in self._mode_lines()]
+        unfound = [track for track in self._tracks.values() if track.status is TrackStatus.SEARCHING]
+        if unfound:
+            lines.append(f"  {len(unfound)} of {len(self._names)} modes were not found.")
+        lines.append(f"Alerts: {self._raised} raised, {self._returned} came back, {len(self._standing)} standing.")
         lines += [f"  {alert_line(alert)}" for alert in self._standing.values()]
-        return lines
+        return [folded(line, "    ") for line in lines]
 
     def _alert(self, alert: Alert, time_ns: int) -> None:
         moved = alert.state is not alert.previous_state
         fired = moved and alert.state is AlertState.UNACKNOWLEDGED
+        new, known = alert.alert not in self._told, alert.determinate
+        self._told.add(alert.alert)
+        if new and known and not moved:
+            return  # every alert can be told for a first time: no news
         self._raised += fired
-        if alert.state is AlertState.UNACKNOWLEDGED:
+        self._returned += moved and _is_back(alert)
+        if fired:
             self._standing[alert.alert] = alert
-        else:
+        elif _is_back(alert):
             self._standing.pop(alert.alert, None)
         self._say(time_ns, alert_line(alert), "red" if fired else "green" if moved else "yellow")
+
+    def _health(self, health: Health, time_ns: int) -> None:
+        if health.fault is Fault.GAP and health.phase is Phase.END:
+            self._missing_s += health.seconds
+        self._say(time_ns, health_line(health), "yellow")
 
     def _round(self) -> None:
         if self._every_ns is None or not self._tracks:
             return
         if self._due_ns is None or self._last_ns >= self._due_ns:
             self._due_ns = self._last_ns + self._every_ns
-            for track in self._tracks.values():
-                self._say(self._last_ns, mode_line(track))
+            for line in self._mode_lines():
+                self._say(self._last_ns, line)
+
+    def _mode_lines(self) -> list[str]:
+        return [mode_line(name, self._tracks.get(key)).rstrip() for key, name in self._names.items()]
 
     @staticmethod
     def _say(time_ns: int, text: str, colour: str | None = None) -> None:
-        click.echo(f"{time_text(time_ns)[11:19]}  {click.style(text, fg=colour, bold=colour == 'red')}")
+        lines = folded(f"{time_text(time_ns)[11:19]}  {text}", _INDENT)
+        click.echo(f"{lines[:10]}{click.style(lines[10:], fg=colour, bold=colour == 'red')}")
+
+
+def _key(channel: str, mode: str) -> tuple[str, str]:
+    return channel.casefold(), mode.casefold()  # names are unique without regard to case

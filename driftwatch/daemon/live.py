@@ -20,6 +20,9 @@ BLOCK_S = 0.1
 HEARTBEAT_S = 1.0
 """Time between two heartbeats, seconds."""
 
+LOOK_S = 0.05
+"""Longest wait between two looks at what is due, seconds: so often the keeper wants to be asked."""
+
 
 @dataclass(frozen=True, slots=True)
 class Clock:
@@ -106,7 +109,7 @@ class LiveRun:
             return not stop.is_set()
         due = self._began + (self._end_ns(item) - self._source.start_ns) / NS / self._pace
         while (left := due - self._clock.monotonic()) > 0:
-            if self._clock.wait(stop, min(left, HEARTBEAT_S / 10)):
+            if self._clock.wait(stop, min(left, LOOK_S)):
                 return False
             self._housekeeping()
         return not stop.is_set()
@@ -121,7 +124,7 @@ class LiveRun:
         self._keeper.flush_due(now)
         if now < self._beat_due:
             return
-        self._beat_due = now + HEARTBEAT_S
+        self._beat_due = max(self._beat_due + HEARTBEAT_S, now)  # late ones do not shift those that follow
         if self._publisher is not None:
             self._publisher.heartbeat(self._heartbeat(now))
         self._chore(now)

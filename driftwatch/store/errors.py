@@ -53,10 +53,13 @@ _REMEDIES = {
     "not a database": "the file is no SQLite database; name another file",
     "i/o error": "the disk does not answer as it should; check it and the file system",
     "unable to open": "check that the folder exists and may be written to",
+    "no such file": "see that its folder exists, or name a file in another",
+    "not a directory": "a part of its path is a file; name a file in a folder",
+    "permission denied": "change the permissions of its folder, or name a file in another",
 }
 
 
-def remedy_of(error: Exception) -> str:
+def remedy_of(error: object) -> str:
     """Return what a person can do about an error of the database library."""
     words = str(error).lower()
     return next((remedy for sign, remedy in _REMEDIES.items() if sign in words), "see the message for the cause")
@@ -70,5 +73,13 @@ def commit_failed(path: Path, error: Exception) -> CommitError:
 
 def unreachable(path: Path, error: Exception) -> StoreUnreachableError:
     """Translate an error of the system or the database library that kept a file from being opened."""
-    cause = getattr(error, "orig", None) or error
+    cause = getattr(error, "orig", None) or getattr(error, "strerror", None) or error
     return StoreUnreachableError(f"{path}: the database cannot be opened: {cause}; {remedy_of(cause)}")
+
+
+def file_gone(path: Path) -> CommitError:
+    """Return the error about a database that was taken away from under its writer."""
+    return CommitError(
+        f"{path}: nothing of this group was stored: the file was deleted, moved or replaced since it was opened; "
+        "expected to find it where it was; leave it there while it is written to, and begin again"
+    )

@@ -5,6 +5,7 @@ A file that is not ours is never changed: it is looked at without locks, journal
 
 from __future__ import annotations
 
+import errno
 import os
 import sqlite3
 from contextlib import closing
@@ -58,6 +59,27 @@ def refuse_foreign(path: Path) -> None:
             f"{path} belongs to another program (it holds {held} and the mark {mark:#x}, expected "
             f"{APPLICATION_ID:#x}); it was left as it is; name another file"
         )
+
+
+def refuse_read_only(path: Path) -> None:
+    """Raise when there is a file that may only be read: told now, before anything is made beside it.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When it may not be written to.
+    """
+    if path.exists() and not os.access(path, os.W_OK, effective_ids=os.access in os.supports_effective_ids):
+        raise unreachable(path, PermissionError(errno.EACCES, "readonly file"))
+
+
+def file_at(path: Path) -> tuple[int, int] | None:
+    """Return what tells a file from another that takes its place; None: there is none."""
+    try:
+        status = path.stat()
+    except OSError:
+        return None
+    return status.st_dev, status.st_ino
 
 
 def writing_engine(path: Path) -> Engine:

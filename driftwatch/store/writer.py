@@ -11,10 +11,10 @@ import sqlalchemy as sa
 from sqlalchemy.dialects import sqlite
 
 from driftwatch.records import KIND_OF, Alert
-from driftwatch.store.errors import StoreError, commit_failed, unreachable
+from driftwatch.store.errors import StoreError, commit_failed, file_gone, unreachable
 from driftwatch.store.location import database_path
 from driftwatch.store.lock import WriterLock
-from driftwatch.store.opening import migrate, refuse_foreign, writing_engine
+from driftwatch.store.opening import file_at, migrate, refuse_foreign, refuse_read_only, writing_engine
 from driftwatch.store.rows import HeaderKey, form_of, header_key
 from driftwatch.store.tables import HEADER, TABLES
 
@@ -57,6 +57,7 @@ class Writer:
         self._lock = lock
         self._clock = clock
         self._headers: dict[HeaderKey, int] = {}
+        self._file = file_at(path)
 
     @classmethod
     def open(cls, url: str | Path, station: str, clock: Callable[[], int] = time.time_ns) -> Writer:
@@ -76,6 +77,7 @@ class Writer:
         """
         path = database_path(str(url), Path.cwd())
         refuse_foreign(path)
+        refuse_read_only(path)
         lock = WriterLock(path, station)
         try:
             return cls(_prepared(path), path, lock, clock)
@@ -133,8 +135,11 @@ class Writer:
         Raises
         ------
         CommitError
+            At its begin, when the file is no longer where it was opened: what is written to a deleted file is lost.
             At its end or inside, when the database refuses.
         """
+        if file_at(self.path) != self._file:
+            raise file_gone(self.path)
         return _Transaction(self._connection, self.path, synchronous)
 
     def forget_headers(self) -> None:

@@ -89,7 +89,9 @@ def test_a_folder_is_no_database(tmp_path: Path) -> None:
 
 def test_a_missing_folder_is_named(tmp_path: Path) -> None:
     path = tmp_path / "none" / "a.db"
-    _untouched(tmp_path, lambda: Writer.open(path, "s"), StoreUnreachableError, "No such file or directory.*a.db")
+    _untouched(
+        tmp_path, lambda: Writer.open(path, "s"), StoreUnreachableError, "a.db.*No such file or directory; see that"
+    )
 
 
 @pytest.fixture
