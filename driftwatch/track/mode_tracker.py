@@ -78,7 +78,8 @@ class ModeTracker:
         self._lost_ns = round(lost_windows * window_s * NS)
         self._lost_decays = lost_windows
         self._silence_ns = round((silence_s + step_s) * NS)
-        self._status, self._reason = TrackStatus.SEARCHING, None  # type: TrackStatus, str | None
+        self._status = TrackStatus.SEARCHING
+        self._reason: str | None = None
         self._regime: str | None = None
         self._state: kalman.State | None = None
         self._noise = kalman.Noise(0.0, 0.0)

@@ -140,6 +140,24 @@ def test_a_step_is_followed_within_three_windows(follower, step_s, f, q):
     assert abs(math.log(point.q / q)) < 2.0 * point.q_std / point.q
 
 
+def test_two_outliers_with_a_good_reading_between_are_no_step(follower):
+    mode = follower(step_s=4.0)
+    mode.feed(20)
+    mode.feed(1, f=950.0)
+    mode.feed(1)
+    assert mode.feed(1, f=950.0).frequency_hz == pytest.approx(900.0, rel=1e-9)
+
+
+@pytest.mark.parametrize(("f", "q"), [(902.5, 40.0), (897.5, 40.0), (900.0, 50.0), (900.0, 32.0)])
+def test_a_step_too_small_for_the_gate_is_followed_in_a_fraction_of_the_memory(follower, f, q):
+    """2.8 standard deviations of a window: taken in within 30 s, where the memory alone would need over 100 s."""
+    mode = follower()
+    mode.feed(200)
+    point = mode.feed(30, f, q)
+    assert abs(point.frequency_hz - f) < 0.4
+    assert abs(math.log(point.q / q)) < 0.04
+
+
 def test_a_window_that_a_step_cut_in_two_is_not_taken_for_a_drift(follower):
     """First a reading half-way, then the new value: at every point the new value lies within 4 stated deviations."""
     mode = follower()
@@ -226,6 +244,24 @@ def test_a_mode_that_is_not_found_though_it_should_be_is_lost_after_five_windows
     assert point.frequency_hz is not None
 
 
+def test_a_mode_found_now_and_then_is_not_lost(follower):
+    mode = follower(step_s=4.0)
+    mode.feed(20)
+    for _ in range(10):
+        assert mode.miss(4, "no_mode").status is HELD
+        assert mode.feed(1).status is TRACKING
+
+
+def test_a_state_lost_too_long_ago_vouches_for_nothing(follower):
+    """A month after it was lost the frequency is no surer than the mode is wide: it takes two readings again."""
+    mode = follower(step_s=4.0)
+    mode.feed(50)
+    mode.miss(10, "no_mode")
+    mode.now_ns += 30 * 86_400 * NS
+    assert mode.feed(1).status is LOST
+    assert mode.feed(1).status is TRACKING
+
+
 @pytest.mark.parametrize("step_s", [1.0, 4.0])
 @pytest.mark.parametrize("f", [900.0, 930.0])
 def test_a_lost_mode_is_found_again_within_three_windows_wherever_it_is(follower, step_s, f):
@@ -303,6 +339,18 @@ def test_a_window_that_is_really_worse_weighs_less(follower):
         before = mode.feed(100)
         pulls.append(mode.feed(1, q=44.0, std_q=std_q).q - before.q)
     assert pulls[0] / pulls[1] == pytest.approx(9.0, rel=0.05)  # up to the gain itself, about a twenty-fifth
+
+
+def test_decays_among_windows_do_not_set_how_fast_a_mode_may_change(follower):
+    """Held for 200 s, ln q has walked by what the windows' scatter allows, 0.08^2 * 4 s / (25 * 4 s)^2 a second."""
+    mode = follower()
+    mode.feed(20)
+    for _ in range(50):
+        mode.feed(1)
+        before = mode.feed(1, std_f=1e-5, std_q=0.005, method=Method.RINGDOWN)
+    point = mode.miss(200, "unexcited")
+    walked = (point.q_std / point.q) ** 2 - (before.q_std / before.q) ** 2
+    assert walked == pytest.approx(200.0 * 0.08**2 * 4.0 / 100.0**2, rel=0.1)
 
 
 def test_the_interval_of_q_is_that_of_its_logarithm(follower):

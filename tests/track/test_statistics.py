@@ -84,8 +84,11 @@ def test_intervals_cover_again_three_windows_after_a_step(windows, shift):
 
 
 def test_readings_that_are_low_by_chance_weigh_no_more(windows):
-    """Ln q is biased by less than a fifth of its stated deviation although each reading's variance grows with its q."""
-    errors = last_errors(windows, 150)
+    """Ln q is biased by less than a fifth of its stated deviation although each reading's variance grows with its q.
+
+    Weighed by their own variances, readings of 25 % would pull the mean by 6 %: 1.2 stated deviations.
+    """
+    errors = last_errors(windows, 150, std_q=0.25)
     assert bias_ok(errors[:, 1], 0.2, ALPHA)
     assert bias_ok(errors[:, 0], 0.2, ALPHA)
 
