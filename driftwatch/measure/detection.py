@@ -6,21 +6,27 @@ Periodograms come here divided by their mean over the search band.
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from driftwatch.measure.whittle import FLOOR, LN_G, LN_P, TILT, WN, Array, Lines, Pools
 
 DETECTION_GAIN = 20.0
-"""Gain in log-likelihood over a floor alone from which on a window holds a mode."""
+"""Gain in log-likelihood over a floor alone from which on a window holds a mode.
+
+In noise, white or sloping by 6 dB/octave, P(gain > x) is near 0.06 n exp(-x) for n lines in the band: of 20,000
+windows of 641 lines 3 % pass 7.1, and the mean excess over that is 1.02 to 1.09 (bench ``falsestart``). Carried on to
+20 with that scale, 0.06 to 0.14 of the 648,000 windows of 30 days pass; with its upper confidence limit 0.8. A mode
+whose variance is four times the noise's in its band gains hundreds.
+"""
 
 _SECTIONS = 16  # of the band, whose least mean begins the search for the floor
-_CORE_SHARE = 0.63  # of a Lorentzian's power within 1.5 g of its middle
 
 
 def start(sums: Array, lines: Lines) -> Array:
     """Return where to begin the fit: the band's most conspicuous bump.
 
     Boxes of 2, 4, 8 ... lines are moved over the band; the fullest of each width is compared by the likelihood of
-    two levels, inside and outside, against one. The width comes from how the power grows with the box.
+    two levels, inside and outside, against one. The box that holds half of the best one's power gives place and width.
 
     Parameters
     ----------
@@ -40,17 +46,17 @@ def start(sums: Array, lines: Lines) -> Array:
     outside = np.maximum((count - full) / (count - widths), 1e-9)
     gain = -widths * np.log(inside) - (count - widths) * np.log(outside)
     best = np.argmax(gain, axis=1)[:, None]
-    width = widths[best[:, 0], None]
-    floor = np.minimum(_least_section(sums), 0.9)[:, None]
-    excess = np.take_along_axis(full, best, axis=1) - floor * width
-    g = 0.5 * lines.spacing * _half_width(widths, full - floor * widths, excess)
+    floor = np.minimum(_least_section(sums), 0.9)
+    excess = full - floor[:, None] * widths
+    whole = np.take_along_axis(excess, best, axis=1)
+    core = np.argmax(excess >= 0.5 * whole, axis=1)  # a Lorentzian has half its power within g of its middle
     theta = np.empty((sums.shape[0], 5))
-    middle = np.take_along_axis(place, best, axis=1) + 0.5 * (width - 1.0)
-    theta[:, WN] = lines.omega[0] + lines.spacing * middle[:, 0]
-    theta[:, LN_G] = np.log(g)
-    theta[:, LN_P] = np.log(np.maximum(excess[:, 0], 0.1) * lines.spacing / (2 * np.pi))
+    middle = np.take_along_axis(place, core[:, None], axis=1)[:, 0] + 0.5 * (widths[core] - 1.0)
+    theta[:, WN] = lines.omega[0] + lines.spacing * middle
+    theta[:, LN_G] = np.log(0.5 * lines.spacing * _half_width(widths, excess, whole, core))
+    theta[:, LN_P] = np.log(np.maximum(whole[:, 0], 0.1) * lines.spacing / (2 * np.pi))
     theta[:, TILT] = 0.0
-    theta[:, FLOOR] = np.log(np.maximum(floor[:, 0] - _tail(theta, lines), 0.1 * floor[:, 0]))
+    theta[:, FLOOR] = np.log(np.maximum(floor - _tail(theta, lines), 0.1 * floor))
     return theta
 
 
@@ -76,16 +82,14 @@ def _boxes(sums: Array) -> tuple[Array, Array, Array]:
     return np.array(widths, dtype=np.float64), full, place
 
 
-def _half_width(widths: Array, excess: Array, whole: Array) -> Array:
-    """Return the width in lines, shape (rows,), that holds about half of the excess `whole` of the best box."""
-    enough = excess >= 0.5 * whole
-    upper = np.argmax(enough, axis=1)
-    lower = np.maximum(upper - 1, 0)
-    high = np.take_along_axis(excess, upper[:, None], axis=1)[:, 0]
-    low = np.where(upper > 0, np.take_along_axis(excess, lower[:, None], axis=1)[:, 0], 0.0)
+def _half_width(widths: Array, excess: Array, whole: Array, core: NDArray[np.intp]) -> Array:
+    """Return the width in lines, shape (rows,), that holds half of the excess `whole`, interpolated below `core`."""
+    lower = np.maximum(core - 1, 0)
+    high = np.take_along_axis(excess, core[:, None], axis=1)[:, 0]
+    low = np.where(core > 0, np.take_along_axis(excess, lower[:, None], axis=1)[:, 0], 0.0)
     share = (0.5 * whole[:, 0] - low) / np.maximum(high - low, 1e-300)
-    under = np.where(upper > 0, widths[lower], 0.5 * widths[0])
-    return np.asarray(under + np.clip(share, 0.0, 1.0) * (widths[upper] - under), dtype=np.float64)
+    under = np.where(core > 0, widths[lower], 0.5 * widths[0])
+    return np.asarray(under + np.clip(share, 0.0, 1.0) * (widths[core] - under), dtype=np.float64)
 
 
 def _least_section(sums: Array) -> Array:
