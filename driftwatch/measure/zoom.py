@@ -19,7 +19,7 @@ The band edge is a cumulated Kaiser window: of all shapes of a given width its i
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import partial
 
@@ -120,39 +120,40 @@ class Zoom:
         """Longest wait from a window's last sample to its result, in seconds: one hop and the edge delay."""
         return (self.hop + self.edge) / self.rate_hz
 
-    def block(self, samples: NDArray[np.float32], index: int) -> list[NDArray[np.complex64]]:
-        """Return each band's baseband samples of block `index`.
+    def blocks(self, samples: NDArray[np.float32], index: int, count: int = 1) -> list[NDArray[np.complex64]]:
+        """Return each band's baseband samples of `count` blocks from block `index` on.
+
+        Several blocks at a time cost less than one by one, and give the same to the last bit: each is transformed by
+        itself.
 
         Parameters
         ----------
         samples
-            Shape (fft_length,), the stream's samples from ``index * hop - edge`` on.
+            Shape (fft_length + (count - 1) * hop,), the stream's samples from ``index * hop - edge`` on.
         index
-            Number of the block, from 0.
+            Number of the first block, from 0.
+        count
+            How many blocks.
 
         Returns
         -------
         list of complex64 arrays
-            Shape (hop / decimation,), for the stream's samples ``index * hop`` to ``(index + 1) * hop``.
+            Shape (count * hop / decimation,), for the stream's samples from ``index * hop`` on.
         """
-        spectrum = fft.rfft(samples)
-        start = index * self.hop - self.edge
-        return [part.take(spectrum, start, self.edge, self.hop) for part in self._slices]
+        rows = np.lib.stride_tricks.sliding_window_view(samples, self.fft_length)[:: self.hop]
+        if len(rows) != count:
+            raise ValueError(f"{len(samples)} samples hold {len(rows)} blocks; expected {count}")
+        spectra = fft.rfft(rows, axis=1)
+        starts = [number * self.hop - self.edge for number in range(index, index + count)]
+        return [part.take(spectra, starts, self.edge, self.hop) for part in self._slices]
 
     def stream(self, samples: NDArray[np.float32]) -> list[NDArray[np.complex64]]:
         """Return each band's baseband stream of a whole recording, taken as zero before and after it."""
-        blocks = [self.block(block, index) for index, block in enumerate(self._blocks(samples))]
-        return [
-            np.concatenate([block[i] for block in blocks])[: len(samples) // band.decimation]
-            for i, band in enumerate(self.bands)
-        ]
-
-    def _blocks(self, samples: NDArray[np.float32]) -> Iterator[NDArray[np.float32]]:
         count = -(-len(samples) // self.hop)
         padded = np.zeros(count * self.hop + 2 * self.edge, dtype=np.float32)
         padded[self.edge : self.edge + len(samples)] = samples
-        for index in range(count):
-            yield padded[index * self.hop : index * self.hop + self.fft_length]
+        streams = self.blocks(padded, 0, count)
+        return [stream[: len(samples) // band.decimation] for stream, band in zip(streams, self.bands, strict=True)]
 
 
 class _Slice:
@@ -174,28 +175,25 @@ class _Slice:
             window=max(1, round(request.window_s * rate_hz / decimation)),
             step=max(1, round(request.step_s * rate_hz / decimation)),
         )
-        offsets = np.arange(self.count) - self.count // 2
+        # line j of the short inverse stands for bin centre + j, and centre + j - count from the middle on
+        offsets = np.arange(self.count)
+        offsets[self.count - self.count // 2 :] -= self.count
         bins = self.centre + offsets
         inside = (bins > 0) & (bins < length // 2)
-        self.first = int(bins[inside][0])
-        self.last = int(bins[inside][-1]) + 1
-        self.into = slice(int(np.argmax(inside)), int(np.argmax(inside)) + self.last - self.first)
-        hz = bins[inside] * rate_hz / length
+        self.bins = np.where(inside, bins, 0)
+        hz = np.where(inside, bins, self.centre) * rate_hz / length
         shape = _edge((hz - (low - widths[0])) / widths[0]) * _edge(((high + widths[1]) - hz) / widths[1])
         velocity = (1j * hz / self.band.centre_hz) ** request.velocity_power
         # the factor 2 makes the analytic signal; dividing by the decimation keeps amplitudes over the shorter inverse
-        self.weight = np.asarray(2.0 / decimation * shape * velocity, dtype=np.complex64)
+        self.weight = np.asarray(2.0 / decimation * inside * shape * velocity, dtype=np.complex64)
 
-    def take(self, spectrum: NDArray[np.complex64], start: int, edge: int, hop: int) -> NDArray[np.complex64]:
-        turned = (self.centre * start) % self.length  # integer arithmetic: the phase is right for ever
-        phase = np.complex64(np.exp(-2j * np.pi * turned / self.length))
-        lines = np.zeros(self.count, dtype=np.complex64)
-        np.multiply(spectrum[self.first : self.last], self.weight, out=lines[self.into])
+    def take(self, spectra: NDArray[np.complex64], starts: Sequence[int], edge: int, hop: int) -> NDArray[np.complex64]:
+        """Return the joined baseband of blocks with these spectra that begin at these stream indices."""
+        turned = [(self.centre * start) % self.length for start in starts]  # integers: the phase is right for ever
+        phase = np.exp(-2j * np.pi / self.length * np.array(turned)).astype(np.complex64)
+        base = fft.ifft(spectra[:, self.bins] * self.weight, axis=1)
         step = self.band.decimation
-        half = self.count // 2
-        # line j of the slice stands for frequency centre + j - half: rotate by half so that 0 comes first
-        base = fft.ifft(np.concatenate((lines[half:], lines[:half])))
-        return np.asarray(base[edge // step : (edge + hop) // step] * phase, dtype=np.complex64)
+        return np.asarray((base[:, edge // step : (edge + hop) // step] * phase[:, None]).ravel(), dtype=np.complex64)
 
 
 def _check(rate_hz: int, request: BandRequest) -> None:

@@ -24,6 +24,9 @@ from driftwatch.records import Fault, Health, Phase, Track, sample_time_ns
 if TYPE_CHECKING:
     from driftwatch.config import ChannelConfig, ModeConfig
 
+MOST_SAMPLES = 1 << 20
+"""Samples transformed at a time: transforms side by side cost less, and these take some 30 MB."""
+
 
 class ChannelLine:
     """The pipeline of one channel.
@@ -88,7 +91,7 @@ class ChannelLine:
             )
         readings: list[Reading] = []
         if first_sample > self._position:
-            readings.extend(self._skip(first_sample, "gap"))
+            readings.extend(self._skip(first_sample))
         column = samples[:, self._input]
         for begin, end, finite in unfinite_runs(column):
             readings.extend(self._good(column[begin:end]) if finite else self._bad(end - begin))
@@ -121,11 +124,12 @@ class ChannelLine:
     def _advance(self) -> list[Reading]:
         """Zoom every block that is complete, then let the modes measure."""
         zoom = self._zoom
-        while (end := (self._block + 1) * zoom.hop + zoom.edge) <= self._raw.end:
-            streams = zoom.block(self._raw.view(end - zoom.fft_length, end), self._block)
-            for line, stream in zip(self._lines, streams, strict=True):
+        while (count := self._complete_blocks()) > 0:
+            first = self._block * zoom.hop - zoom.edge
+            samples = self._raw.view(first, first + zoom.fft_length + (count - 1) * zoom.hop)
+            for line, stream in zip(self._lines, zoom.blocks(samples, self._block, count), strict=True):
                 line.extend(stream)
-            self._block += 1
+            self._block += count
         readings = [
             reading for line in self._lines for reading in line.measure(self._raw, self._missing, self._position)
         ]
@@ -133,6 +137,12 @@ class ChannelLine:
         self._raw.forget(keep)
         self._missing.forget(keep)
         return readings
+
+    def _complete_blocks(self) -> int:
+        """Return how many blocks can be zoomed now, at most as many as fit into memory comfortably."""
+        zoom = self._zoom
+        beyond = self._raw.end - zoom.edge - self._block * zoom.hop
+        return min(beyond // zoom.hop, max(1, MOST_SAMPLES // zoom.fft_length))
 
     def _flush(self) -> list[Reading]:
         """Go on with zeros until everything up to the position is measured; the position stays."""
@@ -146,16 +156,21 @@ class ChannelLine:
 
     # ------------------------------------------------------------------------------------------ what is missing
 
-    def _skip(self, until: int, reason: str) -> list[Reading]:
-        """Pass over missing samples up to stream index `until`."""
-        self._missing.add(Missing(self._position, until, reason))
-        if until - self._position <= self._longest:
-            self._raw.append_zeros(until - self._position)
-            self._position = until
+    def _skip(self, until: int) -> list[Reading]:
+        """Pass over samples that never came, up to stream index `until`."""
+        count = until - self._position
+        if count <= self._longest:
+            self._zeros(count, "gap")
             return []
+        self._missing.add(Missing(self._position, until, "gap"))
         readings = self._flush()
         self._begin_at(until)
         return [Reading(min(reading.ready, until), reading.time_ns, reading.body) for reading in readings]
+
+    def _zeros(self, count: int, reason: str) -> None:
+        self._missing.add(Missing(self._position, self._position + count, reason))
+        self._raw.append_zeros(count)
+        self._position += count
 
     def _good(self, samples: NDArray[np.float32]) -> Iterator[Reading]:
         self._raw.append(samples)
@@ -168,7 +183,7 @@ class ChannelLine:
         first, end = self._position, self._position + count
         if self._unfinite.bad(first, end):
             yield self._unfinite_record(Phase.BEGIN, first, ready=first)
-        yield from self._skip(end, "not_finite")
+        self._zeros(count, "not_finite")
 
     def _unfinite_ends(self) -> Reading:
         end = self._unfinite.end

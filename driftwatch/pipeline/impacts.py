@@ -92,9 +92,13 @@ class Impacts:
         return new
 
     def _new(self, baseband: SampleBuffer[np.complex64], place: float) -> Impact:
-        doubtful = place < self._begin + self.before
-        power = 0.0 if doubtful else self._power_before(baseband, place)
-        impact = Impact(place, power, math.ceil(place) + 1, doubtful)
+        first = math.ceil(place) + 1
+        if self._impacts and self._impacts[-1].doubtful:
+            self._impacts[-1].settled = math.floor(place)
+        if place < self._begin + self.before:  # nothing before it to compare with
+            impact = Impact(place, 0.0, first, doubtful=True, settled=first + self._band.window)
+        else:
+            impact = Impact(place, self._power_before(baseband, place), first, doubtful=False)
         self._impacts.append(impact)
         return impact
 

@@ -173,8 +173,10 @@ class ModeLine:
             if end > self._baseband.end or end > self._impacts.settled_until:
                 return
             gaps = missing.within(extent.first_sample, extent.end)
-            if not gaps or gaps[0].first > extent.first_sample:  # a window that begins in a gap is not announced
-                yield self._window, gaps[0].reason if gaps else None
+            if not gaps:
+                yield self._window, None
+            elif gaps[0].reason != "gap" or gaps[0].first > extent.first_sample:
+                yield self._window, gaps[0].reason  # of windows that begin where nothing came, nothing is said
             self._window += 1
 
     def _cut_windows(self, position: int) -> Iterator[_Measured]:
@@ -230,10 +232,10 @@ class ModeLine:
 
     def _decay_end(self, impact: Impact) -> int | None:
         """Return the baseband index at which a decay is complete; None while that is not known."""
-        full = math.ceil(impact.onset) + self._band.window
+        end = math.ceil(impact.onset) + self._band.window
         if impact.settled is not None:
-            return min(full, impact.settled)
-        return full if full <= self._impacts.settled_until else None
+            end = min(end, impact.settled)
+        return end if end <= self._impacts.settled_until else None
 
     def _decay(
         self, impact: Impact, end: int, raw: SampleBuffer[np.float32], missing: MissingList, ready: int
