@@ -10,7 +10,8 @@ where a is the least-squares predictor of the row so far, or, during a free deca
 last samples alone. That leaves flat noise as it is (a = 0), whitens a resonant response, and follows the decay of the
 blow before. An onset is where the mean energy of e over the next W samples exceeds `THRESHOLD` times the usual one. Of
 Gaussian noise of any correlation the ratio has an exponential tail, so that the threshold keeps noise out for a month
-and more; a blow of 20 dB over the rms in the band raises it to about twice the threshold.
+and more. A blow of 20 dB over the rms in the band may pass it only just where the noise is flat and the decay as short
+as the band allows: so what exceeds `WATCH` is looked at again, as a decaying tone of any frequency in the band.
 
 Energies are kept in blocks of s samples. Rows are judged one by one: only elementwise operations and sums along a row,
 on real numbers, are used on many rows together, so a row's result has the same bits whatever rows are beside it.
@@ -28,12 +29,20 @@ Reals = NDArray[np.float64]
 THRESHOLD = 12.0
 """Mean energy of the innovations over the next W samples, over their usual one, that makes an onset."""
 
+WATCH = 6.0
+"""The same that makes an onset if the innovations then sound like a decaying tone."""
+
+GAIN = 32.0
+"""Gain in log-likelihood of a decaying tone that confirms such an onset."""
+
 _PAST = 24  # blocks from which the own predictor and the usual energy of the last samples come
 _AFTER = 3.0  # W, in reciprocal bandwidths
 _RING = 13.0  # how far the band edge's ringing reaches, in reciprocal bandwidths
+_DECAY = 4.0  # shortest time constant of a tone, in reciprocal bandwidths: six half-power widths a side
+_WIDENED = 1.25  # width of flat noise in the stream, its edges included, over that of the search band
 _STEP_SHARE = 0.1  # least power of a jump over the level just before it: a decay that is no pure exponential jitters
 _RING_FIRST_DB = 20.0  # by how much the ringing lies below the jump where it begins to be told apart
-_RING_LAST_DB = 90.0  # and where it ends
+_RING_LAST_DB = 55.0  # and where it ends
 _SOFT = 8.0  # blocks this many times above the row's usual level weigh less in its predictor
 _ALIEN = 100.0  # and this many times above hardly anything: they are a decay and its ringing, not the row
 _ABOVE = 4.0  # by how much the power of a free decay must stand above the row's usual level
@@ -64,11 +73,14 @@ class Detector:
         W, in blocks of s samples.
     ring
         How far the band edge's ringing reaches, baseband samples.
+    times
+        Samples in a reciprocal bandwidth.
     """
 
     stride: int
     future: int
     ring: int
+    times: float
 
     @property
     def before(self) -> int:
@@ -78,7 +90,12 @@ class Detector:
     @property
     def after(self) -> int:
         """Samples of context a row needs after its core."""
-        return (self.future + 1) * self.stride + self.ring
+        return (self.future + 1) * self.stride + self.ring + self.separation
+
+    @property
+    def separation(self) -> int:
+        """Samples by which two onsets lie apart at least."""
+        return 3 * self.stride
 
     def find(self, rows: NDArray[np.complex64]) -> list[list[Onset]]:
         """Return the onsets in the core of each row, in order of time.
@@ -87,7 +104,8 @@ class Detector:
         ----------
         rows
             Shape (rows, n): in each row `before` samples of context, the core, and `after` samples of context.
-            An onset belongs to the core by its highest innovation.
+            Onsets up to `separation` past the core's end are returned too, lest one at the seam of two cores be lost;
+            of two from successive cores that lie closer than `separation` one is a repetition (see `is_repetition`).
 
         Raises
         ------
@@ -101,25 +119,53 @@ class Detector:
         blocks = _Blocks(rows, self.stride, self.future)
         ratio = blocks.after / blocks.usual
         found: list[list[Onset]] = [[] for _ in range(rows.shape[0])]
-        for row in np.flatnonzero((ratio > THRESHOLD).any(axis=1)):
+        for row in np.flatnonzero((ratio > WATCH).any(axis=1)):
             found[row] = self._in_row(rows[row].astype(np.complex128), blocks, ratio[row], int(row))
         return found
+
+    def is_repetition(self, position: float, last: float | None) -> bool:
+        """Say whether an onset is the same as the last one of the core before, both counted from the same sample."""
+        return last is not None and position - last < self.separation
 
     def _in_row(self, y: NDArray[np.complex128], blocks: _Blocks, ratio: Reals, row: int) -> list[Onset]:
         s, n = self.stride, len(y)
         # An onset lies up to W after the first block that feels it.
         felt = np.concatenate((np.full(self.future, -np.inf), ratio))
-        strength = np.lib.stride_tricks.sliding_window_view(felt, self.future + 1).max(axis=1)
+        felt_by = np.lib.stride_tricks.sliding_window_view(felt, self.future + 1).max(axis=1)
         block = np.clip(np.arange(n) // s - blocks.first, 0, len(ratio) - 1)
         usual = blocks.usual[row][block]
         general = (blocks.predictor[0][row] + 1j * blocks.predictor[1][row])[block]
-        power, level = _innovations(y, s, general, usual)
-        near = (strength[block] > THRESHOLD) & (power > np.maximum(THRESHOLD * usual, _STEP_SHARE * level))
-        return [
-            Onset(_half_way(power, peak), math.sqrt(power[peak]), float(strength[block[peak]]))
-            for peak in _peaks(np.where(near, power, 0.0), 3 * s, self.ring)
-            if self.before <= peak < n - self.after
-        ]
+        a, power, level = _innovations(y, s, general, usual)
+        near = (felt_by[block] > WATCH) & (power > np.maximum(WATCH * usual, _STEP_SHARE * level))
+        onsets = []
+        for peak in _peaks(np.where(near, power, 0.0), self.separation, self.ring):
+            if not self.before <= peak < n - self.after + self.separation:
+                continue
+            strength = float(np.mean(power[peak : peak + self.future * s]) / usual[peak])
+            sure = strength > THRESHOLD or (strength > WATCH and self._gain(y, peak, a[peak], usual[peak]) > GAIN)
+            if sure:
+                onsets.append(Onset(_half_way(power, peak), math.sqrt(power[peak]), strength))
+        return onsets
+
+    def _gain(self, y: NDArray[np.complex128], peak: int, a: complex, usual: float) -> float:
+        """Highest gain of a tone that begins within a stride of the peak and decays as fast as a band may show.
+
+        The noise at each frequency is what the same tones find elsewhere in the row (the median, that other blows do
+        not raise it), or flat noise of the usual power, whichever is more.
+        """
+        s, length = self.stride, math.ceil(2.0 * _DECAY * self.times)
+        time = np.arange(length)
+        frequency = np.arange(-10, 11) / (16.0 * self.times)  # cycles a sample, a sixteenth of the band apart
+        tone = np.exp((2j * math.pi * frequency[:, None] - 1.0 / (_DECAY * self.times)) * time)
+        tone[:, s:] -= a * tone[:, :-s]
+        tone /= np.sqrt(np.sum(np.abs(tone) ** 2, axis=1))[:, None]
+        pieces = np.lib.stride_tricks.sliding_window_view(y[s:] - a * y[:-s], length)
+        power = np.abs(pieces @ tone.conj().T) ** 2
+        here = slice(peak - 2 * s, peak - s + 2)  # piece i begins at sample s + i
+        around = slice(max(0, peak - s - length), peak - s + 3 * length)
+        elsewhere = np.delete(power, around, axis=0)
+        noise = np.maximum(np.median(elsewhere, axis=0) / math.log(2.0), usual * self.times / _WIDENED)
+        return float(np.max(power[here] / noise))
 
 
 def detector(rate_hz: float, search_hz: tuple[float, float]) -> Detector:
@@ -129,7 +175,7 @@ def detector(rate_hz: float, search_hz: tuple[float, float]) -> Detector:
         raise ValueError(f"search band {search_hz} at a baseband rate of {rate_hz} Hz: expected 0 < width <= rate")
     times = rate_hz / width
     stride = math.ceil(times)
-    return Detector(stride, math.ceil(_AFTER * times / stride), math.ceil(_RING * times))
+    return Detector(stride, math.ceil(_AFTER * times / stride), math.ceil(_RING * times), times)
 
 
 class _Blocks:
@@ -211,8 +257,8 @@ def _harmonic(values: Reals) -> Reals:
 
 def _innovations(
     y: NDArray[np.complex128], s: int, general: NDArray[np.complex128], usual: Reals
-) -> tuple[Reals, Reals]:
-    """|e|^2 of each sample of one row, and the level just before it.
+) -> tuple[NDArray[np.complex128], Reals, Reals]:
+    """The predictor and |e|^2 of each sample of one row, and the level just before it.
 
     Where the last samples stand out of the usual and do not rise they are a free decay, and predict what follows
     better than the row does.
@@ -233,7 +279,7 @@ def _innovations(
     innovation[s:] = np.abs(y[s:] - a[s:] * y[:-s]) ** 2
     level = np.zeros_like(lagged)
     level[2 * s :] = (levels[s : len(y) - s] - levels[: len(y) - 2 * s]) / s
-    return innovation, level
+    return a, innovation, level
 
 
 def _left(window: tuple[Reals, Reals, Reals, Reals], a: tuple[Reals, Reals]) -> Reals:
