@@ -26,8 +26,8 @@ _VALUE = re.compile(r"(\d) (\S)")
 def folded(text: str, indent: str = "") -> str:
     """Return a text in lines of at most `WIDTH` columns, the second and later ones indented."""
     joined = _VALUE.sub("\\1\N{NO-BREAK SPACE}\\2", text)  # a value and its unit stay on one line
-    folded = textwrap.fill(joined, WIDTH, subsequent_indent=indent, break_on_hyphens=False, replace_whitespace=False)
-    return folded.replace("\N{NO-BREAK SPACE}", " ")
+    lines = textwrap.fill(joined, WIDTH, subsequent_indent=indent, break_on_hyphens=False, replace_whitespace=False)
+    return lines.replace("\N{NO-BREAK SPACE}", " ")
 
 
 def mode_line(name: str, track: Track | None) -> str:

@@ -39,13 +39,11 @@ def refuse_foreign(path: Path) -> None:
     """
     if path.is_dir():
         raise StoreUnreachableError(f"{path} is a folder; expected a database file; name a file in it")
-    if not path.exists():
+    if not path.exists() or _is_marked(path):
         return
     try:
         with closing(_connect(path, "immutable=1")) as connection:
             mark = connection.execute("PRAGMA application_id").fetchone()[0]
-            if mark == APPLICATION_ID:
-                return
             tables = [row[0] for row in connection.execute("SELECT name FROM sqlite_master WHERE type = 'table'")]
     except sqlite3.OperationalError as error:
         raise unreachable(path, error) from None
@@ -59,6 +57,20 @@ def refuse_foreign(path: Path) -> None:
             f"{path} belongs to another program (it holds {held} and the mark {mark:#x}, expected "
             f"{APPLICATION_ID:#x}); it was left as it is; name another file"
         )
+
+
+def _is_marked(path: Path) -> bool:
+    """Say whether a file's header is that of a database of ours.
+
+    The header alone is looked at (SQLite's file format, section 1.3), without the library: a file whose log was not
+    folded into it whole, since the disk was full or the writer was killed, looks damaged to whoever ignores the log.
+    """
+    try:
+        with path.open("rb") as file:
+            header = file.read(72)
+    except OSError as error:
+        raise unreachable(path, error) from None
+    return header[:16] == b"SQLite format 3\0" and int.from_bytes(header[68:72], "big") == APPLICATION_ID
 
 
 def refuse_read_only(path: Path) -> None:
