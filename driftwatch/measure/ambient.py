@@ -43,7 +43,7 @@ NARROWEST = 1.0
 _TILT_OCTAVE = 2.0  # standard deviation of the floor's slope: a power of frequency, 2 being 6 dB an octave
 _FLOOR_SPREAD = 2.5  # standard deviation of the log floor about its first guess,
 _FLOOR_SHARE = 0.5  # which is this much of the least section's mean: that still holds some of the resonance's tail
-_ROUGH, _FINE = 1.0, 0.05  # standard deviations: when to pool anew, when to stop
+_ROUGH, _FINE = 1.0, 0.07  # standard deviations: when to pool anew, when to stop
 _ROUGH_MOST, _FINE_MOST = 2, 10  # evaluations of the model
 _PLAIN = (1e-25, 1e30)  # mean of squares that single precision holds with all their spread
 _ROWS = 64  # windows at a time: their arrays stay in the cache
@@ -260,9 +260,11 @@ def _reasons(best: Optimum, gain: Array, fit_p: Array, lines: Lines) -> list[tup
         "not_resolved": g * lines.seconds < NARROWEST * np.pi,
         "misfit": fit_p < MISFIT_P,
     }
+    reasons: list[tuple[str, ...]] = [()] * wn.size
     table = np.stack(list(against.values()), axis=1)
-    words = tuple(against)
-    return [tuple(word for word, true in zip(words, row, strict=True) if true) for row in table.tolist()]
+    for row in np.flatnonzero(np.any(table, axis=1)).tolist():
+        reasons[row] = tuple(word for word, true in zip(against, table[row], strict=True) if true)
+    return reasons
 
 
 def _check(

@@ -25,7 +25,7 @@ _SECTIONS = 16  # of the band, whose least mean begins the search for the floor
 def start(sums: Array, lines: Lines) -> Array:
     """Return where to begin the fit: the band's most conspicuous bump.
 
-    Boxes of 2, 4, 8 ... lines are moved over the band; the fullest of each width is compared by the likelihood of
+    Boxes of 4, 8, 16 ... lines are moved over the band; the fullest of each width is compared by the likelihood of
     two levels, inside and outside, against one. The box that holds half of the best one's power gives place and width.
 
     Parameters
@@ -70,7 +70,7 @@ def _tail(theta: Array, lines: Lines) -> Array:
 def _boxes(sums: Array) -> tuple[Array, Array, Array]:
     """Return the widths, shape (widths,), and the fullest box of each: its sum and first line, shape (rows, widths)."""
     count = sums.shape[1] - 1
-    widths = [1 << k for k in range(1, count.bit_length()) if (1 << k) <= count // 2]
+    widths = [1 << k for k in range(2, count.bit_length()) if (1 << k) <= count // 2]
     full = np.empty((sums.shape[0], len(widths)))
     place = np.empty_like(full)
     for column, width in enumerate(widths):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Self
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,6 +11,7 @@ from numpy.typing import NDArray
 from driftwatch.measure.whittle import FLOOR, LN_G, WN, Array, Lines, Pools, expected
 
 _LARGEST_STEP = np.array([1.0, 0.7, 1.5, 1.5, 0.7])  # in units of g for wn, else in logarithms
+_PATIENCE, _DAMPING = 4, 0.6  # evaluations after which steps are shortened: a weak floor may overshoot for ever
 _SLACK = 1e-3  # loss of log-likelihood that is no reason to go back
 _DIAGONAL = np.arange(5)
 _ROUNDING = 1e-9  # share of the information that rounding may take: keeps a far-off trial's equations solvable
@@ -72,34 +74,85 @@ def maximise(theta: Array, pools: Pools, prior: Prior, lines: Lines, tolerance: 
     """
     result = _blank(theta, pools)
     limits = _limits(lines)
-    active = np.arange(theta.shape[0])
-    trial, best = theta, np.full(theta.shape[0], -np.inf)
-    base = step = np.zeros_like(theta)
-    for left in range(most - 1, -1, -1):
-        likelihood, model, score, information = _evaluate(trial, pools, prior)
-        better = likelihood >= best - _SLACK
-        newton, length = _newton(trial, prior, score, information)
-        worse = ~better[:, None]
-        step = np.where(worse, 0.25 * step, newton)
-        base = np.where(worse, base, trial)
-        best = np.where(better, likelihood, best)
-        trial = np.minimum(np.maximum(base + step, limits[0]), limits[1])
-        done = better & (length < tolerance**2)
-        ending = np.flatnonzero(done) if left else np.arange(done.size)
+    climb = _Climb.at(theta, pools, prior)
+    for evaluation in range(1, most + 1):
+        point = _evaluate(climb.trial, climb.pools, climb.prior)
+        done = climb.advance(point, limits, tolerance, _DAMPING if evaluation > _PATIENCE else 1.0)
+        last = evaluation == most or bool(np.all(done))
+        ending = np.arange(done.size) if last else np.flatnonzero(done)
         if ending.size:
-            rows = active[ending]
-            result.theta[rows] = trial[ending]
-            result.likelihood[rows] = best[ending]
-            result.information[rows] = information[ending]
-            result.g[rows] = np.exp(base[ending, LN_G])
-            result.model[rows] = model[ending]
-            result.converged[rows] = done[ending]
-            rest = np.flatnonzero(~done)
-            if not (left and rest.size):
-                break
-            active, trial, base, step, best = active[rest], trial[rest], base[rest], step[rest], best[rest]
-            pools, prior = pools.rows(rest), prior.rows(rest)
+            _keep(result, climb, point, done, ending)
+        if last:
+            break
+        if ending.size:
+            climb = climb.rows(np.flatnonzero(~done))
     return result
+
+
+@dataclass(frozen=True, slots=True)
+class _Point:
+    """The likelihood at a trial point of each row, the priors counted in."""
+
+    likelihood: Array  # shape (rows,): -sum K (ln E + I/E - 1)
+    model: Array  # shape (rows, pools)
+    score: Array  # shape (rows, 5): its gradient by wn/g, ln g, ln P, f, d
+    information: Array  # shape (rows, 5, 5)
+
+
+@dataclass(slots=True)
+class _Climb:
+    """Where the rows that are not done stand."""
+
+    active: NDArray[np.intp]  # their numbers
+    trial: Array  # parameters to look at next
+    base: Array  # the best so far
+    step: Array  # from there to the trial
+    best: Array  # log-likelihood at the base
+    pools: Pools
+    prior: Prior
+
+    @classmethod
+    def at(cls, theta: Array, pools: Pools, prior: Prior) -> Self:
+        """Begin."""
+        nothing = np.zeros_like(theta)
+        rows = theta.shape[0]
+        return cls(np.arange(rows), theta, nothing, nothing, np.full(rows, -np.inf), pools, prior)
+
+    def rows(self, index: NDArray[np.intp]) -> Self:
+        """Return some of the rows."""
+        return type(self)(
+            active=self.active[index],
+            trial=self.trial[index],
+            base=self.base[index],
+            step=self.step[index],
+            best=self.best[index],
+            pools=self.pools.rows(index),
+            prior=self.prior.rows(index),
+        )
+
+    def advance(
+        self, point: _Point, limits: tuple[Array, Array], tolerance: float, damping: float
+    ) -> NDArray[np.bool_]:
+        """Accept the trial or draw back from it, step on, and say which rows are done."""
+        better = point.likelihood >= self.best - _SLACK
+        newton, length = _newton(self.trial, self.prior, point)
+        worse = ~better[:, None]
+        self.step = np.where(worse, 0.25 * self.step, damping * newton)
+        self.base = np.where(worse, self.base, self.trial)
+        self.best = np.where(better, point.likelihood, self.best)
+        self.trial = np.minimum(np.maximum(self.base + self.step, limits[0]), limits[1])
+        return better & (length < tolerance**2)
+
+
+def _keep(result: Optimum, climb: _Climb, point: _Point, done: NDArray[np.bool_], ending: NDArray[np.intp]) -> None:
+    """Write down the rows that end here."""
+    rows = climb.active[ending]
+    result.theta[rows] = climb.trial[ending]
+    result.likelihood[rows] = climb.best[ending]
+    result.information[rows] = point.information[ending]
+    result.g[rows] = np.exp(climb.base[ending, LN_G])
+    result.model[rows] = point.model[ending]
+    result.converged[rows] = done[ending]
 
 
 def _blank(theta: Array, pools: Pools) -> Optimum:
@@ -114,11 +167,8 @@ def _blank(theta: Array, pools: Pools) -> Optimum:
     )
 
 
-def _evaluate(theta: Array, pools: Pools, prior: Prior) -> tuple[Array, Array, Array, Array]:
-    """Return the log-likelihood, the model, the gradient by wn/g, ln g, ln P, f, d, and the Fisher information.
-
-    The log-likelihood, -sum K (ln E + I/E - 1), and the rest count the prior in.
-    """
+def _evaluate(theta: Array, pools: Pools, prior: Prior) -> _Point:
+    """Return likelihood, model, gradient and Fisher information at `theta`."""
     model, columns = expected(theta, pools)
     np.subtract(pools.power, model, out=columns[5])
     columns *= pools.root_count / model
@@ -134,15 +184,16 @@ def _evaluate(theta: Array, pools: Pools, prior: Prior) -> tuple[Array, Array, A
     score = products[:, :5, 5].copy()
     score[:, FLOOR:] -= pull
     likelihood -= 0.5 * np.sum(away * pull, axis=1)
-    return likelihood, model, score, information
+    return _Point(likelihood, model, score, information)
 
 
-def _newton(theta: Array, prior: Prior, score: Array, information: Array) -> tuple[Array, Array]:
+def _newton(theta: Array, prior: Prior, point: _Point) -> tuple[Array, Array]:
     """Return the scoring step in the parameters' own units, and its squared length in standard deviations.
 
     Where the data pull the floor down to nothing its Fisher information vanishes before its gradient does; the
     gradient is then part of the curvature, for d2 ln E/df2 does not vanish in residuals of one sign.
     """
+    score, information = point.score, point.information
     curved = information.copy()
     pull = (theta[:, FLOOR] - prior.mean[:, 0]) * prior.precision[0]
     curved[:, FLOOR, FLOOR] += np.maximum(0.0, -(score[:, FLOOR] + pull))

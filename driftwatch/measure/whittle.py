@@ -146,13 +146,21 @@ def pool(sums: Array, lines: Lines, wn: Array, g: Array) -> Pools:
         Shape (rows,), rad/s and 1/s: where the pools are to be narrow, and how narrow.
     """
     edges = _edges(lines, wn, g)
-    count = np.diff(edges, axis=1).astype(np.float64)
-    power = np.diff(np.take_along_axis(sums, edges, axis=1), axis=1) / np.maximum(count, 1.0)
-    omega = lines.omega[0] + lines.spacing * (0.5 * (edges[:, 1:] + edges[:, :-1]) - 0.5)
-    place = (omega - lines.low) / (lines.high - lines.low)
-    colour = (omega / lines.centre) ** (2 * lines.velocity_power) if lines.velocity_power else np.ones_like(omega)
-    warp = 0.5 + 0.5 * np.square(wn[:, None] / omega)  # du/dw
-    spread = np.maximum(np.square(count) - 1.0, 0.0) * np.square(warp) * (lines.spacing**2 / 12)
+    begin, end = edges[:, :-1], edges[:, 1:]
+    count = (end - begin).astype(np.float64)
+    taken = np.take(sums, edges + sums.shape[1] * np.arange(sums.shape[0])[:, None])
+    power = (taken[:, 1:] - taken[:, :-1]) / np.maximum(count, 1.0)
+    omega = (begin + end) * (0.5 * lines.spacing) + (lines.omega[0] - 0.5 * lines.spacing)
+    upper = (omega - lines.low) * (1.0 / (lines.high - lines.low))
+    lower = 1.0 - upper
+    if lines.velocity_power:
+        colour = (omega / lines.centre) ** (2 * lines.velocity_power)
+        upper *= colour
+        lower *= colour
+    half_inverse = 0.5 / omega
+    warp = half_inverse * wn[:, None]  # du/dw = 1/2 + 2 (wn/2w)^2
+    warp = 0.5 + 2.0 * (warp * warp)
+    spread = np.maximum(count * count - 1.0, 0.0) * (warp * warp) * (lines.spacing**2 / 12)
     return Pools(
         seconds=lines.seconds,
         centre=lines.centre,
@@ -160,10 +168,10 @@ def pool(sums: Array, lines: Lines, wn: Array, g: Array) -> Pools:
         root_count=np.sqrt(count),
         power=power,
         half_omega=0.5 * omega,
-        half_inverse=0.5 / omega,
+        half_inverse=half_inverse,
         spread=spread,
-        upper=colour * place,
-        lower=colour * (1.0 - place),
+        upper=upper,
+        lower=lower,
     )
 
 
