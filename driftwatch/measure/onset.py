@@ -8,13 +8,14 @@ bandwidth, past which noise that is flat in the band is uncorrelated, a predicto
 
 where a is the least-squares predictor of the row so far, or, during a free decay that stands out of the row, of the
 last samples alone. That leaves flat noise as it is (a = 0), whitens a resonant response, and follows the decay of the
-blow before. An onset is where the mean energy of e over the next W samples exceeds `THRESHOLD` times the usual one. Of
-Gaussian noise of any correlation the ratio has an exponential tail, so that the threshold keeps noise out for a month
-and more. A blow of 20 dB over the rms in the band may pass it only just where the noise is flat and the decay as short
-as the band allows: so what exceeds `WATCH` is looked at again, as a decaying tone of any frequency in the band.
+blow before. First stage, on every sample: the mean energy of e over the next W samples against the usual one. Second
+stage, where the first exceeds `WATCH`: the gain in log-likelihood of a tone that begins there, over all frequencies of
+the band, decaying as fast as a band of six half-power widths to either side may show. Of Gaussian noise of any
+correlation either statistic has an exponential tail; together they keep it out for a month and more, while a blow of
+20 dB over the rms in the band raises the gain to about three times what is asked.
 
-Energies are kept in blocks of s samples. Rows are judged one by one: only elementwise operations and sums along a row,
-on real numbers, are used on many rows together, so a row's result has the same bits whatever rows are beside it.
+Energies are kept in blocks of 2 s samples. Rows are judged one by one: only elementwise operations and sums along a
+row, on real numbers, are used on many rows together, so a row's result has the same bits whatever rows are beside it.
 """
 
 from __future__ import annotations
@@ -26,25 +27,22 @@ import numpy as np
 from numpy.typing import NDArray
 
 Reals = NDArray[np.float64]
-THRESHOLD = 12.0
-"""Mean energy of the innovations over the next W samples, over their usual one, that makes an onset."""
-
-WATCH = 6.0
-"""The same that makes an onset if the innovations then sound like a decaying tone."""
+WATCH = 5.0
+"""First stage: mean energy of the innovations over the next W samples, over their usual one."""
 
 GAIN = 32.0
-"""Gain in log-likelihood of a decaying tone that confirms such an onset."""
+"""Second stage: gain in log-likelihood of a decaying tone that begins here."""
 
-_PAST = 24  # blocks from which the own predictor and the usual energy of the last samples come
-_AFTER = 3.0  # W, in reciprocal bandwidths
+_PAST = 12  # blocks from which the own predictor and the usual energy of the last samples come
+_FUTURE = 2  # W, in blocks
 _RING = 13.0  # how far the band edge's ringing reaches, in reciprocal bandwidths
 _DECAY = 4.0  # shortest time constant of a tone, in reciprocal bandwidths: six half-power widths a side
 _WIDENED = 1.25  # width of flat noise in the stream, its edges included, over that of the search band
 _STEP_SHARE = 0.1  # least power of a jump over the level just before it: a decay that is no pure exponential jitters
 _RING_FIRST_DB = 20.0  # by how much the ringing lies below the jump where it begins to be told apart
 _RING_LAST_DB = 55.0  # and where it ends
-_SOFT = 8.0  # blocks this many times above the row's usual level weigh less in its predictor
-_ALIEN = 100.0  # and this many times above hardly anything: they are a decay and its ringing, not the row
+_SOFT = 2.7  # blocks this many times above the row's usual level weigh less in its predictor
+_ALIEN = 33.0  # and this many times above hardly anything: they are a decay and its ringing, not the row
 _ABOVE = 4.0  # by how much the power of a free decay must stand above the row's usual level
 _FOLLOW = 0.5  # and what share of the energy its own predictor must leave
 _NEAR = 4  # strides from which the predictor in a free decay comes
@@ -58,7 +56,7 @@ class Onset:
 
     position: float  # baseband samples from the row's first
     jump: float  # amplitude of the jump, in the stream's unit
-    strength: float  # mean energy of the innovations just after it, over the usual one; above `THRESHOLD`
+    gain: float  # in log-likelihood, of a decaying tone that begins here; above `GAIN`
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,8 +67,6 @@ class Detector:
     ----------
     stride
         s, baseband samples.
-    future
-        W, in blocks of s samples.
     ring
         How far the band edge's ringing reaches, baseband samples.
     times
@@ -78,19 +74,18 @@ class Detector:
     """
 
     stride: int
-    future: int
     ring: int
     times: float
 
     @property
     def before(self) -> int:
         """Samples of context a row needs before its core."""
-        return (_PAST + 2) * self.stride + self.ring
+        return 2 * (_PAST + 2) * self.stride + self.ring
 
     @property
     def after(self) -> int:
         """Samples of context a row needs after its core."""
-        return (self.future + 1) * self.stride + self.ring + self.separation
+        return 2 * (_FUTURE + 1) * self.stride + self.ring + self.separation
 
     @property
     def separation(self) -> int:
@@ -116,7 +111,8 @@ class Detector:
             raise ValueError(
                 f"rows of shape {rows.shape}: expected two axes and more than {self.before + self.after} samples a row"
             )
-        blocks = _Blocks(rows, self.stride, self.future)
+        rows = np.ascontiguousarray(rows, dtype=np.complex64)
+        blocks = _Blocks(rows, self.stride, _FUTURE)
         ratio = blocks.after / blocks.usual
         found: list[list[Onset]] = [[] for _ in range(rows.shape[0])]
         for row in np.flatnonzero((ratio > WATCH).any(axis=1)):
@@ -130,28 +126,29 @@ class Detector:
     def _in_row(self, y: NDArray[np.complex128], blocks: _Blocks, ratio: Reals, row: int) -> list[Onset]:
         s, n = self.stride, len(y)
         # An onset lies up to W after the first block that feels it.
-        felt = np.concatenate((np.full(self.future, -np.inf), ratio))
-        felt_by = np.lib.stride_tricks.sliding_window_view(felt, self.future + 1).max(axis=1)
-        block = np.clip(np.arange(n) // s - blocks.first, 0, len(ratio) - 1)
+        felt = np.concatenate((np.full(_FUTURE, -np.inf), ratio))
+        felt_by = np.lib.stride_tricks.sliding_window_view(felt, _FUTURE + 1).max(axis=1)
+        block = np.clip(np.arange(n) // blocks.size - blocks.first, 0, len(ratio) - 1)
         usual = blocks.usual[row][block]
-        general = (blocks.predictor[0][row] + 1j * blocks.predictor[1][row])[block]
+        general = (blocks.predictor[0, row] + 1j * blocks.predictor[1, row])[block]
         a, power, level = _innovations(y, s, general, usual)
         near = (felt_by[block] > WATCH) & (power > np.maximum(WATCH * usual, _STEP_SHARE * level))
         onsets = []
         for peak in _peaks(np.where(near, power, 0.0), self.separation, self.ring):
             if not self.before <= peak < n - self.after + self.separation:
                 continue
-            strength = float(np.mean(power[peak : peak + self.future * s]) / usual[peak])
-            sure = strength > THRESHOLD or (strength > WATCH and self._gain(y, peak, a[peak], usual[peak]) > GAIN)
-            if sure:
-                onsets.append(Onset(_half_way(power, peak), math.sqrt(power[peak]), strength))
+            if np.mean(power[peak : peak + _FUTURE * blocks.size]) < WATCH * usual[peak]:
+                continue
+            gain = self._gain(y, peak, complex(a[peak]), float(usual[peak]))
+            if gain > GAIN:
+                onsets.append(Onset(_half_way(power, peak), math.sqrt(power[peak]), gain))
         return onsets
 
     def _gain(self, y: NDArray[np.complex128], peak: int, a: complex, usual: float) -> float:
         """Highest gain of a tone that begins within a stride of the peak and decays as fast as a band may show.
 
-        The noise at each frequency is what the same tones find elsewhere in the row (the median, that other blows do
-        not raise it), or flat noise of the usual power, whichever is more.
+        The noise at each frequency is what the same tones find elsewhere in the row (the lower quartile, that other
+        blows do not raise it), or flat noise of the usual power, whichever is more.
         """
         s, length = self.stride, math.ceil(2.0 * _DECAY * self.times)
         time = np.arange(length)
@@ -164,7 +161,7 @@ class Detector:
         here = slice(peak - 2 * s, peak - s + 2)  # piece i begins at sample s + i
         around = slice(max(0, peak - s - length), peak - s + 3 * length)
         elsewhere = np.delete(power, around, axis=0)
-        noise = np.maximum(np.median(elsewhere, axis=0) / math.log(2.0), usual * self.times / _WIDENED)
+        noise = np.maximum(np.quantile(elsewhere, 0.25, axis=0) / math.log(4.0 / 3.0), usual * self.times / _WIDENED)
         return float(np.max(power[here] / noise))
 
 
@@ -175,84 +172,98 @@ def detector(rate_hz: float, search_hz: tuple[float, float]) -> Detector:
         raise ValueError(f"search band {search_hz} at a baseband rate of {rate_hz} Hz: expected 0 < width <= rate")
     times = rate_hz / width
     stride = math.ceil(times)
-    return Detector(stride, math.ceil(_AFTER * times / stride), math.ceil(_RING * times), times)
+    return Detector(stride, math.ceil(_RING * times), times)
 
 
 class _Blocks:
-    """Energies of the innovations of all rows in blocks of a stride, each a mean per sample.
+    """Energies of the innovations of all rows in blocks of two strides, each a mean per sample.
 
     Arrays have the shape (rows, columns); column i stands for block ``first + i`` of each row.
     """
 
     def __init__(self, rows: NDArray[np.complex64], stride: int, future: int) -> None:
-        count = rows.shape[1] // stride
-        self.first = _PAST + 2  # one block of lag, one of gap
-        self.columns = count - self.first - future + 1
-        real, imaginary = _as_reals(rows[:, : count * stride])
-        s = stride
-        power = _block_mean(real * real + imaginary * imaginary, s)
-        # lagged product y[n] conj(y[n - s]) of each block with the one before; the first block has none
-        cross = (
-            _block_mean(real[:, s:] * real[:, :-s] + imaginary[:, s:] * imaginary[:, :-s], s),
-            _block_mean(imaginary[:, s:] * real[:, :-s] - real[:, s:] * imaginary[:, :-s], s),
-        )
-        self._sums = [_running_sum(part) for part in (power, *cross)]
-        self._choose(power, cross)
-        self.after = self._innovation_energy(0, future)
-        half = _PAST // 2
+        self.size = 2 * stride
+        self.first = _PAST + 2  # the first block has no lagged product, and one block is the gap
+        moments = _moments(rows, stride)
+        self.columns = moments.shape[2] - self.first - future + 1
+        self._sums = np.zeros((*moments.shape[:2], moments.shape[2] + 1))
+        np.cumsum(moments, axis=2, out=self._sums[:, :, 1:])
+        self._choose(moments)
+        self.after = _left(self._window(0, future), self.predictor)
         # The quieter half of the past: so an onset just before hides no other.
-        lately = np.minimum(self._innovation_energy(half + 1, half), self._innovation_energy(_PAST + 1, half))
-        rounding = 1e-12 * np.max(power, axis=1) + np.finfo(np.float64).tiny  # of single precision
-        self.usual = np.maximum(np.maximum(lately, self._so_far()), rounding[:, None])
+        half = _PAST // 2
+        later = _left(self._window(half + 1, half), self.predictor)
+        earlier = _left(self._window(_PAST + 1, half), self.predictor)
+        rounding = 1e-12 * np.max(moments[0], axis=1) + _TINY  # of single precision
+        # Harmonic mean of what the general predictor left so far: earlier onsets hardly count.
+        so_far = _harmonic(self._ordinary)
+        self.usual = np.maximum(np.maximum(np.minimum(later, earlier), so_far), rounding[:, None])
 
-    def _choose(self, power: Reals, cross: tuple[Reals, Reals]) -> None:
+    def _window(self, back: int, length: int) -> Reals:
+        """Means of the moments over `length` blocks, begun `back` before each; shape (4, rows, columns)."""
+        start, stop = self.first - back, self.first - back + length
+        total = self._sums[:, :, stop : stop + self.columns] - self._sums[:, :, start : start + self.columns]
+        total *= 1.0 / length
+        return total
+
+    def _choose(self, moments: Reals) -> None:
         """The predictor of the row so far; or of the last samples, where they are a free decay that stands out."""
+        smooth = moments[0, :, 2:] + moments[0, :, 1:-1] + moments[0, :, :-2]  # over the block and both neighbours
+        usual = _harmonic(smooth)
+        general = self._general(moments, smooth, usual)
         window = self._window(_PAST + 1, _PAST)
-        general = self._general(power, cross)
-        scale = 1.0 / np.maximum(window[1], _TINY)
-        own = (window[2] * scale, window[3] * scale)
-        level = window[0]
+        level, lagged = window[0], window[1]
         self._ordinary = _left(window, general)
-        steady = (level > _ABOVE * _harmonic(level)) & (level < _RISING * window[1])
-        follow = steady & (_left(window, own) < _FOLLOW * self._ordinary)
-        self.predictor = (np.where(follow, own[0], general[0]), np.where(follow, own[1], general[1]))
-        self.recent = level
+        own = window[2:] * (1.0 / (lagged + _TINY))
+        now = usual[:, self.first - 4 : self.first - 4 + self.columns] * (_ABOVE / 3.0)
+        follow = (level > now) & (level < _RISING * lagged)
+        follow &= _left(window, own) < _FOLLOW * self._ordinary
+        self.predictor = np.where(follow, own, general)
 
-    def _general(self, power: Reals, cross: tuple[Reals, Reals]) -> tuple[Reals, Reals]:
-        """Least-squares predictor of all blocks so far but the last; blocks weigh alike whatever their level."""
-        smooth = power[:, 4:] + power[:, 3:-1] + power[:, 2:-2] + power[:, 1:-3] + power[:, :-4]
-        usual = _harmonic(smooth) + _TINY
-        excess = np.minimum(smooth / (_ALIEN * usual), 1e9)
-        weight = 1.0 / ((smooth + _SOFT * usual) * (1.0 + excess * excess))
-        columns = slice(self.first - 5, self.first - 5 + self.columns)
-        lagged = np.cumsum(weight * power[:, 3:-1], axis=1)[:, columns]
-        scale = 1.0 / np.maximum(lagged, _TINY)
-        real = np.cumsum(weight * cross[0][:, 3:], axis=1)[:, columns] * scale
-        imaginary = np.cumsum(weight * cross[1][:, 3:], axis=1)[:, columns] * scale
-        return real, imaginary
+    def _general(self, moments: Reals, smooth: Reals, usual: Reals) -> Reals:
+        """Least-squares predictor of all blocks up to the gap; loud blocks weigh little more than others."""
+        excess = smooth * (1.0 / _ALIEN) / usual
+        np.minimum(excess, 1e9, out=excess)
+        excess *= excess
+        excess += 1.0
+        excess *= smooth + _SOFT * usual
+        sums = np.cumsum(moments[1:, :, 1:-1] / excess, axis=2)
+        # smooth begins with block 1 and reaches one block on: the last that ends before the gap is first - 3
+        sums = sums[:, :, self.first - 4 : self.first - 4 + self.columns]
+        return np.asarray(sums[1:] * (1.0 / (sums[0] + _TINY)))
 
-    def _window(self, back: int, length: int) -> tuple[Reals, Reals, Reals, Reals]:
-        """Mean over `length` blocks, begun `back` before each, of |y|^2, |y(-s)|^2, and the lagged product."""
-        begin = self.first - back
 
-        def mean(sums: Reals, start: int) -> Reals:
-            stop = start + length
-            return (sums[:, stop : stop + self.columns] - sums[:, start : start + self.columns]) * (1.0 / length)
+def _moments(rows: NDArray[np.complex64], s: int) -> Reals:
+    """Means over blocks of two strides of |y|^2, |y(-s)|^2 and y conj(y(-s)), real and imaginary.
 
-        power, real, imaginary = self._sums
-        return mean(power, begin), mean(power, begin - 1), mean(real, begin - 1), mean(imaginary, begin - 1)
+    Shape (4, rows, blocks). The first block has no lagged product and repeats its own power as the lagged one.
+    """
+    count = rows.shape[1] // (2 * s)
+    parts = rows[:, : count * 2 * s].view(np.float32).reshape(rows.shape[0], -1, 2).astype(np.float64)
+    real, imaginary = parts[:, :, 0], parts[:, :, 1]
+    power = _stride_sum(real * real + imaginary * imaginary, s)
+    cross = np.zeros((2, rows.shape[0], 2 * count))
+    cross[0, :, 1:] = _stride_sum(real[:, s:] * real[:, :-s] + imaginary[:, s:] * imaginary[:, :-s], s)
+    cross[1, :, 1:] = _stride_sum(imaginary[:, s:] * real[:, :-s] - real[:, s:] * imaginary[:, :-s], s)
+    moments = np.empty((4, rows.shape[0], count))
+    np.add(power[:, ::2], power[:, 1::2], out=moments[0])
+    moments[1, :, 0] = moments[0, :, 0]
+    np.add(power[:, 1:-1:2], power[:, 2::2], out=moments[1, :, 1:])
+    np.add(cross[:, :, ::2], cross[:, :, 1::2], out=moments[2:])
+    moments *= 1.0 / (2 * s)
+    return moments
 
-    def _innovation_energy(self, back: int, length: int) -> Reals:
-        return _left(self._window(back, length), self.predictor)
 
-    def _so_far(self) -> Reals:
-        """Harmonic mean of what the general predictor left so far: earlier onsets hardly count."""
-        return _harmonic(self._ordinary)
+def _stride_sum(values: Reals, stride: int) -> Reals:
+    total = values[:, ::stride].copy()
+    for offset in range(1, stride):
+        total += values[:, offset::stride]
+    return total
 
 
 def _harmonic(values: Reals) -> Reals:
     """Harmonic mean of the values up to each."""
-    return np.arange(1, values.shape[1] + 1) / np.cumsum(1.0 / np.maximum(values, _TINY), axis=1)
+    return np.arange(1.0, values.shape[1] + 1.0) / np.cumsum(1.0 / (values + _TINY), axis=1)
 
 
 def _innovations(
@@ -282,27 +293,16 @@ def _innovations(
     return a, innovation, level
 
 
-def _left(window: tuple[Reals, Reals, Reals, Reals], a: tuple[Reals, Reals]) -> Reals:
-    """Mean of |y - a y(-s)|^2."""
-    power, lagged, real, imaginary = window
-    return power + (a[0] * a[0] + a[1] * a[1]) * lagged - 2.0 * (a[0] * real + a[1] * imaginary)
-
-
-def _as_reals(rows: NDArray[np.complex64]) -> tuple[Reals, Reals]:
-    return rows.real.astype(np.float64), rows.imag.astype(np.float64)
-
-
-def _block_mean(values: Reals, stride: int) -> Reals:
-    total = values[:, ::stride].copy()
-    for offset in range(1, stride):
-        total += values[:, offset::stride]
-    return total * (1.0 / stride)
-
-
-def _running_sum(values: Reals) -> Reals:
-    sums = np.zeros((values.shape[0], values.shape[1] + 1))
-    np.cumsum(values, axis=1, out=sums[:, 1:])
-    return sums
+def _left(window: Reals, a: Reals) -> Reals:
+    """Mean of |y - a y(-s)|^2, from the moments of a window and the predictor's real and imaginary part."""
+    square = a * a
+    left = (square[0] + square[1]) * window[1]
+    product = a * window[2:]
+    product[0] += product[1]
+    product[0] *= 2.0
+    left += window[0]
+    left -= product[0]
+    return np.asarray(left)
 
 
 def _peaks(values: Reals, near: int, ring: int) -> list[int]:
