@@ -15,7 +15,7 @@ DETECTION_GAIN = 20.0
 
 In noise, white or sloping by 6 dB/octave, P(gain > x) is near 0.06 n exp(-x) for n lines in the band: of 20,000
 windows of 641 lines 3 % pass 7.1, and the mean excess over that is 1.02 to 1.09 (bench ``falsestart``). Carried on to
-20 with that scale, 0.06 to 0.14 of the 648,000 windows of 30 days pass; with its upper confidence limit 0.8. A mode
+20 with that scale, 0.07 to 0.14 of the 648,000 windows of 30 days pass; with its upper confidence limit 0.8. A mode
 whose variance is four times the noise's in its band gains hundreds.
 """
 
