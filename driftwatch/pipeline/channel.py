@@ -24,8 +24,8 @@ from driftwatch.records import Fault, Health, Phase, Track, sample_time_ns
 if TYPE_CHECKING:
     from driftwatch.config import ChannelConfig, ModeConfig
 
-MOST_SAMPLES = 1 << 20
-"""Samples transformed at a time: transforms side by side cost less, and these take some 30 MB."""
+MOST_BLOCKS = 16
+"""Blocks transformed at a time: side by side they cost less, and memory grows with them."""
 
 
 class ChannelLine:
@@ -139,10 +139,10 @@ class ChannelLine:
         return readings
 
     def _complete_blocks(self) -> int:
-        """Return how many blocks can be zoomed now, at most as many as fit into memory comfortably."""
+        """Return how many blocks can be zoomed now, at most `MOST_BLOCKS`."""
         zoom = self._zoom
         beyond = self._raw.end - zoom.edge - self._block * zoom.hop
-        return min(beyond // zoom.hop, max(1, MOST_SAMPLES // zoom.fft_length))
+        return min(beyond // zoom.hop, MOST_BLOCKS)
 
     def _flush(self) -> list[Reading]:
         """Go on with zeros until everything up to the position is measured; the position stays."""

@@ -23,6 +23,9 @@ SETTLED = 4.0
 """A decay is over when the power has come down to so many times the mean power before its onset: random response
 alone is stronger for one fiftieth of the time."""
 
+FALL = 10.0
+"""Power at the begin of a decay over that of its last quarter, at least, where only the decay can prove the onset."""
+
 
 @dataclass(slots=True)
 class Impact:
@@ -104,7 +107,7 @@ class Impacts:
 
     def _is_edge_of_gap(self, place: float, missing: MissingList) -> bool:
         """Say whether the edge of a gap, filled with zeros, may look like an onset here."""
-        first, end = math.floor(place) - self.before, math.ceil(place) + self._detector.future
+        first, end = math.floor(place) - self.before, math.ceil(place) + self.after
         step = self._band.decimation
         return any(run.end > self._begin * step for run in missing.within(first * step, end * step))
 
@@ -119,6 +122,15 @@ class Impacts:
         length = self.before + self._segment + self.after
         windows = np.lib.stride_tricks.sliding_window_view(stretch, length)[:: self._segment]
         return np.ascontiguousarray(windows[:count])
+
+    def falls(self, impact: Impact, baseband: SampleBuffer[np.complex64], end: int) -> bool:
+        """Say whether the power from an onset on falls by `FALL` or more up to baseband index `end`."""
+        first = math.floor(impact.onset)
+        if end - first < 4 * self._chunk:
+            return False
+        head = baseband.view(first, first + self._chunk)
+        tail = baseband.view(end - (end - first) // 4, end)
+        return bool(np.vdot(head, head).real / len(head) >= FALL * np.vdot(tail, tail).real / len(tail))
 
     def within(self, first: int, end: int) -> bool:
         """Say whether an impact disturbs the baseband from `first` to before `end`."""

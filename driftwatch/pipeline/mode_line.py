@@ -241,6 +241,8 @@ class ModeLine:
         self, impact: Impact, end: int, raw: SampleBuffer[np.float32], missing: MissingList, ready: int
     ) -> Iterator[_Measured]:
         """Yield the measurement of a decay up to stream index `end`; none where the samples only begin there."""
+        if impact.doubtful and not self._impacts.falls(impact, self._baseband, end // self._band.decimation):
+            return
         onset = impact.onset * self._band.decimation
         first = max(round(onset) - self._run_up, raw.kept)
         for gap in missing.within(first, end):

@@ -8,6 +8,7 @@ import sys
 import time
 
 import click
+
 from benchmarks.bars import FAMILY_BENCH, Row, Size
 
 NAMES = ("ambient", "ringdown", "falsestart", "speed", "memory")

@@ -10,6 +10,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import soundfile
+
 from benchmarks.bars import Row, Size
 from benchmarks.scene import RATE_HZ, SCENE_CONFIG, scene
 

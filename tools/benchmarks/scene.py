@@ -3,15 +3,14 @@
 from __future__ import annotations
 
 import numpy as np
-from numpy.typing import NDArray
-
 from driftwatch.stream.resonator import free_decay, resonator_response
+from numpy.typing import NDArray
 
 RATE_HZ = 48_000
 MODES = (("low", 180.0, 25.0, 30.0), ("middle", 900.0, 40.0, 80.0), ("high", 2400.0, 150.0, 60.0))
 """Name, natural frequency in Hz, Q, and half the search band in Hz."""
 
-IMPACT_EVERY_S = 30.0
+IMPACT_EVERY_S = 60.0
 
 
 def _mode_text(name: str, frequency_hz: float, half_hz: float) -> str:
