@@ -11,7 +11,6 @@ and a smooth background in the bins are tried in a fixed order, and the first th
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -41,9 +40,18 @@ SHORTEST = 0.5
 """Time constants that a record must show at least."""
 
 MISFIT_P = 0.01
-"""p-value of the residual test below which a cut is given up for the next."""
+"""p-value of the residual test below which other cuts are tried."""
 
+REFUSED_P = 1e-4
+"""p-value below which the fit that was taken is not usable."""
+
+NO_MODE_P = 0.01
+"""Probability that noise alone looks so much like a decay, above which there is none."""
+
+_LATER = [(cut, background) for cut in LATER_CUTS for background in (False, True)]
+_FEWEST_SAMPLES = 16
 _FEWEST_BINS = 4
+_FEWEST_BINS_WITH_BACKGROUND = 8
 _ONSET_STEPS = 33
 
 
@@ -118,29 +126,67 @@ def _fit_after(data: Reals, rate_hz: float, search_hz: tuple[float, float], hint
     if rough is None:
         return _nothing(len(data), ("short",))
     onset, onset_std = _refined_onset(data, rate_hz, search_hz, hint, rough)
-    best: tuple[Bins, PoleFit, float, int] | None = None
-    for cut, background in _attempts():
-        first = max(0, math.ceil(onset + cut * rate_hz / rough.g))
-        bins = _record(data, first, rate_hz, search_hz, rough.g)
-        if bins is None:
-            break
-        pole = fit_pole(bins, (rough.g, rough.damped), background)
-        p = residual_p(pole)
-        if best is None or p > best[2]:
-            best = bins, pole, p, first
-        if p > MISFIT_P:
-            break
-    if best is None:
+    plain = _attempt(data, rate_hz, search_hz, onset, rough, CUT)
+    if plain is None:
         return _nothing(len(data), ("short",))
-    return _assemble(*best, search_hz=search_hz, onset=onset, onset_std=onset_std)
+    return _assemble(_best_attempt(data, rate_hz, search_hz, onset, plain), search_hz, onset, onset_std)
 
 
-def _attempts() -> Iterator[tuple[float, bool]]:
-    """Cuts and backgrounds in the order in which they are tried."""
-    yield CUT, False
-    for cut in LATER_CUTS:
-        yield cut, False
-        yield cut, True
+@dataclass(frozen=True, slots=True)
+class _Attempt:
+    """One fit of one record."""
+
+    first: int  # index of the record's first sample
+    bins: Bins
+    pole: PoleFit
+    p: float  # of the residual test
+
+    @property
+    def std_ln_g(self) -> float:
+        return math.sqrt(float(self.pole.covariance[0, 0]))
+
+
+def _attempt(
+    data: Reals,
+    rate_hz: float,
+    search_hz: tuple[float, float],
+    onset: float,
+    guess: PoleFit,
+    cut: float,
+    background: bool = False,
+) -> _Attempt | None:
+    """Fit the record that begins `cut` time constants after the onset; None where too little is left."""
+    first = max(0, math.ceil(onset + cut * rate_hz / guess.g))
+    last = min(len(data), first + math.ceil(LONGEST * rate_hz / guess.g))
+    if last - first < _FEWEST_SAMPLES:
+        return None
+    bins = transform(data[first:last], rate_hz, search_hz)
+    if len(bins.values) < (_FEWEST_BINS_WITH_BACKGROUND if background else _FEWEST_BINS) or not np.any(bins.values):
+        return None
+    pole = fit_pole(bins, (guess.g, guess.damped), background)
+    return _Attempt(first, bins, pole, residual_p(pole))
+
+
+def _best_attempt(
+    data: Reals, rate_hz: float, search_hz: tuple[float, float], onset: float, plain: _Attempt
+) -> _Attempt:
+    """The plain fit if its residuals do not contradict it, else the first later cut or background that serves better.
+
+    Better is: not contradicted, and more certain of the decay rate by its own residuals. Of mere noise, which now and
+    then contradicts by chance, a shorter record is less certain. Where none serves, the most certain is taken.
+    """
+    if plain.p > MISFIT_P:
+        return plain
+    best = plain
+    for cut, background in _LATER:
+        trial = _attempt(data, rate_hz, search_hz, onset, plain.pole, cut, background)
+        if trial is None or not trial.pole.converged or trial.bins.length * trial.pole.g < SHORTEST * rate_hz:
+            continue
+        if trial.p > MISFIT_P and trial.std_ln_g < plain.std_ln_g:
+            return trial
+        if trial.std_ln_g < best.std_ln_g:
+            best = trial
+    return best
 
 
 def _rough_pole(data: Reals, rate_hz: float, search_hz: tuple[float, float], first: int) -> PoleFit | None:
@@ -151,15 +197,6 @@ def _rough_pole(data: Reals, rate_hz: float, search_hz: tuple[float, float], fir
     if len(bins.values) < _FEWEST_BINS or not np.any(bins.values):
         return None
     return fit_pole(bins, start(bins))
-
-
-def _record(data: Reals, first: int, rate_hz: float, search_hz: tuple[float, float], g: float) -> Bins | None:
-    """The bins of the record that begins at a cut; None where too little is left."""
-    last = min(len(data), first + math.ceil(LONGEST * rate_hz / g))
-    if last - first < SHORTEST * rate_hz / g:
-        return None
-    bins = transform(data[first:last], rate_hz, search_hz)
-    return bins if len(bins.values) >= _FEWEST_BINS and np.any(bins.values) else None
 
 
 def _refined_onset(
@@ -201,9 +238,8 @@ def _spread(gain: Reals, width: float, top: int, noise: float) -> float:
     return math.sqrt(2.0 * noise / curvature) if curvature > 0.0 else math.inf
 
 
-def _assemble(
-    bins: Bins, pole: PoleFit, p: float, first: int, *, search_hz: tuple[float, float], onset: float, onset_std: float
-) -> RingdownFit:
+def _assemble(attempt: _Attempt, search_hz: tuple[float, float], onset: float, onset_std: float) -> RingdownFit:
+    bins, pole = attempt.bins, attempt.pole
     omega = math.hypot(pole.g, pole.damped)
     frequency, q = omega / (2.0 * math.pi), omega / (2.0 * pole.g)
     covariance = _log_covariance(pole)
@@ -213,7 +249,7 @@ def _assemble(
     signal = float(np.sum(np.abs(fitted) ** 2))
     noise = 2.0 * pole.noise * len(bins.values)
     snr_db = 10.0 * math.log10(signal / noise) if noise > 0.0 and signal > 0.0 else None
-    reasons = _reasons(pole, p, frequency, q, search_hz)
+    reasons = _reasons(attempt, frequency, q, search_hz)
     return RingdownFit(
         frequency_hz=frequency,
         q=q,
@@ -224,13 +260,13 @@ def _assemble(
         q_high=q * math.exp(reach),
         level=bins.level,
         snr_db=snr_db,
-        fit_p=p,
+        fit_p=attempt.p,
         onset_sample=onset,
         onset_std=onset_std,
-        first_sample=first,
+        first_sample=attempt.first,
         samples=bins.length,
         amplitude=abs(pole.amplitude),
-        decrement_q=None,
+        decrement_q=decrement_q(bins, frequency),
         background=pole.background,
         usable=not reasons,
         reasons=reasons,
@@ -245,18 +281,46 @@ def _log_covariance(pole: PoleFit) -> Reals:
     return np.asarray(slope @ pole.covariance @ slope.T)
 
 
-def _reasons(pole: PoleFit, p: float, frequency: float, q: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
-    width, band = frequency / q, search_hz[1] - search_hz[0]
-    words = []
-    if not pole.converged:
-        words.append("not_converged")
-    if not search_hz[0] + width / 2 < frequency < search_hz[1] - width / 2:
-        words.append("band_edge")
-    if width > band / 2:
-        words.append("too_wide")
-    if p < 1e-4:
-        words.append("misfit")
-    return tuple(words)
+def _reasons(attempt: _Attempt, frequency: float, q: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
+    pole, width, band = attempt.pole, frequency / q, search_hz[1] - search_hz[0]
+    found = {
+        "not_converged": not pole.converged,
+        "short": attempt.bins.length * pole.g < SHORTEST * attempt.bins.rate_hz,
+        "no_mode": _chance(attempt) > NO_MODE_P,
+        "band_edge": not search_hz[0] + width / 2 < frequency < search_hz[1] - width / 2,
+        "too_wide": width > band / 2,
+        "misfit": attempt.p < REFUSED_P,
+    }
+    return tuple(word for word, holds in found.items() if holds)
+
+
+def _chance(attempt: _Attempt) -> float:
+    """The probability that noise alone gains so much by a pole: Fisher's F, times the bins it could have been at."""
+    pole, parameters = attempt.pole, 4
+    gained = float(np.sum(np.abs(attempt.bins.values) ** 2)) - pole.noise * pole.freedom
+    if pole.noise <= 0.0:
+        return 0.0
+    ratio = gained / (parameters * pole.noise)
+    return float(special.fdtrc(parameters, pole.freedom, max(ratio, 0.0))) * len(attempt.bins.values)
+
+
+def decrement_q(bins: Bins, frequency_hz: float) -> float | None:
+    """Return Q from the slope of the band's log envelope, the logarithmic decrement; None where it does not fall.
+
+    A cross-check that shares nothing with the fit but the bins. The envelope is that of the bins under a Hann window;
+    points count by their power, since that is how certain their logarithms are.
+    """
+    m = len(bins.values)
+    envelope = np.abs(fft.ifft(bins.values * np.hanning(m + 2)[1:-1]))
+    keep = slice(2, m - 2)  # the window smears by two points, over both ends of the record
+    time = np.arange(m)[keep] * (bins.length / bins.rate_hz / m)
+    height = envelope[keep]
+    if len(height) < 3 or not np.all(height > 0.0):
+        return None
+    weight = height**2 / np.sum(height**2)
+    centre = float(weight @ time)
+    slope = float(weight @ ((time - centre) * np.log(height))) / float(weight @ (time - centre) ** 2)
+    return math.pi * frequency_hz / -slope if slope < 0.0 else None
 
 
 def _steepest(data: Reals, rate_hz: float, search_hz: tuple[float, float]) -> float:
