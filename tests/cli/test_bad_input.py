@@ -117,9 +117,8 @@ def test_a_bad_recording_is_refused_before_anything_starts(
 def test_a_bad_recording_is_refused_live_as_well(bench: Any, folder: Path) -> None:
     (folder / "empty.wav").touch()
     source = '[[source]]\nname = "tape"\nkind = "recording"\npath = "{}"\n'
-    for name, says in (("empty.wav", "empty (0 bytes)"), ("none.wav", "No such file")):
-        (folder / "live.toml").write_text(TINY + source.format(name))
-        refused(bench, "run", "live.toml", says=(f"{name}: {says}", "expected a recording"))
+    (folder / "live.toml").write_text(TINY + source.format("empty.wav"))
+    refused(bench, "run", "live.toml", says=("empty.wav: empty (0 bytes); expected a recording",))
 
 
 @pytest.mark.parametrize("name", ["cut.wav", "cut.flac"])
