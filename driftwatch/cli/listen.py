@@ -30,8 +30,9 @@ def command(endpoint: str, topics: tuple[str, ...], count: int | None, as_json: 
 
     What was missed, and silence, is told on stderr.
 
-    Example: driftwatch listen --topic alert/ --topic "track/drive_end/" --json
-    """
+    \b
+    Example: driftwatch listen tcp://127.0.0.1:5571 --topic alert/ --topic track/drive_end/
+    """  # noqa: D301 - \b is click's mark for lines that stay as they are
     from driftwatch.bus.holes import HoleFinder
 
     holes = HoleFinder(everything=not topics)

@@ -57,8 +57,10 @@ def command(  # noqa: PLR0913, RUF100 - one parameter an option
 
     Figures carry their standard uncertainty; Q its 95 % interval.
 
-    Example: driftwatch readings --mode "housing rocking" --since 2026-03-01T06:00:00Z --json
-    """
+    \b
+    Example: driftwatch readings --config config/demo.toml --mode "housing rocking" --limit 10
+    Example: driftwatch readings --config config/demo.toml --run last --tracks --json
+    """  # noqa: D301 - \b is click's mark for lines that stay as they are
     from driftwatch.store.queries import Wanted
 
     if tracks and method:

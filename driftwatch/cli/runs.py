@@ -26,7 +26,7 @@ def command(store: str | None, config: str | None, as_json: bool) -> None:
     Times are stream time. A run without an end still goes on, or was cut off. The table shows the begin of each run's
     UUID, which --run of other commands takes; --json shows all of it.
 
-    Example: driftwatch runs --config line3.toml
+    Example: driftwatch runs --config config/demo.toml
     """
     with quiet_pipe(), opened_store(store, config) as reader:
         runs = reader.runs()

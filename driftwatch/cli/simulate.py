@@ -103,9 +103,9 @@ def command(
     replay of the recording equals the run.
 
     \b
-    Example: driftwatch simulate ring.wav --mode 900,40 --mode 2400,150,0.05 --seconds 120
+    Example: driftwatch simulate ring.wav --mode 900,40 --mode 2400,150,0.05 --seconds 20
     Example: driftwatch simulate struck.wav --mode 900,400,0 --impact-every 2 --impact-peak 0.8
-    Example: driftwatch simulate demo.wav --config config/demo.toml --seconds 300
+    Example: driftwatch simulate demo.wav --config config/demo.toml --seconds 60
     """  # noqa: D301 - \b is click's mark for lines that stay as they are
     _refuse_target(out, force)
     described = _from_options(told) if config is None else _from_file(config, context)
