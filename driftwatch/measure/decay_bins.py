@@ -43,8 +43,8 @@ class Bins:
 
     @property
     def sides(self) -> float:
-        """How many halves of the spectrum carry the power of these bins: 2 of a real record."""
-        return 2.0 if self.image else 1.0
+        """Power over that of these bins: a real record has as much at negative frequencies; a stream twice too much."""
+        return 2.0 if self.image else 0.5
 
 
 @dataclass(frozen=True, slots=True)

@@ -11,7 +11,7 @@ and a smooth background in the bins are tried in a fixed order, and the first th
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -19,6 +19,7 @@ from scipy import fft, special
 
 from driftwatch.measure.decay_bins import (
     Bins,
+    Complexes,
     PoleFit,
     Reals,
     fit_pole,
@@ -32,6 +33,9 @@ CUT = 0.02
 
 LATER_CUTS = (0.1, 0.25, 0.5, 0.75, 1.0, 1.25)
 """Cuts tried one after the other, in time constants, where the residuals contradict an earlier one."""
+
+GUARD = 13.0
+"""What `fit_baseband` leaves out after the onset, in reciprocal bandwidths: the reach of the band edge's ringing."""
 
 LONGEST = 7.0
 """Time constants after the cut that are used at most: what follows is noise."""
@@ -120,6 +124,55 @@ def fit(
     return _fit_after(data, rate_hz, search_hz, hint)
 
 
+def fit_baseband(
+    stream: NDArray[np.complexfloating],
+    rate_hz: float,
+    centre_hz: float,
+    search_hz: tuple[float, float],
+    onset: float,
+) -> RingdownFit:
+    """Fit one mode's free decay in its zoomed stream: for decays so long that raw samples would be a burden.
+
+    The first `GUARD` reciprocal bandwidths after the onset, in which the band edge rings, are left out: nothing against
+    a decay of minutes, but a loss for short ones, which `fit` serves.
+
+    Parameters
+    ----------
+    stream
+        Shape (n,), complex baseband of amplitude A for a tone of amplitude A, up to where the decay is to be used.
+    rate_hz, centre_hz
+        Its rate, and the frequency of its zero.
+    search_hz
+        The band that the zoom passes unchanged.
+    onset
+        Index of the onset into the stream.
+
+    Raises
+    ------
+    ValueError
+        When the stream is not one row, the band is not inside the stream's, or the onset not inside the samples.
+    """
+    band = search_hz[0] - centre_hz, search_hz[1] - centre_hz
+    if stream.ndim != 1:
+        raise ValueError(f"stream of shape {stream.shape}: expected one row of samples")
+    if not -rate_hz / 2 <= band[0] < band[1] <= rate_hz / 2:
+        raise ValueError(f"search band {search_hz} Hz: expected inside {centre_hz} -+ {rate_hz / 2} Hz, the stream's")
+    if not 0.0 <= onset < len(stream):
+        raise ValueError(f"onset {onset}: expected an index into the {len(stream)} samples")
+    trouble = _trouble(stream, rate_hz, band)
+    if trouble:
+        return _nothing(len(stream), trouble)
+    data = np.asarray(stream, dtype=np.complex128)
+    begin = math.ceil(onset + GUARD * rate_hz / (band[1] - band[0]))
+    rough = _rough_pole(data, rate_hz, band, begin)
+    plain = None if rough is None else _attempt(data, rate_hz, band, float(begin), rough, 0.0)
+    if plain is None:
+        return _nothing(len(stream), ("short",))
+    best = _best_attempt(data, rate_hz, band, float(begin), plain)
+    pole = replace(best.pole, damped=best.pole.damped + 2.0 * math.pi * centre_hz)
+    return _assemble(replace(best, pole=pole), search_hz, onset, None)
+
+
 def _fit_after(data: Reals, rate_hz: float, search_hz: tuple[float, float], hint: float) -> RingdownFit:
     reciprocal = rate_hz / (search_hz[1] - search_hz[0])
     rough = _rough_pole(data, rate_hz, search_hz, round(hint + reciprocal))
@@ -147,7 +200,7 @@ class _Attempt:
 
 
 def _attempt(
-    data: Reals,
+    data: Reals | Complexes,
     rate_hz: float,
     search_hz: tuple[float, float],
     onset: float,
@@ -156,8 +209,11 @@ def _attempt(
     background: bool = False,
 ) -> _Attempt | None:
     """Fit the record that begins `cut` time constants after the onset; None where too little is left."""
-    first = max(0, math.ceil(onset + cut * rate_hz / guess.g))
-    last = min(len(data), first + math.ceil(LONGEST * rate_hz / guess.g))
+    # A guess from little data may be far off: no decay is taken for longer than the record, or wider than the band.
+    shortest = 2.0 * rate_hz / (math.pi * (search_hz[1] - search_hz[0]))
+    tau = min(max(rate_hz / guess.g, shortest), len(data) - onset)
+    first = max(0, math.ceil(onset + cut * tau))
+    last = min(len(data), first + math.ceil(LONGEST * tau))
     if last - first < _FEWEST_SAMPLES:
         return None
     bins = transform(data[first:last], rate_hz, search_hz)
@@ -168,7 +224,7 @@ def _attempt(
 
 
 def _best_attempt(
-    data: Reals, rate_hz: float, search_hz: tuple[float, float], onset: float, plain: _Attempt
+    data: Reals | Complexes, rate_hz: float, search_hz: tuple[float, float], onset: float, plain: _Attempt
 ) -> _Attempt:
     """The plain fit if its residuals do not contradict it, else the first later cut or background that serves better.
 
@@ -189,7 +245,7 @@ def _best_attempt(
     return best
 
 
-def _rough_pole(data: Reals, rate_hz: float, search_hz: tuple[float, float], first: int) -> PoleFit | None:
+def _rough_pole(data: Reals | Complexes, rate_hz: float, search_hz: tuple[float, float], first: int) -> PoleFit | None:
     """The pole of all that comes a reciprocal bandwidth after the hint, where the onset cannot be."""
     if len(data) - first < 4:
         return None
@@ -238,7 +294,7 @@ def _spread(gain: Reals, width: float, top: int, noise: float) -> float:
     return math.sqrt(2.0 * noise / curvature) if curvature > 0.0 else math.inf
 
 
-def _assemble(attempt: _Attempt, search_hz: tuple[float, float], onset: float, onset_std: float) -> RingdownFit:
+def _assemble(attempt: _Attempt, search_hz: tuple[float, float], onset: float, onset_std: float | None) -> RingdownFit:
     bins, pole = attempt.bins, attempt.pole
     omega = math.hypot(pole.g, pole.damped)
     frequency, q = omega / (2.0 * math.pi), omega / (2.0 * pole.g)
@@ -324,12 +380,17 @@ def decrement_q(bins: Bins, frequency_hz: float) -> float | None:
 
 
 def _steepest(data: Reals, rate_hz: float, search_hz: tuple[float, float]) -> float:
-    """Index of the highest point of the band's envelope, its edges smoothed by a Hann window."""
+    """Index where the band's envelope, its edges smoothed by a Hann window, rises through half its highest point.
+
+    The smoothing is symmetric, so a sudden onset lies where the rise is half done.
+    """
     length = fft.next_fast_len(len(data), real=True)
     bins = transform(np.pad(data, (0, length - len(data))), rate_hz, search_hz)
-    window = np.hanning(len(bins.values) + 2)[1:-1]
-    envelope = np.abs(fft.ifft(bins.values * window))
-    return float(np.argmax(envelope)) * bins.length / len(envelope)
+    m = len(bins.values)
+    envelope = np.abs(fft.ifft(bins.values * np.hanning(m + 2)[1:-1], 8 * m))[: max(1, 8 * m * len(data) // length)]
+    peak = int(np.argmax(envelope))
+    low = np.flatnonzero(envelope[:peak] < envelope[peak] / 2.0)
+    return (float(low[-1]) + 0.5 if len(low) else 0.0) * length / (8 * m)
 
 
 def _check(
@@ -346,7 +407,7 @@ def _check(
         raise ValueError(f"onset hint {onset_hint}: expected an index into the {len(samples)} samples")
 
 
-def _trouble(samples: NDArray[np.floating], rate_hz: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
+def _trouble(samples: NDArray[np.inexact], rate_hz: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
     if len(samples) * (search_hz[1] - search_hz[0]) < _FEWEST_BINS * rate_hz:
         return ("short",)
     if not np.all(np.isfinite(samples)):
