@@ -27,7 +27,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 Reals = NDArray[np.float64]
-WATCH = 5.0
+WATCH = 4.0
 """First stage: mean energy of the innovations over the next W samples, over their usual one."""
 
 GAIN = 32.0
@@ -38,6 +38,7 @@ _FUTURE = 2  # W, in blocks
 _RING = 13.0  # how far the band edge's ringing reaches, in reciprocal bandwidths
 _DECAY = 4.0  # shortest time constant of a tone, in reciprocal bandwidths: six half-power widths a side
 _WIDENED = 1.25  # width of flat noise in the stream, its edges included, over that of the search band
+_FILLED = 0.6  # the same over the stream's rate, where the edges are wide
 _STEP_SHARE = 0.1  # least power of a jump over the level just before it: a decay that is no pure exponential jitters
 _RING_FIRST_DB = 20.0  # by how much the ringing lies below the jump where it begins to be told apart
 _RING_LAST_DB = 55.0  # and where it ends
@@ -47,6 +48,7 @@ _ABOVE = 4.0  # by how much the power of a free decay must stand above the row's
 _FOLLOW = 0.5  # and what share of the energy its own predictor must leave
 _NEAR = 4  # strides from which the predictor in a free decay comes
 _RISING = 3.0  # power over that a stride before, of samples that hold an onset's rise and are no decay yet
+_QUIETER = 1.2  # mean energy of noise over that of the quieter of two halves
 _TINY = 1e-200  # keeps a quotient finite; far below the square of any sample
 
 
@@ -161,7 +163,10 @@ class Detector:
         here = slice(peak - 2 * s, peak - s + 2)  # piece i begins at sample s + i
         around = slice(max(0, peak - s - length), peak - s + 3 * length)
         elsewhere = np.delete(power, around, axis=0)
-        noise = np.maximum(np.quantile(elsewhere, 0.25, axis=0) / math.log(4.0 / 3.0), usual * self.times / _WIDENED)
+        noise = np.maximum(
+            np.quantile(elsewhere, 0.25, axis=0) / math.log(4.0 / 3.0),
+            usual * self.times / max(_WIDENED, _FILLED * self.times),
+        )
         return float(np.max(power[here] / noise))
 
 
@@ -194,10 +199,10 @@ class _Blocks:
         half = _PAST // 2
         later = _left(self._window(half + 1, half), self.predictor)
         earlier = _left(self._window(_PAST + 1, half), self.predictor)
+        lately = np.minimum(later, earlier)
         rounding = 1e-12 * np.max(moments[0], axis=1) + _TINY  # of single precision
-        # Harmonic mean of what the general predictor left so far: earlier onsets hardly count.
-        so_far = _harmonic(self._ordinary)
-        self.usual = np.maximum(np.maximum(np.minimum(later, earlier), so_far), rounding[:, None])
+        # The harmonic mean of what was left so far hardly counts earlier onsets. Of noise a quieter half is too little.
+        self.usual = np.maximum(np.maximum(lately, _QUIETER * _harmonic(lately)), rounding[:, None])
 
     def _window(self, back: int, length: int) -> Reals:
         """Means of the moments over `length` blocks, begun `back` before each; shape (4, rows, columns)."""
@@ -213,11 +218,11 @@ class _Blocks:
         general = self._general(moments, smooth, usual)
         window = self._window(_PAST + 1, _PAST)
         level, lagged = window[0], window[1]
-        self._ordinary = _left(window, general)
+        ordinary = _left(window, general)
         own = window[2:] * (1.0 / (lagged + _TINY))
         now = usual[:, self.first - 4 : self.first - 4 + self.columns] * (_ABOVE / 3.0)
         follow = (level > now) & (level < _RISING * lagged)
-        follow &= _left(window, own) < _FOLLOW * self._ordinary
+        follow &= _left(window, own) < _FOLLOW * ordinary
         self.predictor = np.where(follow, own, general)
 
     def _general(self, moments: Reals, smooth: Reals, usual: Reals) -> Reals:
