@@ -103,14 +103,13 @@ def _replay(
             writer = opened.enter_context(Writer.open(store, header.station))
         stop = opened.enter_context(stopped_by_signal())
         output = Output(print_json if as_json else view.show, stop)
-        if not as_json:
-            view.begin()
         bar = opened.enter_context(progress(source.length, source.rate_hz, shown=not (as_json and sys.stdout.isatty())))
         with work_failed():
             replay(source, station, Keeper(writer, publisher, output), bar, stop.is_set)
+    output.check()
     if not as_json:
         _close(view, store)
-    if stop.is_set() and not output.closed:
+    if stop.is_set() and not output.is_lost:
         done = station.samples / source.rate_hz
         raise click.ClickException(
             f"interrupted after {done:.1f} s of signal; what was read is stored in {writer.path}"

@@ -109,13 +109,13 @@ def _run(
                 opened.enter_context(_folder_of(configuration.store.url))
             writer = opened.enter_context(Writer.open(store or configuration.store.url, header.station))
         _announce(configuration, writer.path, publisher.endpoint)
-        if view:
-            view.begin()
-        keeper = Keeper(writer, publisher, Output(view.show if view else print_json, stop))
+        output = Output(view.show if view else print_json, stop)
+        keeper = Keeper(writer, publisher, output)
         pruner = Pruner(writer, configuration.store.keep_days, time.time_ns)
         live = LiveRun(source, station, keeper, pace=pace, publisher=publisher, chore=pruner.step)
         with work_failed():
             live.until(stop)
+        output.check()
 
 
 @contextmanager

@@ -75,29 +75,49 @@ def stopped_by_signal() -> Iterator[Event]:
 
 
 class Output:
-    """What prints records, until whoever reads standard output has had enough.
+    """What prints records, as long as standard output takes them.
 
     Parameters
     ----------
     show
         Prints a group of records.
     stop
-        Set when standard output is closed, ``head`` perhaps: the work then ends in good order.
+        Set when nothing can be printed any more, since ``head`` has had enough or a disk is full: the work then ends
+        in good order.
     """
 
     def __init__(self, show: Callable[[Sequence[Envelope]], None], stop: Event) -> None:
         self._show = show
         self._stop = stop
-        self.closed = False
+        self._error: OSError | None = None
+
+    @property
+    def is_lost(self) -> bool:
+        """Whether nothing can be printed any more."""
+        return self._error is not None
 
     def __call__(self, envelopes: Sequence[Envelope]) -> None:
         """Print a group, or nothing any more."""
         try:
             self._show(envelopes)
-        except BrokenPipeError:
+        except OSError as error:
             drop_output()
-            self.closed = True
+            self._error = error
             self._stop.set()
+
+    def check(self) -> None:
+        """Raise when printing failed; that a reader has had enough is no failure.
+
+        Raises
+        ------
+        click.ClickException
+            With what came, what was expected, and what to do (exit status 1).
+        """
+        if self._error is not None and not isinstance(self._error, BrokenPipeError):
+            raise click.ClickException(
+                f"standard output: {self._error.strerror or self._error}; expected to print every record there; "
+                "make room; what was read until then is stored"
+            )
 
 
 def drop_output() -> None:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import re
+import shutil
+import sys
 import textwrap
 from collections.abc import Iterable, Sequence
 
@@ -12,7 +14,7 @@ from driftwatch.cli.figures import duration, moment, with_interval, with_std
 from driftwatch.records import NS, Alert, AlertState, Envelope, Fault, Health, Phase, Track, TrackStatus, time_text
 
 WIDTH = 110
-"""No line is wider; what is longer goes on in the next one."""
+"""No line is wider, nor wider than the terminal; what is longer goes on in the next one."""
 
 NAME_WIDTH = 34
 """Most columns for the name of a mode."""
@@ -26,7 +28,8 @@ _VALUE = re.compile(r"(\d) (\S)")
 def folded(text: str, indent: str = "") -> str:
     """Return a text in lines of at most `WIDTH` columns, the second and later ones indented."""
     joined = _VALUE.sub("\\1\N{NO-BREAK SPACE}\\2", text)  # a value and its unit stay on one line
-    lines = textwrap.fill(joined, WIDTH, subsequent_indent=indent, break_on_hyphens=False, replace_whitespace=False)
+    width = min(WIDTH, shutil.get_terminal_size().columns) if sys.stdout.isatty() else WIDTH
+    lines = textwrap.fill(joined, width, subsequent_indent=indent, break_on_hyphens=False, replace_whitespace=False)
     return lines.replace("\N{NO-BREAK SPACE}", " ")
 
 
@@ -102,12 +105,10 @@ class RunView:
         """Stream time from the first record to the last."""
         return (self._last_ns - (self._last_ns if self._first_ns is None else self._first_ns)) / NS
 
-    def begin(self) -> None:
-        """Print what the figures mean."""
-        click.echo(LEGEND)
-
     def show(self, envelopes: Sequence[Envelope]) -> None:
-        """Take a group of records and print what is worth a line."""
+        """Take a group of records and print what is worth a line; before the first, what the figures mean."""
+        if self._first_ns is None:
+            sys.stdout.write(f"{folded(LEGEND)}\n")
         for envelope in envelopes:
             self._first_ns = envelope.time_ns if self._first_ns is None else self._first_ns
             self._last_ns = max(self._last_ns, envelope.time_ns)
@@ -120,6 +121,7 @@ class RunView:
                 case Health() as health if health.phase is not Phase.CONTINUE:
                     self._health(health, envelope.time_ns)
         self._round()
+        sys.stdout.flush()
 
     def summary(self) -> list[str]:
         """Return the lines that close a run."""
@@ -167,7 +169,10 @@ class RunView:
     @staticmethod
     def _say(time_ns: int, text: str, colour: str | None = None) -> None:
         lines = folded(f"{time_text(time_ns)[11:19]}  {text}", _INDENT)
-        click.echo(f"{lines[:10]}{click.style(lines[10:], fg=colour, bold=colour == 'red')}")
+        if colour and sys.stdout.isatty():
+            lines = f"{lines[:10]}{click.style(lines[10:], fg=colour, bold=colour == 'red')}"
+        # Not by click: it writes past whoever stands in for standard output to keep a progress bar below the lines.
+        sys.stdout.write(f"{lines}\n")
 
 
 def _key(channel: str, mode: str) -> tuple[str, str]:

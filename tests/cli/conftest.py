@@ -79,7 +79,7 @@ class Bench:
             [sys.executable, "-m", "driftwatch", *map(str, arguments)],
             cwd=self.folder,
             env={**os.environ, "OMP_NUM_THREADS": "1", "COLUMNS": "100"},
-            stdout=subprocess.PIPE,
+            stdout=options.pop("stdout", subprocess.PIPE),
             stderr=options.pop("stderr", subprocess.PIPE),
             text=True,
             **options,

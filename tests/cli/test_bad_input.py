@@ -17,6 +17,7 @@ from typing import Any
 import numpy as np
 import pytest
 import soundfile
+from driftwatch.daemon.replay import BLOCK_S
 from driftwatch.store.queries import Reader
 from numpy.typing import NDArray
 
@@ -317,8 +318,8 @@ def test_a_database_that_may_only_be_read_is_refused_and_nothing_is_made_beside_
 def test_a_database_that_another_daemon_writes_to_is_refused(bench: Any, folder: Path) -> None:
     daemon = bench.start("run", bench.config())
     assert daemon.stderr is not None
-    while "Ctrl-C ends it" not in daemon.stderr.readline():
-        pass
+    while "Ctrl-C ends it" not in (line := daemon.stderr.readline()):
+        assert line
     with closing(sqlite3.connect(folder / "other.db")) as connection:
         connection.execute("CREATE TABLE orders (number, price)")
     says = (f"process {daemon.pid} (station 'bench') is writing to this database", "name another database with --store")
@@ -353,6 +354,7 @@ class Stalled:
         self.process = bench.start("replay", "tiny.toml", *recordings, "--json", "--store", "rows.db", *options)
         assert self.process.stdout is not None
         self.first = self.process.stdout.readline()
+        assert self.first, self.process.communicate()[1]
         self.stored = _rows(bench.folder / "rows.db")
         assert self.stored * 500 > 2**17  # no record is shorter than 500 bytes but the first
 
@@ -382,10 +384,10 @@ def _failed(stalled: Stalled, objects: Objects, says: str) -> list[dict[str, Any
 def test_a_recording_that_shrinks_while_it_is_replayed_ends_the_replay_with_its_rows_stored(
     bench: Any, folder: Path, objects: Objects
 ) -> None:
-    write(folder / "long.wav", noise(60.0))
+    write(folder / "long.wav", noise(3 * BLOCK_S))
     stalled = Stalled(bench, "long.wav")
-    os.truncate(folder / "long.wav", 25 * RATE * 4)
-    records = _failed(stalled, objects, "long.wav: reading stopped at 24.")
+    os.truncate(folder / "long.wav", round(1.5 * BLOCK_S * RATE * 4))  # its header counts too
+    records = _failed(stalled, objects, "long.wav: reading stopped at ")
     assert records[-1]["kind"] == "run"
     assert records[-1]["reason"].startswith("failed: long.wav: reading stopped")
     assert _rows(folder / "rows.db") == len(records)
@@ -394,20 +396,20 @@ def test_a_recording_that_shrinks_while_it_is_replayed_ends_the_replay_with_its_
 def test_a_recording_that_vanishes_before_its_turn_ends_the_replay_with_its_rows_stored(
     bench: Any, folder: Path, objects: Objects
 ) -> None:
-    write(folder / "long.wav", noise(30.0))
+    write(folder / "long.wav", noise(1.5 * BLOCK_S))
     ended = (folder / "long.wav").stat().st_mtime
     os.utime(folder / "good.wav", (ended + 5.0, ended + 5.0))  # so that the two join by their dates
     stalled = Stalled(bench, "long.wav", "good.wav")
     (folder / "good.wav").unlink()
     records = _failed(stalled, objects, "good.wav: reading stopped at 0.000 s")
-    assert records[-1]["samples"] == 30 * RATE
+    assert records[-1]["samples"] == 1.5 * BLOCK_S * RATE
     assert _rows(folder / "rows.db") == len(records)
 
 
 def test_a_database_taken_away_under_way_ends_the_replay_and_the_rows_in_it_stay(
     bench: Any, folder: Path, objects: Objects
 ) -> None:
-    write(folder / "long.wav", noise(60.0))
+    write(folder / "long.wav", noise(3 * BLOCK_S))
     stalled = Stalled(bench, "long.wav")
     (folder / "rows.db").rename(folder / "moved.db")
     records = _failed(stalled, objects, "the file was deleted, moved or replaced since it was opened; expected to find")
@@ -420,7 +422,7 @@ def test_a_database_taken_away_under_way_ends_the_replay_and_the_rows_in_it_stay
 def test_a_disk_that_fills_under_way_ends_the_replay_and_the_rows_stay(
     bench: Any, folder: Path, objects: Objects
 ) -> None:
-    write(folder / "long.wav", noise(100.0))
+    write(folder / "long.wav", noise(3 * BLOCK_S))
     stalled = Stalled(bench, "long.wav")
     largest = max(path.stat().st_size for path in folder.glob("rows.db*"))
     resource.prlimit(stalled.process.pid, resource.RLIMIT_FSIZE, (largest, largest))
@@ -433,8 +435,8 @@ def test_a_disk_that_fills_under_way_ends_the_replay_and_the_rows_stay(
 def test_a_store_that_fails_ends_a_live_run_in_one_line(bench: Any, folder: Path, how: str) -> None:
     daemon = bench.start("run", bench.config(pace=10.0))
     assert daemon.stdout is not None
-    while "tracking" not in daemon.stdout.readline():
-        pass
+    while "tracking" not in (line := daemon.stdout.readline()):
+        assert line
     if how == "deleted":
         (folder / "state" / "bench.db").unlink()
     else:
