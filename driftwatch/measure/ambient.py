@@ -23,6 +23,7 @@ from driftwatch.measure.whittle import (
     WN,
     Array,
     Lines,
+    Quiet,
     cumulated,
     lines_of,
     pool,
@@ -84,6 +85,7 @@ def fit(
     centre_hz: float,
     search_hz: tuple[float, float],
     velocity_power: int = 0,
+    blanked: NDArray[np.bool_] | None = None,
 ) -> AmbientFit:
     """Fit one resonance to each of a batch of windows.
 
@@ -99,6 +101,9 @@ def fit(
         Lowest and highest frequency that is looked at; the zoom must be flat in between.
     velocity_power
         k of the zoom's conversion (i w/wc)^k: colours white measurement noise, and is undone for `level`.
+    blanked
+        Shape of `windows`: samples that are not to be used, such as an impact and its decay. Each blank should be
+        long against the resonance's memory and all of them less than half the window.
 
     Returns
     -------
@@ -112,11 +117,14 @@ def fit(
     """
     _check(windows, rate_hz, centre_hz, search_hz)
     lines = lines_of(windows.shape[1], rate_hz, centre_hz, search_hz, velocity_power)
+    quiet = _quiet(windows, blanked)
+    if blanked is not None:
+        windows = np.where(blanked, np.zeros(1, windows.dtype), windows)
     figures = np.full((len(_FIGURES), windows.shape[0]), np.nan)
     reasons: list[tuple[str, ...]] = []
     for begin in range(0, windows.shape[0], _ROWS):
         rows = slice(begin, begin + _ROWS)
-        reasons += _fit_rows(windows[rows], lines, figures[:, rows])
+        reasons += _fit_rows(windows[rows], lines, quiet.rows(np.arange(len(windows))[rows]), figures[:, rows])
     return _assembled(figures, tuple(reasons))
 
 
@@ -137,7 +145,21 @@ def _assembled(figures: Array, reasons: tuple[tuple[str, ...], ...]) -> AmbientF
     )
 
 
-def _fit_rows(windows: NDArray[np.complexfloating], lines: Lines, figures: Array) -> list[tuple[str, ...]]:
+def _quiet(windows: NDArray[np.complexfloating], blanked: NDArray[np.bool_] | None) -> Quiet:
+    """Return how much of each window is not blanked, and in how many pieces."""
+    if blanked is None:
+        return Quiet.whole(windows.shape[0])
+    if blanked.shape != windows.shape:
+        raise ValueError(f"blanked has shape {blanked.shape}; expected that of the windows, {windows.shape}")
+    left = ~blanked
+    begins = left[:, :1].astype(np.float64) + np.sum(left[:, 1:] & blanked[:, :-1], axis=1, keepdims=True)
+    share = np.sum(left, axis=1, keepdims=True) / windows.shape[1]
+    return Quiet(np.maximum(share, 1.0 / windows.shape[1]), np.maximum(begins, 1.0))
+
+
+def _fit_rows(
+    windows: NDArray[np.complexfloating], lines: Lines, quiet: Quiet, figures: Array
+) -> list[tuple[str, ...]]:
     """Fit a few windows; fill in their figures, shape (figures, windows), and return their reasons."""
     if lines.count < FEWEST_LINES:
         return [("not_resolved",)] * windows.shape[0]
@@ -149,8 +171,8 @@ def _fit_rows(windows: NDArray[np.complexfloating], lines: Lines, figures: Array
     if good.size == 0:
         return reasons
     if good.size < mean.size:
-        power, sums, mean = power[good], sums[good], mean[good]
-    figures[:, good], words = _fit_power(power, sums, mean, lines)
+        power, sums, mean, quiet = power[good], sums[good], mean[good], quiet.rows(good)
+    figures[:, good], words = _fit_power(power, sums, mean, lines, quiet)
     for row, why in zip(good, words, strict=True):
         reasons[row] = why
     return reasons
@@ -198,18 +220,18 @@ def _squares(spectrum: NDArray[np.complexfloating], lines: Lines) -> NDArray[np.
 
 
 def _fit_power(
-    power: NDArray[np.floating], sums: Array, mean: Array, lines: Lines
+    power: NDArray[np.floating], sums: Array, mean: Array, lines: Lines, quiet: Quiet
 ) -> tuple[Array, list[tuple[str, ...]]]:
     """Fit periodograms of positive finite mean; return figures, shape (figures, rows), and reasons."""
     theta = detection.start(sums, lines)
     prior = _prior(theta, lines)
-    pools = pool(sums, lines, theta[:, WN], np.exp(theta[:, LN_G]))
+    pools = pool(sums, lines, quiet, theta[:, WN], np.exp(theta[:, LN_G]))
     rough = maximise(theta, pools, prior, lines, _ROUGH, _ROUGH_MOST)
-    pools = pool(sums, lines, rough.theta[:, WN], np.exp(rough.theta[:, LN_G]))
+    pools = pool(sums, lines, quiet, rough.theta[:, WN], np.exp(rough.theta[:, LN_G]))
     best = maximise(rough.theta, pools, prior, lines, _FINE, _FINE_MOST)
     gain = best.likelihood - detection.floor_only(pools, prior.precision[1])
-    fit_p = residuals.p_value(residuals.largest(power, best.theta, lines), lines.count, best.model, pools)
-    level = np.sqrt(0.5 * mean * _own_unit(power, lines) * lines.spacing / (2 * np.pi))
+    fit_p = residuals.p_value(residuals.largest(power, best.theta, lines, quiet), lines.count, best.model, pools)
+    level = np.sqrt(0.5 * mean / quiet.share[:, 0] * _own_unit(power, lines) * lines.spacing / (2 * np.pi))
     values = np.stack((*_moments(best), level, _snr_db(best.theta, lines), fit_p, gain, best.converged))
     return values, _reasons(best, gain, fit_p, lines)
 

@@ -108,7 +108,7 @@ def floor_only(pools: Pools, tilt_precision: float) -> Array:
     colour = pools.upper + pools.lower
     tilt = (pools.upper - pools.lower) / colour
     flat = pools.power / colour
-    weight = pools.count
+    weight = pools.weight
     total = np.sum(weight, axis=1, keepdims=True)
     weighted = weight * tilt
     middle = np.sum(weighted, axis=1, keepdims=True) / total

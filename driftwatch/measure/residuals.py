@@ -16,14 +16,14 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
-from driftwatch.measure.whittle import Array, Lines, Pools, on_lines
+from driftwatch.measure.whittle import Array, Lines, Pools, Quiet, on_lines
 
 _FITTED = 4.0  # parameters that the data determine; the fifth, the tilt, is mostly its prior's
 
 
-def largest(power: NDArray[np.floating], theta: Array, lines: Lines) -> Array:
+def largest(power: NDArray[np.floating], theta: Array, lines: Lines, quiet: Quiet) -> Array:
     """Return the largest ratio of periodogram to expectation, shape (rows,)."""
-    model = on_lines(theta, lines, power.dtype.type)
+    model = on_lines(theta, lines, quiet, power.dtype.type)
     return np.asarray(np.max(np.divide(power, model, out=model), axis=1), dtype=np.float64)
 
 
@@ -48,7 +48,7 @@ def p_value(largest: Array, lines: int, model: Array, pools: Pools) -> Array:
 
 def _deviance_p(model: Array, pools: Pools) -> Array:
     ratio = np.maximum(pools.power / model, 1e-300)
-    deviance = np.sum(2.0 * pools.count * (ratio - 1.0 - np.log(ratio)), axis=1)
+    deviance = np.sum(2.0 * pools.weight * (ratio - 1.0 - np.log(ratio)), axis=1)
     means, variances = _moments(1 << int(np.max(pools.count)).bit_length())
     index = pools.count.astype(np.intp)
     mean = np.maximum(np.sum(means[index], axis=1) - _FITTED, 1.0)

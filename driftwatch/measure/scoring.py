@@ -171,10 +171,10 @@ def _evaluate(theta: Array, pools: Pools, prior: Prior) -> _Point:
     """Return likelihood, model, gradient and Fisher information at `theta`."""
     model, columns = expected(theta, pools)
     np.subtract(pools.power, model, out=columns[5])
-    columns *= pools.root_count / model
+    columns *= pools.root_weight / model
     terms = np.log(model)
-    terms *= pools.count
-    terms += pools.root_count * columns[5]
+    terms *= pools.weight
+    terms += pools.root_weight * columns[5]
     likelihood = -np.sum(terms, axis=1)
     products = np.matmul(columns.transpose(1, 0, 2), columns.transpose(1, 2, 0))
     information = products[:, :5, :5] + prior.information

@@ -106,13 +106,40 @@ def lines_of(
 
 
 @dataclass(frozen=True, slots=True)
-class Pools:
-    """Pooled periodograms of a batch; every array has shape (rows, pools)."""
+class Quiet:
+    """How much of each window is not blanked; every array has shape (rows, 1).
 
-    seconds: float  # length T of the windows
+    Of a window with blanked samples the periodogram has the same lines, but they are no longer independent: as many
+    are worth as many seconds are left. Its expectation is that of the pieces between the blanks, which are taken as
+    equally long and, a blank being long against the memory, as independent.
+    """
+
+    share: Array  # of the window's samples
+    pieces: Array  # runs of samples between the blanks
+
+    @classmethod
+    def whole(cls, rows: int) -> Self:
+        """Return this of windows without blanks."""
+        return cls(np.ones((rows, 1)), np.ones((rows, 1)))
+
+    def rows(self, index: NDArray[np.intp]) -> Self:
+        """Return some of the rows."""
+        return type(self)(self.share[index], self.pieces[index])
+
+    def seconds(self, lines: Lines) -> Array:
+        """Return the length T of one piece."""
+        return lines.seconds * self.share / self.pieces
+
+
+@dataclass(frozen=True, slots=True)
+class Pools:
+    """Pooled periodograms of a batch; every array but `seconds` has shape (rows, pools)."""
+
     centre: float  # rad/s
+    seconds: Array  # shape (rows, 1), length T of what the window holds in one piece
     count: Array  # lines in the pool, may be 0
-    root_count: Array  # its square root
+    weight: Array  # how many of them are independent
+    root_weight: Array  # its square root
     power: Array  # mean periodogram of the pool
     half_omega: Array  # w/2 at the pool's middle
     half_inverse: Array  # 1/(2w) there
@@ -122,8 +149,8 @@ class Pools:
 
     def rows(self, index: NDArray[np.intp]) -> Self:
         """Return some of the rows."""
-        arrays = (np.take(getattr(self, field.name), index, axis=0) for field in fields(self)[2:])
-        return type(self)(self.seconds, self.centre, *arrays)
+        arrays = (np.take(getattr(self, field.name), index, axis=0) for field in fields(self)[1:])
+        return type(self)(self.centre, *arrays)
 
 
 def cumulated(power: NDArray[np.floating]) -> Array:
@@ -133,7 +160,7 @@ def cumulated(power: NDArray[np.floating]) -> Array:
     return sums
 
 
-def pool(sums: Array, lines: Lines, wn: Array, g: Array) -> Pools:
+def pool(sums: Array, lines: Lines, quiet: Quiet, wn: Array, g: Array) -> Pools:
     """Pool periodograms around resonances.
 
     Parameters
@@ -142,6 +169,8 @@ def pool(sums: Array, lines: Lines, wn: Array, g: Array) -> Pools:
         Shape (rows, lines + 1), see `cumulated`.
     lines
         Their frequencies.
+    quiet
+        How much of each window is there.
     wn, g
         Shape (rows,), rad/s and 1/s: where the pools are to be narrow, and how narrow.
     """
@@ -161,11 +190,13 @@ def pool(sums: Array, lines: Lines, wn: Array, g: Array) -> Pools:
     warp = half_inverse * wn[:, None]  # du/dw = 1/2 + 2 (wn/2w)^2
     warp = 0.5 + 2.0 * (warp * warp)
     spread = np.maximum(count * count - 1.0, 0.0) * (warp * warp) * (lines.spacing**2 / 12)
+    weight = count * quiet.share
     return Pools(
-        seconds=lines.seconds,
         centre=lines.centre,
+        seconds=quiet.seconds(lines),
         count=count,
-        root_count=np.sqrt(count),
+        weight=weight,
+        root_weight=np.sqrt(weight),
         power=power,
         half_omega=0.5 * omega,
         half_inverse=half_inverse,
@@ -204,8 +235,8 @@ class Short:
     matters: bool  # whether exp(-g T) changes anything in any row
 
     @classmethod
-    def of(cls, wn: Array, g: Array, seconds: float, centre: float) -> Self:
-        """Return the coefficients for wn and g of shape (rows, 1)."""
+    def of(cls, wn: Array, g: Array, seconds: Array, centre: float) -> Self:
+        """Return the coefficients for wn, g and the windows' length of shape (rows, 1)."""
         decay = g * seconds
         soon = decay < _UNDERFLOW
         kappa = 1.0 / decay
@@ -309,11 +340,11 @@ def _add_short(short: Short, height: Array, x: Array, d: Array, columns: Array) 
     by_g -= (height * (short.sigma_g - short.sigma)) * xd2
 
 
-def on_lines(theta: Array, lines: Lines, kind: type[np.floating] = np.float64) -> NDArray[np.floating]:
+def on_lines(theta: Array, lines: Lines, quiet: Quiet, kind: type[np.floating] = np.float64) -> NDArray[np.floating]:
     """Return the expected periodogram on every line, shape (rows, lines), in single precision where that will do."""
     wn, logs = theta[:, WN, None], np.exp(theta[:, LN_G:, None])
     g, level, lift = logs[:, 0], logs[:, 2], logs[:, 3]
-    short = Short.of(wn, g, lines.seconds, lines.centre)
+    short = Short.of(wn, g, quiet.seconds(lines), lines.centre)
     height = 2.0 * logs[:, 1] / g
     middle = lines.omega[lines.count // 2]
     omega, inverse = (lines.omega - middle).astype(kind), (0.5 / lines.omega).astype(kind)

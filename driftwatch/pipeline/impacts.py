@@ -5,7 +5,6 @@ Onsets are looked for in segments on a fixed grid, one for each block of the zoo
 
 from __future__ import annotations
 
-import itertools
 import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -132,35 +131,27 @@ class Impacts:
         tail = baseband.view(end - (end - first) // 4, end)
         return bool(np.vdot(head, head).real / len(head) >= FALL * np.vdot(tail, tail).real / len(tail))
 
-    def within(self, first: int, end: int) -> bool:
-        """Say whether an impact disturbs the baseband from `first` to before `end`."""
-        return bool(self._disturbed(first, end))
-
-    def quiet_stretch(self, first: int, end: int) -> tuple[int, int]:
-        """Return begin and end of the longest stretch from `first` to before `end` that no impact disturbs."""
-        edges = [(first, first), *self._disturbed(first, end), (end, end)]
-        quiet = [(left[1], right[0]) for left, right in itertools.pairwise(edges)]
-        return max(quiet, key=lambda stretch: stretch[1] - stretch[0])
-
     def forget(self, before: int) -> None:
         """Let go of impacts that are over before baseband index `before`; the last one stays, for its level."""
         self._impacts = [
             one for one in self._impacts[:-1] if one.settled is None or one.settled > before
         ] + self._impacts[-1:]
 
-    def _disturbed(self, first: int, end: int) -> list[tuple[int, int]]:
-        """Return what impacts disturb of a stretch, each as (begin, end), clipped to it and in order."""
-        return [
-            (max(first, math.floor(one.onset) - 1), end if one.settled is None else min(end, one.settled))
-            for one in self._impacts
-            if not one.doubtful and one.onset - 1 < end and (one.settled is None or one.settled > first)
-        ]
+    def disturbed(self, first: int, end: int) -> list[tuple[int, int]]:
+        """Return what impacts disturb of the baseband from `first` to before `end`: runs (begin, end), in order."""
+        runs: list[tuple[int, int]] = []
+        for one in self._impacts:
+            begin = max(first, math.floor(one.onset) - 1, runs[-1][1] if runs else first)
+            until = end if one.settled is None else min(end, one.settled)
+            if not one.doubtful and begin < until:
+                runs.append((begin, until))
+        return runs
 
     def _power_before(self, baseband: SampleBuffer[np.complex64], place: float) -> float:
         """Return the mean power over a window's length before an onset, or before the impact that still rings then."""
         end = math.floor(place) - 1
         first = max(self._begin, end - self._band.window)
-        earlier = self._disturbed(first, end) if end > first else []
+        earlier = self.disturbed(first, end) if end > first else []
         if earlier and self._impacts[-1].settled is None:
             return self._impacts[-1].before
         first = max([first, *(stretch[1] for stretch in earlier)])

@@ -187,38 +187,43 @@ class ModeLine:
             self._window += 1
 
     def _ambient(self, windows: list[tuple[int, str | None]]) -> Iterator[_Measured]:
-        """Yield the measurement of each window: whole ones in one batch, each with an impact by itself."""
-        whole: list[Extent] = []
+        """Yield the measurement of each window; what impacts disturb of it is blanked."""
+        batch: list[Extent] = []
+        blanks: list[list[tuple[int, int]]] = []
         for window, spoilt in windows:
             extent = self._extent(window)
-            if spoilt is not None:
-                body = unusable_body(self._subject, Method.AMBIENT, extent, (spoilt,))
-                yield self._ready(extent.end // self._band.decimation), body
-            elif self._impacts.within(*self._baseband_of(extent)):
-                yield self._ready(extent.end // self._band.decimation), self._around_impacts(extent)
-            else:
-                whole.append(extent)
-        if whole:
-            for extent, body in zip(whole, ambient_bodies(self._subject, whole, self._fit(whole)), strict=True):
-                yield self._ready(extent.end // self._band.decimation), body
+            disturbed = self._impacts.disturbed(*self._baseband_of(extent))
+            lost = sum(end - first for first, end in disturbed)
+            if spoilt is None and lost <= (1.0 - LEAST_QUIET) * self._band.window:
+                batch.append(extent)
+                blanks.append(disturbed)
+                continue
+            body = unusable_body(self._subject, Method.AMBIENT, extent, (spoilt or "impact",))
+            yield self._ready(extent.end // self._band.decimation), body
+        if not batch:
+            return
+        also: list[tuple[str, ...]] = [("impact",) if blank else () for blank in blanks]
+        bodies = ambient_bodies(self._subject, batch, self._fit(batch, blanks), also)
+        for extent, body in zip(batch, bodies, strict=True):
+            yield self._ready(extent.end // self._band.decimation), body
 
     def _baseband_of(self, extent: Extent) -> tuple[int, int]:
         return extent.first_sample // self._band.decimation, extent.end // self._band.decimation
 
-    def _fit(self, extents: list[Extent]) -> ambient.AmbientFit:
-        """Fit extents of one length."""
+    def _fit(self, extents: list[Extent], blanks: list[list[tuple[int, int]]]) -> ambient.AmbientFit:
         rows = np.stack([self._baseband.view(*self._baseband_of(extent)) for extent in extents])
+        blanked = self._blanked(extents, blanks) if any(blanks) else None
         band = self._band
-        return ambient.fit(rows, band.rate_hz, band.centre_hz, band.search_hz, band.velocity_power)
+        return ambient.fit(rows, band.rate_hz, band.centre_hz, band.search_hz, band.velocity_power, blanked)
 
-    def _around_impacts(self, extent: Extent) -> Measurement:
-        """Measure the longest stretch of a window that no impact disturbs, or say that too little is left."""
-        first, end = self._impacts.quiet_stretch(*self._baseband_of(extent))
-        decimation = self._band.decimation
-        if end - first < LEAST_QUIET * self._band.window:
-            return unusable_body(self._subject, Method.AMBIENT, extent, ("impact",))
-        quiet = Extent(first * decimation, (end - first) * decimation)
-        return next(ambient_bodies(self._subject, [quiet], self._fit([quiet]), also=("impact",)))
+    def _blanked(self, extents: list[Extent], blanks: list[list[tuple[int, int]]]) -> NDArray[np.bool_]:
+        """Return which samples of each window are not to be used, shape (windows, samples)."""
+        blanked = np.zeros((len(extents), self._band.window), dtype=np.bool_)
+        for row, (extent, blank) in enumerate(zip(extents, blanks, strict=True)):
+            origin, _ = self._baseband_of(extent)
+            for first, end in blank:
+                blanked[row, first - origin : end - origin] = True
+        return blanked
 
     # ------------------------------------------------------------------------------------------ ringdown
 

@@ -42,7 +42,7 @@ class Extent:
 
 
 def ambient_bodies(
-    subject: Subject, extents: list[Extent], fit: AmbientFit, also: tuple[str, ...] = ()
+    subject: Subject, extents: list[Extent], fit: AmbientFit, also: list[tuple[str, ...]]
 ) -> Iterator[Measurement]:
     """Yield the measurement of each row of a fit; `also` are reasons that do not make it unusable."""
     columns = zip(
@@ -56,9 +56,10 @@ def ambient_bodies(
         fit.snr_db.tolist(),
         fit.fit_p.tolist(),
         fit.reasons,
+        also,
         strict=True,
     )
-    for extent, frequency_hz, std_f, ln_q, std_q, correlation, level, snr_db, fit_p, reasons in columns:
+    for extent, frequency_hz, std_f, ln_q, std_q, correlation, level, snr_db, fit_p, reasons, also_row in columns:
         usable = not reasons
         q = math.exp(ln_q) if usable else math.nan
         yield Measurement(
@@ -81,7 +82,7 @@ def ambient_bodies(
             snr_db=known(snr_db),
             fit_p=known(fit_p),
             usable=usable,
-            reasons=reasons + also,
+            reasons=reasons + also_row,
         )
 
 

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from scipy import stats
 
 from benchmarks import ambient as ambient_bench
-from benchmarks.bars import FAMILY_REGULAR, Size
+from benchmarks.bars import FAMILY_REGULAR, Size, coverage_ok, spread_ok
 from benchmarks.response import CHUNK, Case, velocity, windows
 
 CASE = Case(900.0, 40.0, 4.0, 4000)
@@ -180,3 +180,44 @@ def test_contradictory_arguments_are_refused() -> None:
         fit(good, 100.0, 900.0, (820.0, 980.0))
     with pytest.raises(ValueError, match="0 < low < high"):
         fit(good, 250.0, 900.0, (980.0, 820.0))
+
+
+def blanks(windows_: NDArray[np.complex64], share: float, pieces: int) -> NDArray[np.bool_]:
+    """Blank runs of equal length at random places, together about a share of each window."""
+    count, length = windows_.shape
+    run = int(share * length / pieces)
+    begins = np.random.default_rng(0).integers(0, length - run, (count, pieces, 1))
+    blanked = np.zeros((count, length), dtype=np.bool_)
+    for begin in np.moveaxis(begins, 1, 0):
+        np.put_along_axis(blanked, begin + np.arange(run), np.bool_(True), axis=1)
+    return blanked
+
+
+@pytest.mark.parametrize(("share", "pieces"), [(0.05, 1), (0.3, 1), (0.45, 2)])
+def test_windows_with_blanked_samples_state_the_uncertainty_that_they_have(share: float, pieces: int) -> None:
+    """Spread of the standardised errors and coverage, 600 windows; false-alarm probability 1e-6 over all 12 looks."""
+    part = simulated(CASE, 10.0, 600)
+    blanked = blanks(part, share, pieces)
+    part[blanked] = 1e3  # whatever stood there
+    band = CASE.band
+    result = fit(part, band.rate_hz, band.centre_hz, band.search_hz, band.velocity_power, blanked)
+    assert sum(not words for words in result.reasons) >= 594
+    alpha = FAMILY_REGULAR / 12
+    for error, std in (
+        (np.log(result.frequency_hz / CASE.frequency_hz), result.ln_frequency_std),
+        (result.ln_q - np.log(CASE.q), result.ln_q_std),
+    ):
+        assert spread_ok(error / std, 1.0, 1.1, alpha)
+        assert coverage_ok(int(np.sum(np.abs(error) < 1.96 * std)), 600, 0.95, 0.95, alpha)
+
+
+def test_a_window_without_blanks_is_the_same_with_and_without_saying_so() -> None:
+    part, band = simulated(CASE, 10.0), CASE.band
+    said = fit(part, band.rate_hz, band.centre_hz, band.search_hz, 0, np.zeros(part.shape, dtype=np.bool_))
+    assert_same(said, fitted(CASE, part), np.arange(len(part)))
+
+
+def test_blanks_of_another_shape_are_refused() -> None:
+    part, band = simulated(CASE, 10.0), CASE.band
+    with pytest.raises(ValueError, match="expected that of the windows"):
+        fit(part, band.rate_hz, band.centre_hz, band.search_hz, 0, np.zeros((1, 3), dtype=np.bool_))

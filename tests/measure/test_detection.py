@@ -22,7 +22,9 @@ def test_search_begins_at_the_mode(hz: float, q: float) -> None:
     g = wn / (2 * q)
     theta = np.array([[wn, np.log(g), 0.0, 0.0, 0.0]])
     theta[0, 3] = np.log(0.1 / (LINES.high - LINES.low) * 2 * np.pi)
-    power = whittle.on_lines(theta, LINES) * np.random.default_rng(0).exponential(size=(50, LINES.count))
+    power = whittle.on_lines(theta, LINES, whittle.Quiet.whole(1)) * np.random.default_rng(0).exponential(
+        size=(50, LINES.count)
+    )
     begin = detection.start(whittle.cumulated(power / np.mean(power, axis=1, keepdims=True)), LINES)
     assert np.max(np.abs(begin[:, WN] - wn)) < 1.5 * g
     assert np.max(np.abs(begin[:, LN_G] - np.log(g))) < np.log(4.0)
@@ -33,7 +35,7 @@ def test_floor_alone_is_as_likely_as_its_optimum() -> None:
     place = (LINES.omega - LINES.low) / (LINES.high - LINES.low)
     power = (0.8 + 0.4 * place) * np.random.default_rng(0).exponential(size=(5, LINES.count))
     wn = np.full(5, 2 * np.pi * 900.0)
-    pools = whittle.pool(whittle.cumulated(power), LINES, wn, np.full(5, 60.0))
+    pools = whittle.pool(whittle.cumulated(power), LINES, whittle.Quiet.whole(5), wn, np.full(5, 60.0))
     got = detection.floor_only(pools, 1e-9)
     for row in range(5):
 

@@ -13,7 +13,13 @@ LINES = whittle.lines_of(1000, 250.0, 900.0, (820.0, 980.0), 0)
 def p_values(scale: np.ndarray, rows: int = 400) -> np.ndarray:
     """p-values of exponentials of mean `scale` under a flat model of level 1."""
     power = scale * np.random.default_rng(0).exponential(size=(rows, LINES.count))
-    pools = whittle.pool(whittle.cumulated(power), LINES, np.full(rows, 2 * np.pi * 900.0), np.full(rows, 60.0))
+    pools = whittle.pool(
+        whittle.cumulated(power),
+        LINES,
+        whittle.Quiet.whole(rows),
+        np.full(rows, 2 * np.pi * 900.0),
+        np.full(rows, 60.0),
+    )
     return residuals.p_value(np.max(power, axis=1), LINES.count, np.ones_like(pools.power), pools)
 
 

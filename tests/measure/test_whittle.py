@@ -35,7 +35,7 @@ def test_expectation_is_that_of_the_complex_formula(length: int, g: float) -> No
     phase = np.exp(-decay * seconds - 1j * (grid.omega - np.sqrt(wn**2 - decay**2)) * seconds)
     wanted = 2 * np.exp(theta[:, LN_P, None]) * np.real((1 - (1 - phase) / (a * seconds)) / a)
     # the phase psi is a difference of numbers near 1e4 rad: it is known to some 1e-12
-    np.testing.assert_allclose(whittle.on_lines(theta, grid), wanted, rtol=1e-10)
+    np.testing.assert_allclose(whittle.on_lines(theta, grid, whittle.Quiet.whole(len(theta))), wanted, rtol=1e-10)
 
 
 @pytest.mark.parametrize("gt", [30.0, 8.0, 2.0])
@@ -54,7 +54,9 @@ def test_expectation_is_that_of_a_sampled_window(gt: float) -> None:
     turns = np.exp(-1j * np.outer(grid.omega - grid.centre, lag / rate))
     wanted = (1.0 + 2.0 * np.real(turns @ covariance)) / rate
     theta = np.array([[wn, np.log(g), 0.0, -60.0, 0.0]])
-    assert np.max(np.abs(whittle.on_lines(theta, grid)[0] - wanted)) < 2e-3 * np.max(wanted)
+    assert np.max(np.abs(whittle.on_lines(theta, grid, whittle.Quiet.whole(len(theta)))[0] - wanted)) < 2e-3 * np.max(
+        wanted
+    )
 
 
 @pytest.mark.parametrize(("length", "g", "power"), [(1600, 60.0, -1), (160, 8.0, 0), (120, 2.0, 1)])
@@ -65,7 +67,7 @@ def test_derivatives_are_those_of_the_expectation(length: int, g: float, power: 
     """
     grid, theta = lines(length, power), parameters(g)
     sums = whittle.cumulated(np.random.default_rng(0).exponential(size=(3, grid.count)))
-    pools = whittle.pool(sums, grid, theta[:, WN], 1.2 * np.exp(theta[:, LN_G]))
+    pools = whittle.pool(sums, grid, whittle.Quiet.whole(len(theta)), theta[:, WN], 1.2 * np.exp(theta[:, LN_G]))
     _, columns = whittle.expected(theta, pools)
     for column in range(5):
         step = np.zeros((3, 5))
@@ -82,7 +84,13 @@ def test_pooling_loses_no_line_and_moves_no_expectation(g: float) -> None:
     2e-3 is left by the fourth-order term in pools of three lines beside the narrowest resonance, 4.5 lines wide.
     """
     grid, theta = lines(1600), parameters(g)
-    pools = whittle.pool(whittle.cumulated(whittle.on_lines(theta, grid)), grid, theta[:, WN], np.exp(theta[:, LN_G]))
+    pools = whittle.pool(
+        whittle.cumulated(whittle.on_lines(theta, grid, whittle.Quiet.whole(len(theta)))),
+        grid,
+        whittle.Quiet.whole(len(theta)),
+        theta[:, WN],
+        np.exp(theta[:, LN_G]),
+    )
     assert np.all(np.sum(pools.count, axis=1) == grid.count)
     filled = pools.count > 0
     model, _ = whittle.expected(theta, pools)
@@ -93,7 +101,9 @@ def test_few_lines_are_not_pooled() -> None:
     """Where there are no more lines than pools each line is a pool of its own."""
     grid, theta = lines(60), parameters(20.0)
     power = np.random.default_rng(0).exponential(size=(3, grid.count))
-    pools = whittle.pool(whittle.cumulated(power), grid, theta[:, WN], np.exp(theta[:, LN_G]))
+    pools = whittle.pool(
+        whittle.cumulated(power), grid, whittle.Quiet.whole(len(theta)), theta[:, WN], np.exp(theta[:, LN_G])
+    )
     assert grid.count <= whittle.POOLS
     np.testing.assert_allclose(pools.power, power, rtol=1e-12, atol=1e-13)  # differences of a running sum near 50
 
