@@ -30,7 +30,7 @@ Reals = NDArray[np.float64]
 WATCH = 4.0
 """First stage: mean energy of the innovations over the next W samples, over their usual one."""
 
-GAIN = 32.0
+GAIN = 30.0
 """Second stage: gain in log-likelihood of a decaying tone that begins here."""
 
 _PAST = 12  # blocks from which the own predictor and the usual energy of the last samples come
@@ -138,8 +138,6 @@ class Detector:
         onsets = []
         for peak in _peaks(np.where(near, power, 0.0), self.separation, self.ring):
             if not self.before <= peak < n - self.after + self.separation:
-                continue
-            if np.mean(power[peak : peak + _FUTURE * blocks.size]) < WATCH * usual[peak]:
                 continue
             gain = self._gain(y, peak, complex(a[peak]), float(usual[peak]))
             if gain > GAIN:
