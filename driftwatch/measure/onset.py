@@ -48,6 +48,8 @@ _ABOVE = 4.0  # by how much the power of a free decay must stand above the row's
 _FOLLOW = 0.5  # and what share of the energy its own predictor must leave
 _NEAR = 4  # strides from which the predictor in a free decay comes
 _RISING = 3.0  # power over that a stride before, of samples that hold an onset's rise and are no decay yet
+_SILENCE = 1e-6  # energy of a stride over a jump's, below which it counts as silence
+_SETTLED = 0.05  # innovations after an onset out of silence over the jump's
 _QUIETER = 1.2  # mean energy of noise over that of the quieter of two halves
 _TINY = 1e-200  # keeps a quotient finite; far below the square of any sample
 
@@ -140,9 +142,17 @@ class Detector:
             if not self.before <= peak < n - self.after + self.separation:
                 continue
             gain = self._gain(y, peak, complex(a[peak]), float(usual[peak]))
-            if gain > GAIN:
+            if gain > GAIN and self._dies_away(y, power, peak):
                 onsets.append(Onset(_half_way(power, peak), math.sqrt(power[peak]), gain))
         return onsets
+
+    def _dies_away(self, y: NDArray[np.complex128], power: Reals, peak: int) -> bool:
+        """After silence noise begins as suddenly as a decay; but of a decay no innovation follows the first."""
+        s = self.stride
+        past = np.abs(y[peak - 2 * (_PAST + 2) * s : peak - 2 * s]) ** 2
+        quietest = float(past.reshape(-1, s).mean(axis=1).min())
+        follows = float(np.median(power[peak + self.separation : peak + 10 * s]))
+        return quietest > _SILENCE * float(power[peak]) or follows < _SETTLED * float(power[peak])
 
     def _gain(self, y: NDArray[np.complex128], peak: int, a: complex, usual: float) -> float:
         """Highest gain of a tone that begins within a stride of the peak and decays as fast as a band may show.
