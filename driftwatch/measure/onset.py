@@ -30,7 +30,7 @@ Reals = NDArray[np.float64]
 WATCH = 4.0
 """First stage: mean energy of the innovations over the next W samples, over their usual one."""
 
-GAIN = 30.0
+GAIN = 34.0
 """Second stage: gain in log-likelihood of a decaying tone that begins here."""
 
 _PAST = 12  # blocks from which the own predictor and the usual energy of the last samples come
@@ -38,7 +38,7 @@ _FUTURE = 2  # W, in blocks
 _RING = 13.0  # how far the band edge's ringing reaches, in reciprocal bandwidths
 _DECAY = 4.0  # shortest time constant of a tone, in reciprocal bandwidths: six half-power widths a side
 _WIDENED = 1.25  # width of flat noise in the stream, its edges included, over that of the search band
-_FILLED = 0.6  # the same over the stream's rate, where the edges are wide
+_FILLED = 0.5  # the same over the stream's rate, where the edges are wide
 _STEP_SHARE = 0.1  # least power of a jump over the level just before it: a decay that is no pure exponential jitters
 _RING_FIRST_DB = 20.0  # by how much the ringing lies below the jump where it begins to be told apart
 _RING_LAST_DB = 55.0  # and where it ends
