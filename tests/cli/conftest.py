@@ -56,6 +56,24 @@ control = "tcp://127.0.0.1:{control}"
 """A resonance that leaves its band after 7 s."""
 
 
+TINY = """
+schema = 1
+[station]
+name = "tiny"
+[[channel]]
+name = "drive end"
+[[mode]]
+name = "rocking"
+channel = "drive end"
+search_hz = [340.0, 460.0]
+window_s = 1.0
+step_s = {step_s}
+[store]
+url = "sqlite:///own.db"
+"""
+"""One mode and no source: for replays."""
+
+
 class Bench:
     """A folder in which the program is started."""
 
@@ -72,6 +90,12 @@ class Bench:
         text = BENCH.format(pace=pace, seconds=length, port=self.port, control=self._control)
         (self.folder / name).write_text(text, encoding="utf-8")
         return Path(name)
+
+    def tiny(self, step_s: float = 0.1) -> str:
+        """Write the configuration `TINY` as tiny.toml and return its text; at 0.1 s it gives 20 records a second."""
+        text = TINY.format(step_s=step_s)
+        (self.folder / "tiny.toml").write_text(text, encoding="utf-8")
+        return text
 
     def start(self, *arguments: object, **options: Any) -> subprocess.Popen[str]:
         """Start the program; what still runs at the end of the test is killed."""

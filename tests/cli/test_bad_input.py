@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import ctypes
 import os
-import resource
 import signal
 import sqlite3
 import subprocess
@@ -17,25 +16,10 @@ from typing import Any
 import numpy as np
 import pytest
 import soundfile
-from driftwatch.daemon.replay import BLOCK_S
-from driftwatch.store.queries import Reader
+from driftwatch.store.writer import Writer
 from numpy.typing import NDArray
 
 RATE = 4000
-
-TINY = """
-schema = 1
-[station]
-name = "tiny"
-[[channel]]
-name = "drive end"
-[[mode]]
-name = "rocking"
-channel = "drive end"
-search_hz = [340.0, 460.0]
-window_s = 1.0
-step_s = 0.1
-"""
 
 Objects = Callable[[str], list[dict[str, Any]]]
 
@@ -54,7 +38,7 @@ def write(path: Path, samples: NDArray[np.float32], rate_hz: int = RATE, subtype
 def folder(bench: Any) -> Path:
     """Return the folder, with a configuration and a good recording of 5 s in it."""
     found: Path = bench.folder
-    (found / "tiny.toml").write_text(TINY, encoding="utf-8")
+    bench.tiny()
     write(found / "good.wav", noise(5.0))
     return found
 
@@ -75,7 +59,7 @@ def refused(bench: Any, *arguments: str, says: tuple[str, ...], **options: Any) 
 # ---------------------------------------------------------------------------------------------- recordings
 
 
-def _spoil(folder: Path) -> None:
+def _spoil(folder: Path, tiny: str) -> None:
     """Make a recording of every bad kind."""
     (folder / "empty.wav").touch()
     (folder / "picture.wav").write_bytes(b"\x89PNG\r\n\x1a\n" + bytes(range(256)) * 4)
@@ -85,40 +69,46 @@ def _spoil(folder: Path) -> None:
     write(folder / "fast.wav", noise(2.0), 8000)
     write(folder / "stereo.wav", noise(2.0, 2))
     (folder / "drawer").mkdir()
-    (folder / "second.toml").write_text(TINY.replace('name = "drive end"\n', 'name = "drive end"\ninput = 2\n', 1))
+    (folder / "second.toml").write_text(tiny.replace('name = "drive end"\n', 'name = "drive end"\ninput = 2\n', 1))
 
 
 @pytest.mark.parametrize(
     ("arguments", "says"),
     [
-        (["tiny.toml", "none.wav"], ["none.wav: No such file or directory; expected a recording; check the path"]),
-        (["tiny.toml", "empty.wav"], ["empty.wav: empty (0 bytes); expected a recording; copy it again"]),
-        (["tiny.toml", "picture.wav"], ["picture.wav: not readable as audio", "expected WAV, FLAC", "convert it"]),
-        (["tiny.toml", "notes.wav"], ["notes.wav: not readable as audio", "expected WAV, FLAC", "convert it"]),
-        (["tiny.toml", "headless.wav"], ["headless.wav: not readable as audio", "expected WAV, FLAC"]),
-        (["tiny.toml", "drawer"], ["drawer: a directory; expected a recording; name the files in it"]),
-        (["tiny.toml", "good.wav", "good.wav"], ["good.wav: given twice; expected each recording once; leave one"]),
         (["bench.toml", "fast.wav"], ["fast.wav: 8000 Hz; expected 4000 Hz as configured; resample it"]),
         (["tiny.toml", "good.wav", "fast.wav"], ["fast.wav: 8000 Hz; expected 4000 Hz like good.wav"]),
         (["tiny.toml", "good.wav", "stereo.wav"], ["stereo.wav: 2 inputs; expected 1 input like good.wav"]),
         (["second.toml", "good.wav"], ["good.wav: 1 input; expected at least 2 as configured; correct the channels'"]),
         (["tiny.toml", "slow.wav"], ["search_hz: got [340, 460] at 900 samples", "under half the rate, 450 Hz"]),
-        (["tiny.toml", "none.wav", "empty.wav"], ["none.wav: No such file", "empty.wav: empty (0 bytes)"]),
     ],
     ids=lambda value: "-".join(value) if value[0].endswith(".toml") else "",
 )
-def test_a_bad_recording_is_refused_before_anything_starts(
+def test_a_recording_that_does_not_fit_is_refused_before_anything_starts(
     bench: Any, folder: Path, arguments: list[str], says: list[str]
 ) -> None:
-    _spoil(folder)
+    _spoil(folder, bench.tiny())
     bench.config()
     refused(bench, "replay", *arguments, says=tuple(says))
+
+
+def test_files_that_are_no_recordings_are_refused_together(bench: Any, folder: Path) -> None:
+    _spoil(folder, bench.tiny())
+    bad = ("none.wav", "empty.wav", "picture.wav", "notes.wav", "headless.wav", "drawer")
+    says = (
+        "none.wav: No such file or directory; expected a recording; check the path",
+        "empty.wav: empty (0 bytes); expected a recording; copy it again",
+        *(f"{name}: not readable as audio" for name in ("picture.wav", "notes.wav", "headless.wav")),
+        "expected WAV, FLAC or the like; convert it or leave it out",
+        "drawer: a directory; expected a recording; name the files in it",
+        "good.wav: given twice; expected each recording once; leave one",
+    )
+    refused(bench, "replay", "tiny.toml", *bad, "good.wav", "good.wav", says=says)
 
 
 def test_a_bad_recording_is_refused_live_as_well(bench: Any, folder: Path) -> None:
     (folder / "empty.wav").touch()
     source = '[[source]]\nname = "tape"\nkind = "recording"\npath = "{}"\n'
-    (folder / "live.toml").write_text(TINY + source.format("empty.wav"))
+    (folder / "live.toml").write_text(bench.tiny() + source.format("empty.wav"))
     refused(bench, "run", "live.toml", says=("empty.wav: empty (0 bytes); expected a recording",))
 
 
@@ -187,9 +177,8 @@ def test_every_error_of_a_configuration_is_told_in_one_pass(bench: Any) -> None:
         'channel[2] "Drive End" . input: got 3; expected an input from 1 to 1',
         'mode[3] "below" . channel: got "driven end"; expected the name of a channel in this file',
     )
-    for command in (["run"], ["check"], ["replay"]):
-        more = ["any.wav"] if command == ["replay"] else []
-        refused(bench, *command, "bad.toml", *more, says=says)
+    refused(bench, "run", "bad.toml", says=says)
+    refused(bench, "replay", "bad.toml", "any.wav", says=says)
 
 
 @pytest.mark.parametrize(
@@ -198,13 +187,13 @@ def test_every_error_of_a_configuration_is_told_in_one_pass(bench: Any) -> None:
         (None, ["config.toml: got no such file; expected a configuration in TOML; check the path"]),
         ("", ["schema: got nothing; expected schema = 1", "channel: got none", "mode: got none"]),
         ("schema = = 1\n", ["config.toml: got no TOML", "at line 1", "expected TOML; correct the line"]),
-        (TINY, ["source: got none; expected at least one [[source]] to run live; add one, or replay recordings"]),
+        ("tiny", ["source: got none; expected at least one [[source]] to run live; add one, or replay recordings"]),
     ],
     ids=["missing", "empty", "no TOML", "no source"],
 )
 def test_a_file_that_is_no_configuration_to_run_is_refused(bench: Any, text: str | None, says: list[str]) -> None:
     if text is not None:
-        (bench.folder / "config.toml").write_text(text)
+        (bench.folder / "config.toml").write_text(bench.tiny() if text == "tiny" else text)
     refused(bench, "run", "config.toml", says=tuple(says))
 
 
@@ -308,7 +297,7 @@ def test_a_folder_that_may_not_be_written_to_is_refused(bench: Any, folder: Path
 def test_a_database_that_may_only_be_read_is_refused_and_nothing_is_made_beside_it(
     bench: Any, folder: Path, bound: dict[str, Any]
 ) -> None:
-    assert bench.run("replay", "tiny.toml", "good.wav", "--store", "rows.db").returncode == 0
+    Writer.open(folder / "rows.db", "s").close()
     (folder / "rows.db.lock").unlink()
     (folder / "rows.db").chmod(0o444)
     says = ("rows.db: the database cannot be opened: readonly file; the database may only be read",)
@@ -320,131 +309,19 @@ def test_a_database_that_another_daemon_writes_to_is_refused(bench: Any, folder:
     assert daemon.stderr is not None
     while "Ctrl-C ends it" not in (line := daemon.stderr.readline()):
         assert line
-    with closing(sqlite3.connect(folder / "other.db")) as connection:
-        connection.execute("CREATE TABLE orders (number, price)")
     says = (f"process {daemon.pid} (station 'bench') is writing to this database", "name another database with --store")
-    for command in (["run", "bench.toml", "--publish", "tcp://127.0.0.1:*"], ["replay", "tiny.toml", "good.wav"]):
-        done = bench.run(*command, "--store", "state/bench.db")
-        assert (done.returncode, done.stdout) == (2, "")
-        assert all(phrase in done.stderr for phrase in says)
+    done = bench.run("replay", "tiny.toml", "good.wav", "--store", "state/bench.db")
+    assert (done.returncode, done.stdout) == (2, "")
+    assert all(phrase in done.stderr for phrase in says)
     daemon.send_signal(signal.SIGTERM)
     daemon.communicate(timeout=20)
     assert daemon.returncode == 0
 
 
 def test_a_database_that_another_program_has_locked_is_refused(bench: Any, folder: Path) -> None:
-    assert bench.run("replay", "tiny.toml", "good.wav", "--store", "rows.db").returncode == 0
+    Writer.open(folder / "rows.db", "s").close()
     with closing(sqlite3.connect(folder / "rows.db", isolation_level=None)) as connection:
         connection.execute("BEGIN IMMEDIATE")
         done = bench.run("replay", "tiny.toml", "good.wav", "--store", "rows.db")
     assert (done.returncode, done.stdout) == (2, "")
     assert "rows.db: the database cannot be opened: database is locked; another program holds" in done.stderr
-
-
-# ---------------------------------------------------------------------------------------------- later
-
-
-class Stalled:
-    """A replay that waits: it has stored its first group, and cannot go on until somebody reads what it prints.
-
-    The first group is larger than what the pipe holds, 64 KiB, so this is certain and takes no timing.
-    """
-
-    def __init__(self, bench: Any, *recordings: str, options: tuple[str, ...] = ()) -> None:
-        self.process = bench.start("replay", "tiny.toml", *recordings, "--json", "--store", "rows.db", *options)
-        assert self.process.stdout is not None
-        self.first = self.process.stdout.readline()
-        assert self.first, self.process.communicate()[1]
-        self.stored = _rows(bench.folder / "rows.db")
-        assert self.stored * 500 > 2**17  # no record is shorter than 500 bytes but the first
-
-    def go_on(self) -> tuple[str, str]:
-        assert self.process.stdout is not None
-        out = self.first + self.process.stdout.read()  # not communicate(), which forgets what readline() has read ahead
-        return out, self.process.communicate(timeout=60)[1]
-
-
-def _rows(path: Path) -> int:
-    with Reader.open(path) as reader:
-        return sum(reader.runs()[-1].counts.values())
-
-
-def _failed(stalled: Stalled, objects: Objects, says: str) -> list[dict[str, Any]]:
-    """Hold a failure under way to what it is: status 1, one line, nothing but objects; return these."""
-    out, err = stalled.go_on()
-    assert stalled.process.returncode == 1, err
-    assert err.startswith("Error: ")
-    assert says in err
-    assert len(err.splitlines()) == 1
-    records = objects(out)
-    assert [one["sequence"] for one in records] == list(range(1, len(records) + 1))
-    return records
-
-
-def test_a_recording_that_shrinks_while_it_is_replayed_ends_the_replay_with_its_rows_stored(
-    bench: Any, folder: Path, objects: Objects
-) -> None:
-    write(folder / "long.wav", noise(3 * BLOCK_S))
-    stalled = Stalled(bench, "long.wav")
-    os.truncate(folder / "long.wav", round(1.5 * BLOCK_S * RATE * 4))  # its header counts too
-    records = _failed(stalled, objects, "long.wav: reading stopped at ")
-    assert records[-1]["kind"] == "run"
-    assert records[-1]["reason"].startswith("failed: long.wav: reading stopped")
-    assert _rows(folder / "rows.db") == len(records)
-
-
-def test_a_recording_that_vanishes_before_its_turn_ends_the_replay_with_its_rows_stored(
-    bench: Any, folder: Path, objects: Objects
-) -> None:
-    write(folder / "long.wav", noise(1.5 * BLOCK_S))
-    ended = (folder / "long.wav").stat().st_mtime
-    os.utime(folder / "good.wav", (ended + 5.0, ended + 5.0))  # so that the two join by their dates
-    stalled = Stalled(bench, "long.wav", "good.wav")
-    (folder / "good.wav").unlink()
-    records = _failed(stalled, objects, "good.wav: reading stopped at 0.000 s")
-    assert records[-1]["samples"] == 1.5 * BLOCK_S * RATE
-    assert _rows(folder / "rows.db") == len(records)
-
-
-def test_a_database_taken_away_under_way_ends_the_replay_and_the_rows_in_it_stay(
-    bench: Any, folder: Path, objects: Objects
-) -> None:
-    write(folder / "long.wav", noise(3 * BLOCK_S))
-    stalled = Stalled(bench, "long.wav")
-    (folder / "rows.db").rename(folder / "moved.db")
-    records = _failed(stalled, objects, "the file was deleted, moved or replaced since it was opened; expected to find")
-    assert len(records) == stalled.stored  # nothing was told that is not stored
-    assert not (folder / "rows.db").exists()
-    (folder / "moved.db").rename(folder / "rows.db")  # as the line says: where its log still lies
-    assert _rows(folder / "rows.db") == stalled.stored
-
-
-def test_a_disk_that_fills_under_way_ends_the_replay_and_the_rows_stay(
-    bench: Any, folder: Path, objects: Objects
-) -> None:
-    write(folder / "long.wav", noise(3 * BLOCK_S))
-    stalled = Stalled(bench, "long.wav")
-    largest = max(path.stat().st_size for path in folder.glob("rows.db*"))
-    resource.prlimit(stalled.process.pid, resource.RLIMIT_FSIZE, (largest, largest))
-    records = _failed(stalled, objects, "rows.db: nothing of this group was stored: disk I/O error; the disk does not")
-    assert len(records) == stalled.stored
-    assert _rows(folder / "rows.db") == stalled.stored
-
-
-@pytest.mark.parametrize("how", ["deleted", "full"])
-def test_a_store_that_fails_ends_a_live_run_in_one_line(bench: Any, folder: Path, how: str) -> None:
-    daemon = bench.start("run", bench.config(pace=10.0))
-    assert daemon.stdout is not None
-    while "tracking" not in (line := daemon.stdout.readline()):
-        assert line
-    if how == "deleted":
-        (folder / "state" / "bench.db").unlink()
-    else:
-        resource.prlimit(daemon.pid, resource.RLIMIT_FSIZE, (4096, 4096))
-    _, err = daemon.communicate(timeout=20)
-    assert daemon.returncode == 1
-    assert err.splitlines()[-1].startswith("Error: ")
-    assert "bench.db: nothing of this group was stored" in err
-    assert "Traceback" not in err
-    if how == "full":
-        assert _rows(folder / "state" / "bench.db") > 10

@@ -22,24 +22,8 @@ from driftwatch.daemon.replay import BLOCK_S
 from driftwatch.records import parse_time
 from driftwatch.store.queries import Reader
 
-RATE = 4000
+RATE = 2400
 START = "2026-03-01T06:00:00Z"
-
-CONFIG = """
-schema = 1
-[station]
-name = "tiny"
-[[channel]]
-name = "drive end"
-[[mode]]
-name = "rocking"
-channel = "drive end"
-search_hz = [340.0, 460.0]
-window_s = 1.0
-step_s = {step_s}
-[store]
-url = "sqlite:///own.db"
-"""
 
 Objects = Callable[[str], list[dict[str, Any]]]
 
@@ -48,7 +32,7 @@ Objects = Callable[[str], list[dict[str, Any]]]
 def folder(bench: Any) -> Path:
     """Return the folder with a configuration in it: many records a second where the step is 0.1 s."""
     found: Path = bench.folder
-    (found / "tiny.toml").write_text(CONFIG.format(step_s=0.1))
+    bench.tiny()
     return found
 
 
@@ -64,7 +48,8 @@ def _stores(folder: Path) -> list[str]:
 
 
 def _stalled(bench: Any, *more: str) -> tuple[subprocess.Popen[str], str]:
-    """Start a replay and return it with its first line, when it can print no more than the pipe holds."""
+    """Start a replay and return it with its first line: its first 240 records are more than the pipe holds."""
+    bench.tiny(step_s=BLOCK_S / 120)
     process = bench.start("replay", "tiny.toml", "long.wav", "--start", START, "--json", *more)
     return process, process.stdout.readline()
 
@@ -117,8 +102,6 @@ def test_each_replay_makes_a_new_store_named_after_its_run_and_leaves_the_config
     assert _stores(folder) == sorted(f"run-{run}.db" for run in runs)
     with Reader.open(folder / f"run-{runs[0]}.db") as reader:
         assert [run.run for run in reader.runs()] == [runs[0]]
-    assert bench.run("replay", "tiny.toml", "a.wav", "--store", "sqlite:///chosen.db").returncode == 0
-    assert _stores(folder) == sorted(["chosen.db", *(f"run-{run}.db" for run in runs)])
 
 
 def test_a_replay_publishes_where_it_is_told_to(bench: Any, folder: Path, objects: Objects) -> None:
@@ -180,14 +163,13 @@ def test_a_reader_that_has_had_enough_ends_a_replay_quietly(bench: Any, folder: 
 
 def test_an_output_that_cannot_be_written_to_ends_a_replay_in_one_line(bench: Any, folder: Path) -> None:
     _record(folder / "long.wav", 3 * BLOCK_S)
-    for options in (["--json"], []):
-        with Path("/dev/full").open("wb") as full:
-            done = bench.run("replay", "tiny.toml", "long.wav", "--store", "rows.db", *options, stdout=full)
-        assert done.returncode == 1
-        assert done.stderr.startswith("Error: standard output: No space left on device; expected to print every record")
-        assert len(done.stderr.splitlines()) == 1
+    with Path("/dev/full").open("wb") as full:
+        done = bench.run("replay", "tiny.toml", "long.wav", "--store", "sqlite:///rows.db", stdout=full)
+    assert done.returncode == 1
+    assert done.stderr.startswith("Error: standard output: No space left on device; expected to print every record")
+    assert len(done.stderr.splitlines()) == 1
     with Reader.open(folder / "rows.db") as reader:
-        assert [run.end is not None for run in reader.runs()] == [True, True]
+        assert [run.end is not None for run in reader.runs()] == [True]
 
 
 # ---------------------------------------------------------------------------------------------- progress
@@ -216,8 +198,8 @@ def _on_a_terminal(bench: Any, *arguments: str) -> tuple[str, str]:
 
 
 def test_progress_is_shown_on_a_terminal_with_the_speed_and_the_time_left(bench: Any, folder: Path) -> None:
-    (folder / "tiny.toml").write_text(CONFIG.format(step_s=0.05))
-    _record(folder / "long.wav", 240.0)
+    bench.tiny(step_s=BLOCK_S / 400)
+    _record(folder / "long.wav", 4 * BLOCK_S)
     out, shown = _on_a_terminal(bench, "replay", "tiny.toml", "long.wav")
     assert re.search(r"\d+ x real time", shown)
     assert re.search(r"\d:\d\d:\d\d left", shown.replace("\x1b[0m", ""))
