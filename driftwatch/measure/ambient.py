@@ -43,7 +43,7 @@ NARROWEST = 1.0
 
 _TILT_OCTAVE = 2.0  # standard deviation of the floor's slope: a power of frequency, 2 being 6 dB an octave
 _FLOOR_SPREAD = 2.5  # standard deviation of the log floor about its first guess,
-_FLOOR_SHARE = 0.5  # which is this much of the least section's mean: that still holds some of the resonance's tail
+_FLOOR_SHARE = 0.07  # which is this much of the least section's mean: most of that is the resonance's own tail
 _ROUGH, _FINE = 1.0, 0.07  # standard deviations: when to pool anew, when to stop
 _ROUGH_MOST, _FINE_MOST = 2, 10  # evaluations of the model
 _PLAIN = (1e-25, 1e30)  # mean of squares that single precision holds with all their spread

@@ -72,19 +72,26 @@ class Impacts:
         """Baseband index up to which every onset is known."""
         return max(self._next - self.after, self._origin)
 
-    def look(self, baseband: SampleBuffer[np.complex64], missing: MissingList) -> list[Impact]:
-        """Look through every segment that is complete; return the new impacts."""
+    def look(self, baseband: SampleBuffer[np.complex64], missing: MissingList, end: float) -> list[Impact]:
+        """Look through every segment that is complete; return the new impacts.
+
+        `end` is the baseband index at which the samples end for now: after it there are zeros, and no onset.
+        """
         count = (baseband.end - self._next) // self._segment
         if count <= 0:
             return []
         found = self._detector.find(self._rows(baseband, count))
         begins = [self._next - self.after - self.before + row * self._segment for row in range(count)]
-        places = [begin + one.position for begin, ones in zip(begins, found, strict=True) for one in ones]
+        places = [
+            max(begin + one.position, float(self._begin))
+            for begin, ones in zip(begins, found, strict=True)
+            for one in ones
+        ]
         new = [] if self._begun else [self._new(baseband, float(self._begin))]
         self._begun = True
         self._next += count * self._segment
         for place in places:
-            if self._is_edge_of_gap(place, missing):
+            if place > end - 2.0 * self._reciprocal or self._is_edge_of_gap(place, missing):
                 continue
             if new and new[-1].doubtful and place - self._begin < 2.0 * self._reciprocal:
                 self._impacts.remove(new.pop())  # the begin itself is no second one

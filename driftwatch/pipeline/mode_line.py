@@ -119,7 +119,7 @@ class ModeLine:
         position
             Stream index up to which samples came: no usable window reaches beyond.
         """
-        self._waiting += self._impacts.look(self._baseband, missing)
+        self._waiting += self._impacts.look(self._baseband, missing, position / self._band.decimation)
         measured: list[_Measured] = []
         windows = list(self._complete_windows(missing, position))
         if Method.AMBIENT in self._mode.methods:

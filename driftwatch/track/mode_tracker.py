@@ -37,6 +37,9 @@ class ModeTracker:
     *Outliers and steps.* A reading beyond the gate is remembered and not taken. If another that shares no sample with
     it agrees with it before any reading falls inside the gate, the mode has stepped: the filter starts afresh there.
 
+    *Doubt.* While a reading outside the gate is neither taken nor contradicted by a later one, the uncertainty stated
+    covers it too: it may be the truth.
+
     *Held.* While unusable readings come and the last reading used is a window old or older, the status is held and
     the figures stay, with growing uncertainty. One reading inside the gate ends it.
 
@@ -86,6 +89,7 @@ class ModeTracker:
         self._spacing_s = window_s
         self._pending: list[Reading] = []
         self._refused_since_ns: int | None = None  # begin of a run of readings outside the gate
+        self._doubt = (0.0, 0.0)  # by how much the last of them differs in ln fn and ln q
         self._before: Reading | None = None
         self._usual_var_q: float | None = None
         self._used_ns: int | None = None
@@ -151,6 +155,7 @@ class ModeTracker:
         if kalman.innovation(now, reading).distance <= GATE:
             self._accept(now, reading)
         elif not self._confirm(reading):
+            self._doubt = reading.ln_f - now.ln_f, reading.ln_q - now.ln_q
             self._refused_since_ns = reading.end_ns if self._refused_since_ns is None else self._refused_since_ns
             if reading.end_ns - self._refused_since_ns >= self._pending_ns(reading):
                 self._hold("misfit", reading.end_ns)
@@ -216,7 +221,7 @@ class ModeTracker:
         if not reading.decay:
             self._before = reading
         self._pending.clear()
-        self._refused_since_ns = None
+        self._refused_since_ns, self._doubt = None, (0.0, 0.0)
         self._missing_since_ns, self._missed_decays = None, 0
         self._status, self._reason = TrackStatus.TRACKING, None
 
@@ -289,11 +294,11 @@ class ModeTracker:
             return self._point(None, None, None, None, None, None, None, None, None)
         x = self._carried(self._state, time_ns)
         f, q = math.exp(x.ln_f), math.exp(x.ln_q)
-        std_q = math.sqrt(x.p_qq)
+        std_f, std_q = math.sqrt(x.p_ff + self._doubt[0] ** 2), math.sqrt(x.p_qq + self._doubt[1] ** 2)
         reach = math.exp(_Z95 * std_q)
-        correlation = x.p_fq / math.sqrt(x.p_ff * x.p_qq)
+        correlation = x.p_fq / (std_f * std_q)
         rate, rate_std = x.rate * DAY_S, math.sqrt(x.p_rr) * DAY_S
-        return self._point(f, f * math.sqrt(x.p_ff), q, q * std_q, q / reach, q * reach, correlation, rate, rate_std)
+        return self._point(f, f * std_f, q, q * std_q, q / reach, q * reach, correlation, rate, rate_std)
 
     def _point(
         self,
