@@ -27,18 +27,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 Reals = NDArray[np.float64]
-WATCH = 4.0
+WATCH = 5.0
 """First stage: mean energy of the innovations over the next W samples, over their usual one."""
 
-GAIN = 34.0
+GAIN = 35.0
 """Second stage: gain in log-likelihood of a decaying tone that begins here."""
 
 _PAST = 12  # blocks from which the own predictor and the usual energy of the last samples come
 _FUTURE = 2  # W, in blocks
 _RING = 13.0  # how far the band edge's ringing reaches, in reciprocal bandwidths
 _DECAY = 4.0  # shortest time constant of a tone, in reciprocal bandwidths: six half-power widths a side
-_WIDENED = 1.25  # width of flat noise in the stream, its edges included, over that of the search band
-_FILLED = 0.5  # the same over the stream's rate, where the edges are wide
+_WIDENED = 1.3  # width of flat noise in the first stage, its edges included, over that of the search band
 _STEP_SHARE = 0.1  # least power of a jump over the level just before it: a decay that is no pure exponential jitters
 _RING_FIRST_DB = 20.0  # by how much the ringing lies below the jump where it begins to be told apart
 _RING_LAST_DB = 55.0  # and where it ends
@@ -173,7 +172,7 @@ class Detector:
         elsewhere = np.delete(power, around, axis=0)
         noise = np.maximum(
             np.quantile(elsewhere, 0.25, axis=0) / math.log(4.0 / 3.0),
-            usual * self.times / max(_WIDENED, _FILLED * self.times),
+            usual * self.times / _WIDENED,
         )
         return float(np.max(power[here] / noise))
 
@@ -253,6 +252,8 @@ def _moments(rows: NDArray[np.complex64], s: int) -> Reals:
     """
     count = rows.shape[1] // (2 * s)
     parts = rows[:, : count * 2 * s].view(np.float32).reshape(rows.shape[0], -1, 2).astype(np.float64)
+    if s > 2:  # wide band edges: a mean of two samples keeps half of their noise out
+        parts[:, 1:] = 0.5 * (parts[:, 1:] + parts[:, :-1])
     real, imaginary = parts[:, :, 0], parts[:, :, 1]
     power = _stride_sum(real * real + imaginary * imaginary, s)
     cross = np.zeros((2, rows.shape[0], 2 * count))

@@ -49,6 +49,9 @@ MISFIT_P = 0.01
 REFUSED_P = 1e-4
 """p-value below which the fit that was taken is not usable."""
 
+COARSE = 0.03
+"""Standard deviation of ln Q above which a fit that leaves more than the noise before the onset is not usable."""
+
 NO_MODE_P = 0.01
 """Probability that noise alone looks so much like a decay, above which there is none."""
 
@@ -182,7 +185,9 @@ def _fit_after(data: Reals, rate_hz: float, search_hz: tuple[float, float], hint
     plain = _attempt(data, rate_hz, search_hz, onset, rough, CUT)
     if plain is None:
         return _nothing(len(data), ("short",))
-    return _assemble(_best_attempt(data, rate_hz, search_hz, onset, plain), search_hz, onset, onset_std)
+    best = _best_attempt(data, rate_hz, search_hz, onset, plain)
+    quiet = data[: max(0, math.floor(onset - min(max(2.0 * onset_std, 0.1 * reciprocal), reciprocal)))]
+    return _assemble(best, search_hz, onset, onset_std, excess_p(best.bins, best.pole, quiet, search_hz))
 
 
 @dataclass(frozen=True, slots=True)
@@ -197,6 +202,22 @@ class _Attempt:
     @property
     def std_ln_g(self) -> float:
         return math.sqrt(float(self.pole.covariance[0, 0]))
+
+
+def excess_p(bins: Bins, pole: PoleFit, quiet: Reals, search_hz: tuple[float, float]) -> float:
+    """Return the p-value of Fisher's F: whether the fit left more than the noise in the band before the onset.
+
+    What one pole leaves of two that beat is smooth in frequency only where the record is long; but it is there.
+    1 where too little quiet was seen, or none.
+    """
+    if len(quiet) * (search_hz[1] - search_hz[0]) < _FEWEST_BINS * bins.rate_hz / 2:
+        return 1.0
+    before = transform(quiet, bins.rate_hz, search_hz)
+    power = float(np.sum(np.abs(before.values) ** 2))
+    if power <= 0.0:
+        return 1.0
+    ratio = pole.noise / bins.length / (power / (2.0 * len(before.values)) / before.length)
+    return float(special.fdtrc(pole.freedom, 2.0 * len(before.values), ratio))
 
 
 def _attempt(
@@ -294,18 +315,21 @@ def _spread(gain: Reals, width: float, top: int, noise: float) -> float:
     return math.sqrt(2.0 * noise / curvature) if curvature > 0.0 else math.inf
 
 
-def _assemble(attempt: _Attempt, search_hz: tuple[float, float], onset: float, onset_std: float | None) -> RingdownFit:
+def _assemble(
+    attempt: _Attempt, search_hz: tuple[float, float], onset: float, onset_std: float | None, excess: float = 1.0
+) -> RingdownFit:
     bins, pole = attempt.bins, attempt.pole
     omega = math.hypot(pole.g, pole.damped)
     frequency, q = omega / (2.0 * math.pi), omega / (2.0 * pole.g)
     covariance = _log_covariance(pole)
     std_f, std_q = math.sqrt(covariance[0, 0]), math.sqrt(covariance[1, 1])
-    reach = float(special.stdtrit(pole.freedom, 0.975)) * std_q
+    # Where nothing is known of q its interval is all that floating point can say.
+    reach = min(float(special.stdtrit(pole.freedom, 0.975)) * std_q, 50.0)
     fitted = bins.values - pole.residual
     signal = float(np.sum(np.abs(fitted) ** 2))
     noise = 2.0 * pole.noise * len(bins.values)
     snr_db = 10.0 * math.log10(signal / noise) if noise > 0.0 and signal > 0.0 else None
-    reasons = _reasons(attempt, frequency, q, search_hz)
+    reasons = _reasons(attempt, frequency, q, search_hz, excess)
     return RingdownFit(
         frequency_hz=frequency,
         q=q,
@@ -337,7 +361,9 @@ def _log_covariance(pole: PoleFit) -> Reals:
     return np.asarray(slope @ pole.covariance @ slope.T)
 
 
-def _reasons(attempt: _Attempt, frequency: float, q: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
+def _reasons(
+    attempt: _Attempt, frequency: float, q: float, search_hz: tuple[float, float], excess: float
+) -> tuple[str, ...]:
     pole, width, band = attempt.pole, frequency / q, search_hz[1] - search_hz[0]
     found = {
         "not_converged": not pole.converged,
@@ -345,7 +371,7 @@ def _reasons(attempt: _Attempt, frequency: float, q: float, search_hz: tuple[flo
         "no_mode": _chance(attempt) > NO_MODE_P,
         "band_edge": not search_hz[0] + width / 2 < frequency < search_hz[1] - width / 2,
         "too_wide": width > band / 2,
-        "misfit": attempt.p < REFUSED_P,
+        "misfit": attempt.p < REFUSED_P or (excess < REFUSED_P and attempt.std_ln_g > COARSE),
     }
     return tuple(word for word, holds in found.items() if holds)
 
