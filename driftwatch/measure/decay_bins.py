@@ -88,7 +88,7 @@ def start(bins: Bins) -> tuple[float, float]:
     return float(g[wide]), float(damped[near])
 
 
-def fit_pole(bins: Bins, first_guess: tuple[float, float], background: bool = False) -> PoleFit:
+def fit_pole(bins: Bins, first_guess: tuple[float, float], background: bool = False, accuracy: float = 1e-3) -> PoleFit:
     """Fit one pole to the bins by Gauss-Newton with halved steps.
 
     Parameters
@@ -97,14 +97,16 @@ def fit_pole(bins: Bins, first_guess: tuple[float, float], background: bool = Fa
         (g, wd) to start from.
     background
         Fit a smooth complex background along, constant plus slope in frequency: tails of modes outside the band.
+    accuracy
+        Distance from the optimum, in standard deviations, at which to stop.
     """
     data = _stacked(bins.values)
     theta = np.array([math.log(first_guess[0]), first_guess[1]])
     state = _linearise(bins, theta, data, background)
     converged = False
     for _ in range(_ITERATIONS):
-        # At the optimum to a thousandth of a standard deviation, or to what floating point tells apart.
-        converged = state.promise <= max(1e-6 * state.cost / len(data), 1e-24 * float(data @ data))
+        # At the optimum to the wanted accuracy, or to what floating point tells apart.
+        converged = state.promise <= max(accuracy**2 * state.cost / len(data), 1e-24 * float(data @ data))
         following = None if converged else _descend(bins, theta, state, data, background)
         if following is None:
             break

@@ -273,7 +273,7 @@ def _rough_pole(data: Reals | Complexes, rate_hz: float, search_hz: tuple[float,
     bins = transform(data[first:], rate_hz, search_hz)
     if len(bins.values) < _FEWEST_BINS or not np.any(bins.values):
         return None
-    return fit_pole(bins, start(bins))
+    return fit_pole(bins, start(bins), accuracy=0.1)
 
 
 def _refined_onset(

@@ -24,7 +24,7 @@ HALF_WIDTHS = 6.0  # of the search band to either side, in half-power widths
 BARS = {40.0: (1.05, 1.20, 0.95, 0.95), 20.0: (1.10, 1.30, 0.92, 0.97)}
 """By amplitude over the noise's rms in the band, dB: factors over the two bounds, lowest and highest coverage."""
 
-_SPACING = 16.0  # time constants from one onset to the next
+_SPACING = 24.0  # time constants from one onset to the next
 _CHUNK = 25  # decays simulated at a time
 _TESTS = len(MODES) * 2 * len(BARS) * 5
 
