@@ -12,7 +12,7 @@ blow before. First stage, on every sample: the mean energy of e over the next W 
 stage, where the first exceeds `WATCH`: the gain in log-likelihood of a tone that begins there, over all frequencies of
 the band, decaying as fast as a band of six half-power widths to either side may show. Of Gaussian noise of any
 correlation either statistic has an exponential tail; together they keep it out for a month and more, while a blow of
-20 dB over the rms in the band raises the gain to about three times what is asked.
+20 dB over the rms in the band raises the gain to about twice what is asked.
 
 Energies are kept in blocks of 2 s samples. Rows are judged one by one: only elementwise operations and sums along a
 row, on real numbers, are used on many rows together, so a row's result has the same bits whatever rows are beside it.
@@ -27,6 +27,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 Reals = NDArray[np.float64]
+
 WATCH = 5.0
 """First stage: mean energy of the innovations over the next W samples, over their usual one."""
 

@@ -15,6 +15,7 @@ from driftwatch.measure import limits_decay, ringdown
 from driftwatch.measure.onset import Detector, detector
 from driftwatch.measure.zoom import BandRequest, Zoom
 from numpy.typing import NDArray
+from scipy import fft, stats
 
 from benchmarks.bars import Row, Size, coverage_ok, spread_ok
 
@@ -74,6 +75,36 @@ def run(size: Size) -> Iterator[Row]:
             for level_db in BARS:
                 cell = Cell(frequency, q, time_constants, level_db)
                 yield from _rows(cell, list(outcomes(cell, size.trials)), size.family / _TESTS)
+    if size.full:
+        yield _false_onsets(size)
+
+
+def _false_onsets(size: Size) -> Row:
+    """False onsets in 30 days of random response over a flat floor of equal power: the worst mixture known.
+
+    Time constant of 20 reciprocal bandwidths, a band of 30 Hz in a stream of 87 Hz.
+    """
+    finder = detector(2.9, (0.0, 1.0))
+    chunk, core = 1 << 20, 450
+    chunks = math.ceil(30 * 86_400 * 87 / chunk)
+    found = 0
+    for seed in range(chunks):
+        stream = _random_response(np.random.default_rng(seed), chunk, 2.9, 20.0)
+        rows = np.lib.stride_tricks.sliding_window_view(stream, finder.before + core + finder.after)[::core]
+        for first in range(0, len(rows), 20):
+            found += sum(map(len, finder.find(np.ascontiguousarray(rows[first : first + 20]))))
+    holds = bool(stats.poisson.sf(found - 1, 1.0) > size.family)
+    return Row("random response, 30 days", "false onsets", found, "<= 1 expected", holds)
+
+
+def _random_response(rng: np.random.Generator, length: int, rate: float, time_constant: float) -> NDArray[np.complex64]:
+    """Baseband noise at `rate` times a band of 1 Hz with edges of a quarter: a resonance and a floor of equal power."""
+    hz = fft.fftfreq(length) * rate
+    shape = 0.5 - 0.5 * np.cos(math.pi * np.clip((0.75 - np.abs(hz)) / 0.25, 0.0, 1.0))
+    line = 1.0 / (1.0 + (2.0 * math.pi * time_constant * (hz - 0.1)) ** 2)
+    density = shape**2 * (line / np.mean(line[np.abs(hz) < 0.5]) + 1.0)
+    white = rng.normal(size=length) + 1j * rng.normal(size=length)
+    return np.asarray(fft.ifft(white * np.sqrt(density)) * math.sqrt(length), dtype=np.complex64)
 
 
 def outcomes(cell: Cell, trials: int) -> Iterator[Outcome]:
