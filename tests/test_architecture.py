@@ -117,7 +117,7 @@ def test_no_file_of_the_program_has_grown_past_one_subject() -> None:
 def test_tests_mirror_the_package() -> None:
     """A directory of tests is named for a room, or holds checks against values from outside, or what tests read."""
     directories = {path.parts[1] for path in tracked("tests") if len(path.parts) > 2}
-    assert directories <= ROOMS | {"outside", "real", "tools"}
+    assert directories <= ROOMS | {"outside", "data", "tools"}
 
 
 # ---------------------------------------------------------------------------------------------- what the guides say

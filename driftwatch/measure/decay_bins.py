@@ -16,7 +16,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import fft, special
+from scipy import fft
 
 Reals = NDArray[np.float64]
 Complexes = NDArray[np.complex128]
@@ -216,47 +216,6 @@ def _finished(theta: Reals, state: _Linearised, background: bool, converged: boo
     return PoleFit(
         g, float(theta[1]), amplitude, background, residual, covariance, noise, freedom, state.basis, converged
     )
-
-
-def residual_p(fit: PoleFit) -> float:
-    """Return the p-value of a test whether neighbouring residuals agree: what the model misses is smooth in frequency.
-
-    The lag-one correlation r' M r / r' r of the residuals is a ratio of quadratic forms of which the noise's variance
-    drops out. Its exact mean and variance over noise, given what the fit took away, set a beta law on the range that
-    the ratio can take. Small values speak against the model: a second mode, a cut too early, a pole that moves with
-    the amplitude.
-    """
-    m = len(fit.residual)
-    dimension = fit.freedom
-    numerator = float(np.sum((fit.residual[1:] * fit.residual[:-1].conj()).real))
-    total = float(np.sum(np.abs(fit.residual) ** 2))
-    if dimension < 3 or total <= 0.0:
-        return 1.0
-    moved = _neighbours(fit.basis, m)
-    inner = fit.basis.T @ moved
-    trace = -float(np.trace(inner))
-    square = (m - 1.0) - 2.0 * float(np.sum(moved**2)) + float(np.sum(inner * inner))
-    mean = trace / dimension
-    variance = 2.0 * (square - trace**2 / dimension) / (dimension * (dimension + 2.0))
-    edge = math.cos(math.pi / (m + 1))
-    return _beta_tail(numerator / total, mean, variance, edge)
-
-
-def _neighbours(columns: Reals, m: int) -> Reals:
-    """Apply M, half the sum of both neighbours, to the real and to the imaginary halves of stacked columns."""
-    halves = columns.reshape(2, m, -1)
-    moved = np.zeros_like(halves)
-    moved[:, 1:] += 0.5 * halves[:, :-1]
-    moved[:, :-1] += 0.5 * halves[:, 1:]
-    return moved.reshape(2 * m, -1)
-
-
-def _beta_tail(value: float, mean: float, variance: float, edge: float) -> float:
-    """Return the probability beyond `value` of the beta law on +-`edge` with this mean and variance."""
-    centre, spread = (mean / edge + 1.0) / 2.0, variance / (2.0 * edge) ** 2
-    count = centre * (1.0 - centre) / spread - 1.0
-    place = min(max((value / edge + 1.0) / 2.0, 0.0), 1.0)
-    return float(special.betaincc(centre * count, (1.0 - centre) * count, place))
 
 
 def _stacked(values: Complexes) -> Reals:

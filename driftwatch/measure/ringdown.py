@@ -18,7 +18,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import fft, special
+from scipy import special
 
 from driftwatch.measure.decay_bins import (
     Bins,
@@ -26,10 +26,11 @@ from driftwatch.measure.decay_bins import (
     PoleFit,
     Reals,
     fit_pole,
-    residual_p,
     start,
     transform,
 )
+from driftwatch.measure.decay_checks import chance, decrement_q, excess_p, residual_p
+from driftwatch.measure.decay_onset import refined_onset, steepest_rise
 
 CUT = 0.02
 """The cut after the onset, in time constants."""
@@ -62,7 +63,6 @@ _LATER = [(cut, background) for cut in LATER_CUTS for background in (False, True
 _FEWEST_SAMPLES = 16
 _FEWEST_BINS = 4
 _FEWEST_BINS_WITH_BACKGROUND = 8
-_ONSET_STEPS = 33
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,7 +126,7 @@ def fit(
     if trouble:
         return _nothing(len(samples), trouble)
     data = np.asarray(samples, dtype=np.float64)
-    hint = _steepest(data, rate_hz, search_hz) if onset_hint is None else onset_hint
+    hint = steepest_rise(data, rate_hz, search_hz) if onset_hint is None else onset_hint
     return _fit_after(data, rate_hz, search_hz, hint)
 
 
@@ -184,7 +184,7 @@ def _fit_after(data: Reals, rate_hz: float, search_hz: tuple[float, float], hint
     rough = _rough_pole(data, rate_hz, search_hz, round(hint + reciprocal))
     if rough is None:
         return _nothing(len(data), ("short",))
-    onset, onset_std = _refined_onset(data, rate_hz, search_hz, hint, rough)
+    onset, onset_std = refined_onset(data, rate_hz, search_hz, hint, rough)
     plain = _attempt(data, rate_hz, search_hz, onset, rough, CUT)
     if plain is None:
         return _nothing(len(data), ("short",))
@@ -205,22 +205,6 @@ class _Attempt:
     @property
     def std_ln_g(self) -> float:
         return math.sqrt(float(self.pole.covariance[0, 0]))
-
-
-def excess_p(bins: Bins, pole: PoleFit, quiet: Reals, search_hz: tuple[float, float]) -> float:
-    """Return the p-value of Fisher's F: whether the fit left more than the noise in the band before the onset.
-
-    What one pole leaves of two that beat is smooth in frequency only where the record is long; but it is there.
-    1 where too little quiet was seen, or none.
-    """
-    if len(quiet) * (search_hz[1] - search_hz[0]) < _FEWEST_BINS * bins.rate_hz / 2:
-        return 1.0
-    before = transform(quiet, bins.rate_hz, search_hz)
-    power = float(np.sum(np.abs(before.values) ** 2))
-    if power <= 0.0:
-        return 1.0
-    ratio = pole.noise / bins.length / (power / (2.0 * len(before.values)) / before.length)
-    return float(special.fdtrc(pole.freedom, 2.0 * len(before.values), ratio))
 
 
 def _attempt(
@@ -279,45 +263,6 @@ def _rough_pole(data: Reals | Complexes, rate_hz: float, search_hz: tuple[float,
     return fit_pole(bins, start(bins), accuracy=0.1)
 
 
-def _refined_onset(
-    data: Reals, rate_hz: float, search_hz: tuple[float, float], hint: float, pole: PoleFit
-) -> tuple[float, float]:
-    """Return the likeliest onset within two reciprocal bandwidths of the hint, and its standard deviation, samples."""
-    reciprocal = rate_hz / (search_hz[1] - search_hz[0])
-    first = max(0, math.floor(hint - 4.0 * reciprocal))
-    last = min(len(data), math.ceil(hint + 2.0 * reciprocal + 4.0 * rate_hz / pole.g))
-    bins = transform(data[first:last], rate_hz, search_hz)
-    noise = pole.noise * bins.length / max(1, len(data))
-    low, high = max(0.0, hint - 2.0 * reciprocal - first), hint + 2.0 * reciprocal - first
-    for _ in range(3):
-        trials = np.linspace(low, min(high, bins.length - 1.0), _ONSET_STEPS)
-        gain = _onset_gain(bins, trials, pole)
-        top = int(np.argmax(gain))
-        width = trials[1] - trials[0]
-        low, high = max(0.0, trials[top] - 2.0 * width), trials[top] + 2.0 * width
-    return first + float(trials[top]), _spread(gain, width, top, noise)
-
-
-def _onset_gain(bins: Bins, onsets: Reals, pole: PoleFit) -> Reals:
-    """By how much a tone from each trial onset on lowers the sum of squares, amplitude free; without the image.
-
-    The tone's transform is (w^n0 - z^(N-n0)) / (1 - z w), w = exp(-i w_k / fs).
-    """
-    eigenvalue = complex(-pole.g, pole.damped) / bins.rate_hz
-    turn = bins.omega / bins.rate_hz
-    ends = np.exp(eigenvalue * (bins.length - onsets))
-    shape = (np.exp(-1j * onsets[:, None] * turn) - ends[:, None]) / (1.0 - np.exp(eigenvalue - 1j * turn))
-    power = np.sum(shape.real**2 + shape.imag**2, axis=1)
-    return np.asarray(np.abs(shape.conj() @ bins.values) ** 2 / np.maximum(power, np.finfo(float).tiny))
-
-
-def _spread(gain: Reals, width: float, top: int, noise: float) -> float:
-    """Standard deviation from the curvature of the log-likelihood gain / (2 noise) about its top."""
-    centre = min(max(top, 1), len(gain) - 2)
-    curvature = (2.0 * gain[centre] - gain[centre - 1] - gain[centre + 1]) / width**2
-    return math.sqrt(2.0 * noise / curvature) if curvature > 0.0 else math.inf
-
-
 def _assemble(
     attempt: _Attempt, search_hz: tuple[float, float], onset: float, onset_std: float | None, excess: float = 1.0
 ) -> RingdownFit:
@@ -371,55 +316,12 @@ def _reasons(
     found = {
         "not_converged": not pole.converged,
         "short": attempt.bins.length * pole.g < SHORTEST * attempt.bins.rate_hz,
-        "no_mode": _chance(attempt) > NO_MODE_P,
+        "no_mode": chance(attempt.bins, attempt.pole) > NO_MODE_P,
         "band_edge": not search_hz[0] + width / 2 < frequency < search_hz[1] - width / 2,
         "too_wide": width > band / 2,
         "misfit": attempt.p < REFUSED_P or (excess < REFUSED_P and attempt.std_ln_g > COARSE),
     }
     return tuple(word for word, holds in found.items() if holds)
-
-
-def _chance(attempt: _Attempt) -> float:
-    """The probability that noise alone gains so much by a pole: Fisher's F, times the bins it could have been at."""
-    pole, parameters = attempt.pole, 4
-    gained = float(np.sum(np.abs(attempt.bins.values) ** 2)) - pole.noise * pole.freedom
-    if pole.noise <= 0.0:
-        return 0.0
-    ratio = gained / (parameters * pole.noise)
-    return float(special.fdtrc(parameters, pole.freedom, max(ratio, 0.0))) * len(attempt.bins.values)
-
-
-def decrement_q(bins: Bins, frequency_hz: float) -> float | None:
-    """Return Q from the slope of the band's log envelope, the logarithmic decrement; None where it does not fall.
-
-    A cross-check that shares nothing with the fit but the bins. The envelope is that of the bins under a Hann window;
-    points count by their power, since that is how certain their logarithms are.
-    """
-    m = len(bins.values)
-    envelope = np.abs(fft.ifft(bins.values * np.hanning(m + 2)[1:-1]))
-    keep = slice(2, m - 2)  # the window smears by two points, over both ends of the record
-    time = np.arange(m)[keep] * (bins.length / bins.rate_hz / m)
-    height = envelope[keep]
-    if len(height) < 3 or not np.all(height > 0.0):
-        return None
-    weight = height**2 / np.sum(height**2)
-    centre = float(weight @ time)
-    slope = float(weight @ ((time - centre) * np.log(height))) / float(weight @ (time - centre) ** 2)
-    return math.pi * frequency_hz / -slope if slope < 0.0 else None
-
-
-def _steepest(data: Reals, rate_hz: float, search_hz: tuple[float, float]) -> float:
-    """Index where the band's envelope, its edges smoothed by a Hann window, rises through half its highest point.
-
-    The smoothing is symmetric, so a sudden onset lies where the rise is half done.
-    """
-    length = fft.next_fast_len(len(data), real=True)
-    bins = transform(np.pad(data, (0, length - len(data))), rate_hz, search_hz)
-    m = len(bins.values)
-    envelope = np.abs(fft.ifft(bins.values * np.hanning(m + 2)[1:-1], 8 * m))[: max(1, 8 * m * len(data) // length)]
-    peak = int(np.argmax(envelope))
-    low = np.flatnonzero(envelope[:peak] < envelope[peak] / 2.0)
-    return (float(low[-1]) + 0.5 if len(low) else 0.0) * length / (8 * m)
 
 
 def _check(

@@ -6,7 +6,8 @@ import math
 
 import numpy as np
 import pytest
-from driftwatch.measure.decay_bins import PoleFit, fit_pole, residual_p, start, transform
+from driftwatch.measure.decay_bins import PoleFit, fit_pole, start, transform
+from driftwatch.measure.decay_checks import residual_p
 from numpy.typing import NDArray
 from scipy import stats
 
