@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import TYPE_CHECKING
 
 from driftwatch.alert.machine import Event
@@ -27,12 +28,12 @@ def band_words(event: Event | None, held_s: float, band: Band, figure: Figure, j
         return "can tell"
     name = "Q" if band.quantity == "q" else "frequency"
     unit = _unit(band.quantity)
-    value = f"{name} {figure.value:.6g}{unit}"
+    value = f"{name} {with_std(figure.value, figure.std)}{unit}"
     if event is Event.RETURNED:
         by = f" by {band.deadband:.6g}{unit}" if band.deadband else ""
-        return f"{value} {limits_text(band)}{by} with probability {_chance(judgement.inside)}{_held(held_s)}"
+        return f"{value} {limits_text(band)}{by}{_held(held_s)}, probability {_chance(judgement.inside)}"
     limit = band.low if judgement.side == "below" else band.high
-    return f"{value} {judgement.side} {limit:.7g}{unit} with probability {_chance(judgement.beyond)}{_held(held_s)}"
+    return f"{value} {judgement.side} {limit:.7g}{unit}{_held(held_s)}, probability {_chance(judgement.beyond)}"
 
 
 def track_words(track: Track) -> str:
@@ -49,5 +50,18 @@ def _held(seconds: float) -> str:
 
 
 def _chance(probability: float) -> str:
-    """Return a probability with as many nines as it needs, never rounded up to 1."""
-    return f"{probability:.2f}" if probability < 0.995 else f"{min(probability, 0.9999):.4f}"
+    """Return a probability to two decimals, never rounded up to 1."""
+    return f"{probability:.2f}" if probability < 0.995 else "over 0.99"
+
+
+def decimals_of(std: float) -> int:
+    """Return how many decimals show two significant digits of an uncertainty."""
+    return max(0, 1 - math.floor(math.log10(std)))
+
+
+def with_std(value: float, std: float | None) -> str:
+    """Return ``900.123 ± 0.012``; without a finite uncertainty six digits of the value."""
+    if std is None or not std > 0 or not math.isfinite(std):
+        return f"{value:.6g}"
+    places = decimals_of(std)
+    return f"{value:.{places}f} ± {std:.{places}f}"

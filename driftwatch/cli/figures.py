@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-import math
 from typing import TYPE_CHECKING, Any
 
+from driftwatch.alert.words import decimals_of, with_std
 from driftwatch.records import NS, time_text
 
 if TYPE_CHECKING:
@@ -14,19 +14,9 @@ NONE = "-"
 """Stands for what is not known."""
 
 
-def decimals_of(std: float) -> int:
-    """Return how many decimals show two significant digits of an uncertainty."""
-    return max(0, 1 - math.floor(math.log10(std)))
-
-
-def with_std(value: float | None, std: float | None) -> str:
-    """Return ``900.123 ± 0.012``."""
-    if value is None:
-        return NONE
-    if std is None or not std > 0 or not math.isfinite(std):
-        return f"{value:.6g}"
-    places = decimals_of(std)
-    return f"{value:.{places}f} ± {std:.{places}f}"
+def known_with_std(value: float | None, std: float | None) -> str:
+    """Return ``900.123 ± 0.012``, or what stands for the unknown."""
+    return NONE if value is None else with_std(value, std)
 
 
 def with_interval(value: float | None, low: float | None, high: float | None) -> str:
@@ -84,6 +74,6 @@ def in_words(message: Mapping[str, Any]) -> str:
 
 
 def _pole(message: Mapping[str, Any]) -> str:
-    frequency = with_std(message["frequency_hz"], message["frequency_std_hz"])
+    frequency = known_with_std(message["frequency_hz"], message["frequency_std_hz"])
     q = with_interval(message["q"], message["q_low"], message["q_high"])
     return f"{frequency} Hz  Q {q}"

@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from driftwatch.cli.figures import NONE, moment, with_interval, with_std
+from driftwatch.cli.figures import NONE, known_with_std, moment, with_interval
 from driftwatch.cli.looking import opened_store, print_lines, print_table, quiet_pipe, store_options
 from driftwatch.records import Envelope, Measurement, Method, Track, parse_time
 
@@ -116,6 +116,6 @@ def _row(envelope: Envelope) -> list[str]:
             status = f"{body.status}, {body.reason}" if body.reason else str(body.status)
         case _:
             raise TypeError(f"{envelope.kind} is no reading")
-    frequency = with_std(body.frequency_hz, body.frequency_std_hz)
+    frequency = known_with_std(body.frequency_hz, body.frequency_std_hz)
     q = with_interval(body.q, body.q_low, body.q_high)
     return [moment(envelope.time_ns), body.channel, body.mode, *kind, frequency, q, status or NONE]

@@ -10,7 +10,7 @@ from collections.abc import Iterable, Sequence
 
 import click
 
-from driftwatch.cli.figures import duration, moment, with_interval, with_std
+from driftwatch.cli.figures import duration, known_with_std, moment, with_interval
 from driftwatch.records import NS, Alert, AlertState, Envelope, Fault, Health, Phase, Track, TrackStatus, time_text
 
 WIDTH = 110
@@ -40,7 +40,7 @@ def mode_line(name: str, track: Track | None) -> str:
     status = f"{track.status}{f' ({track.reason})' if track.reason else ''}".replace("_", " ")
     if track.frequency_hz is None:
         return f"{name}  {status}"
-    frequency = with_std(track.frequency_hz, track.frequency_std_hz)
+    frequency = known_with_std(track.frequency_hz, track.frequency_std_hz)
     q = with_interval(track.q, track.q_low, track.q_high)
     return f"{name}  {frequency:>19} Hz  Q {q:<22}  {status}"
 

@@ -73,7 +73,7 @@ def test_a_band_fires_with_all_that_a_reader_needs(station, track):
     assert fired.priority is Priority.MEDIUM
     assert seconds(fired) == 11.0
     assert fired.because == (3, 4, 23, 24)  # measurement and track that began it, and those that completed it
-    assert fired.reason == "frequency 888.2 Hz below 890 Hz with probability 0.9999 for 10 s"
+    assert fired.reason == "frequency 888.20 ± 0.30 Hz below 890 Hz for 10 s, probability over 0.99"
     assert (fired.by, fired.baseline, fired.shelved_until_ns, fired.evidence) == (None, None, None, ())
 
 
@@ -81,7 +81,7 @@ def test_a_q_band_is_in_ones_and_says_so(station, band, track):
     line = station(band(quantity="q", low=30.0, high=None, on_delay_s=0.0))
     (fired,) = line.track(0, track(q=20.0, q_std=1.0))
     assert (fired.quantity, fired.unit, fired.value, fired.low, fired.high) == ("q", "1", 20.0, 30.0, None)
-    assert fired.reason == "Q 20 below 30 with probability 0.9999"
+    assert fired.reason == "Q 20.0 ± 1.0 below 30, probability over 0.99"
 
 
 def test_one_occurrence_lasts_from_leaving_normal_through_every_return(station, band, track):
@@ -92,7 +92,7 @@ def test_one_occurrence_lasts_from_leaving_normal_through_every_return(station, 
     moved = [record for record in line.records if record.state != record.previous_state]
     assert len({record.occurrence for record in moved}) == 1
     assert {seconds(record) for record in moved} == {7.0}
-    assert moved[1].reason == "frequency 900 Hz within 890..915 Hz by 0.5 Hz with probability 0.9999 for 3 s"
+    assert moved[1].reason == "frequency 900.00 ± 0.30 Hz within 890..915 Hz by 0.5 Hz for 3 s, probability over 0.99"
 
 
 def test_the_occurrence_is_a_uuid_that_a_replay_gives_again(station, track):

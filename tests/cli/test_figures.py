@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import pytest
-from driftwatch.cli.figures import duration, moment, with_interval, with_std
+from driftwatch.cli.figures import duration, known_with_std, moment, with_interval
 from driftwatch.records import NS
 
 
@@ -19,7 +19,7 @@ from driftwatch.records import NS
     ],
 )
 def test_a_value_stands_with_two_digits_of_its_uncertainty(value: float, std: float, text: str) -> None:
-    assert with_std(value, std) == text
+    assert known_with_std(value, std) == text
 
 
 @pytest.mark.parametrize(
