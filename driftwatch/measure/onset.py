@@ -52,6 +52,7 @@ _SILENCE = 1e-6  # energy of a stride over a jump's, below which it counts as si
 _SETTLED = 0.05  # innovations after an onset out of silence over the jump's
 _QUIETER = 1.2  # mean energy of noise over that of the quieter of two halves
 _TINY = 1e-200  # keeps a quotient finite; far below the square of any sample
+_LARGEST_PREDICTOR = 4.0  # of a stationary or decaying stream it is 1 at most, but for chance
 
 
 @dataclass(frozen=True, slots=True)
@@ -227,7 +228,7 @@ class _Blocks:
         window = self._window(_PAST + 1, _PAST)
         level, lagged = window[0], window[1]
         ordinary = _left(window, general)
-        own = window[2:] * (1.0 / (lagged + _TINY))
+        own = _bounded(window[2:] * (1.0 / (lagged + _TINY)))
         now = usual[:, self.first - 4 : self.first - 4 + self.columns] * (_ABOVE / 3.0)
         follow = (level > now) & (level < _RISING * lagged)
         follow &= _left(window, own) < _FOLLOW * ordinary
@@ -243,7 +244,12 @@ class _Blocks:
         sums = np.cumsum(moments[1:, :, 1:-1] / excess, axis=2)
         # smooth begins with block 1 and reaches one block on: the last that ends before the gap is first - 3
         sums = sums[:, :, self.first - 4 : self.first - 4 + self.columns]
-        return np.asarray(sums[1:] * (1.0 / (sums[0] + _TINY)))
+        return _bounded(np.asarray(sums[1:] * (1.0 / (sums[0] + _TINY))))
+
+
+def _bounded(predictor: Reals) -> Reals:
+    """Return a predictor no larger than a stream can ask for: after zeros it is a quotient of rounding errors."""
+    return np.clip(predictor, -_LARGEST_PREDICTOR, _LARGEST_PREDICTOR)
 
 
 def _moments(rows: NDArray[np.complex64], s: int) -> Reals:
