@@ -258,10 +258,9 @@ def _moments(rows: NDArray[np.complex64], s: int) -> Reals:
     Shape (4, rows, blocks). The first block has no lagged product and repeats its own power as the lagged one.
     """
     count = rows.shape[1] // (2 * s)
-    parts = rows[:, : count * 2 * s].view(np.float32).reshape(rows.shape[0], -1, 2).astype(np.float64)
+    real, imaginary = (part[:, : count * 2 * s].astype(np.float64) for part in (rows.real, rows.imag))
     if s > 2:  # wide band edges: a mean of two samples keeps half of their noise out
-        parts[:, 1:] = 0.5 * (parts[:, 1:] + parts[:, :-1])
-    real, imaginary = parts[:, :, 0], parts[:, :, 1]
+        real, imaginary = _smoothed(real), _smoothed(imaginary)
     power = _stride_sum(real * real + imaginary * imaginary, s)
     cross = np.zeros((2, rows.shape[0], 2 * count))
     cross[0, :, 1:] = _stride_sum(real[:, s:] * real[:, :-s] + imaginary[:, s:] * imaginary[:, :-s], s)
@@ -273,6 +272,14 @@ def _moments(rows: NDArray[np.complex64], s: int) -> Reals:
     np.add(cross[:, :, ::2], cross[:, :, 1::2], out=moments[2:])
     moments *= 1.0 / (2 * s)
     return moments
+
+
+def _smoothed(values: Reals) -> Reals:
+    """Mean of each sample and the one before; the first alone."""
+    smooth = values.copy()
+    smooth[:, 1:] += values[:, :-1]
+    smooth[:, 1:] *= 0.5
+    return smooth
 
 
 def _stride_sum(values: Reals, stride: int) -> Reals:
