@@ -52,7 +52,9 @@ class Impacts:
         self._band = band
         self._segment = segment
         self._detector = onset.detector(band.rate_hz, band.search_hz)
-        self.before, self.after = self._detector.before, self._detector.after
+        self.before = self._detector.before
+        # an onset may lie a little before the core that its highest innovation belongs to
+        self.after = self._detector.after + self._detector.separation
         self._reciprocal = band.rate_hz / (band.search_hz[1] - band.search_hz[0])  # bandwidth's, in samples
         self._chunk = max(4, round(4.0 * self._reciprocal))
         self.memory: int = band.window + self.before + self._chunk  # baseband that must stay before what is wanted next
@@ -81,7 +83,7 @@ class Impacts:
         if count <= 0:
             return []
         found = self._detector.find(self._rows(baseband, count))
-        begins = [self._next - self.after - self.before + row * self._segment for row in range(count)]
+        begins = [self._next - self._detector.after - self.before + row * self._segment for row in range(count)]
         places = [
             max(begin + one.position, float(self._begin))
             for begin, ones in zip(begins, found, strict=True)
@@ -93,12 +95,18 @@ class Impacts:
         for place in places:
             if place > end - 2.0 * self._reciprocal or self._is_edge_of_gap(place, missing):
                 continue
-            if new and new[-1].doubtful and place - self._begin < 2.0 * self._reciprocal:
+            if new and new[-1].onset == self._begin and place - self._begin < 2.0 * self._reciprocal:
                 self._impacts.remove(new.pop())  # the begin itself is no second one
+            if self._detector.is_repetition(place, self._last_onset()):
+                continue
             self._settle(baseband, math.floor(place))
             new.append(self._new(baseband, place))
         self._settle(baseband, self.settled_until)
         return new
+
+    def _last_onset(self) -> float | None:
+        """Return where the last impact began, if it was more than the begin of the samples."""
+        return self._impacts[-1].onset if self._impacts and self._impacts[-1].onset != self._begin else None
 
     def _new(self, baseband: SampleBuffer[np.complex64], place: float) -> Impact:
         first = math.ceil(place) + 1
@@ -121,11 +129,11 @@ class Impacts:
         self, baseband: SampleBuffer[np.complex64], count: int
     ) -> np.ndarray[tuple[int, int], np.dtype[np.complex64]]:
         """Return the segments with their context, shape (count, before + segment + after); zeros before the begin."""
-        first = self._next - self.after - self.before
+        first = self._next - self._detector.after - self.before
         end = self._next + count * self._segment
         held = max(first, self._origin)
         stretch = np.concatenate((np.zeros(held - first, np.complex64), baseband.view(held, end)))
-        length = self.before + self._segment + self.after
+        length = self.before + self._segment + self._detector.after
         windows = np.lib.stride_tricks.sliding_window_view(stretch, length)[:: self._segment]
         return np.ascontiguousarray(windows[:count])
 
