@@ -17,7 +17,7 @@ import sqlalchemy as sa
 from sqlalchemy.pool import NullPool, StaticPool
 
 from driftwatch.store.errors import ForeignDatabaseError, OtherSchemaError, StoreUnreachableError, unreachable
-from driftwatch.store.tables import APPLICATION_ID, HEAD, VERSION_TABLE
+from driftwatch.store.tables import APPLICATION_ID, HEAD, METADATA, VERSION_TABLE
 
 if TYPE_CHECKING:
     from sqlalchemy.engine import Connection, Engine
@@ -187,7 +187,7 @@ def newer_schema(path: Path, revision: str) -> OtherSchemaError:
 
 
 def migrate(connection: Connection, path: Path) -> None:
-    """Bring a database to revision `HEAD` in one transaction; a new one is created by the same way.
+    """Bring a database to revision `HEAD` in one transaction; a new one is created there at once.
 
     Raises
     ------
@@ -200,10 +200,22 @@ def migrate(connection: Connection, path: Path) -> None:
     if revision is not None and revision > HEAD:
         raise newer_schema(path, revision)
     connection.exec_driver_sql(f"PRAGMA application_id = {APPLICATION_ID}")
-    _upgrade(connection)
+    if revision is None:
+        create(connection)
+    else:
+        upgrade(connection)
 
 
-def _upgrade(connection: Connection) -> None:
+def create(connection: Connection) -> None:
+    """Make the tables of revision `HEAD`: the same that the migrations lead to, without loading them."""
+    METADATA.create_all(connection)
+    version = sa.Table(VERSION_TABLE, sa.MetaData(), sa.Column("version_num", sa.String(32), primary_key=True))
+    version.create(connection)
+    connection.execute(sa.insert(version).values(version_num=HEAD))
+
+
+def upgrade(connection: Connection) -> None:
+    """Run the migrations from the database's revision, or from none, to `HEAD`."""
     from alembic import command  # slow to import, and needed only when there is something to migrate
 
     command.upgrade(migration_config({"connection": connection}), HEAD)

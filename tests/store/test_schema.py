@@ -15,8 +15,8 @@ import pytest
 import sqlalchemy as sa
 from alembic.script import ScriptDirectory
 from driftwatch.records import KINDS, fields_of
-from driftwatch.store.opening import migration_config
-from driftwatch.store.tables import APPLICATION_ID, HEAD, METADATA, ROW_COLUMNS, TABLES
+from driftwatch.store.opening import migration_config, revision_of, upgrade
+from driftwatch.store.tables import APPLICATION_ID, HEAD, ROW_COLUMNS, TABLES
 from driftwatch.store.writer import Writer
 
 
@@ -26,12 +26,14 @@ def _statements(path: Path) -> dict[str, str]:
     return {name: " ".join(sql.split()) for name, sql in rows if name != "alembic_version"}
 
 
-def test_migrations_make_exactly_the_tables_and_indexes_of_the_metadata(tmp_path: Path) -> None:
-    Writer.open(tmp_path / "migrated.db", "line 3").close()
-    engine = sa.create_engine(f"sqlite:///{tmp_path / 'direct.db'}")
-    METADATA.create_all(engine)
+def test_migrations_lead_to_exactly_the_tables_and_indexes_of_a_new_database(tmp_path: Path) -> None:
+    engine = sa.create_engine(f"sqlite:///{tmp_path / 'migrated.db'}")
+    with engine.begin() as connection:
+        upgrade(connection)
+        assert revision_of(connection) == HEAD
     engine.dispose()
-    assert _statements(tmp_path / "migrated.db") == _statements(tmp_path / "direct.db")
+    Writer.open(tmp_path / "new.db", "line 3").close()
+    assert _statements(tmp_path / "migrated.db") == _statements(tmp_path / "new.db")
 
 
 def test_head_is_the_last_migration() -> None:
@@ -55,8 +57,12 @@ def test_a_new_database_is_marked_as_ours_and_writes_ahead(tmp_path: Path) -> No
 def test_migrations_run_from_wherever_the_package_lies(tmp_path: Path) -> None:
     home = tmp_path / "100 % elsewhere"
     shutil.copytree(Path(driftwatch.__file__).parent, home / "driftwatch", ignore=shutil.ignore_patterns("__pycache__"))
-    code = "import driftwatch; from driftwatch.store.writer import Writer; Writer.open('a.db', 's').close(); "
-    code += "print(driftwatch.__file__)"
+    code = (
+        "import driftwatch, sqlalchemy\n"
+        "from driftwatch.store.opening import upgrade\n"
+        "with sqlalchemy.create_engine('sqlite:///a.db').begin() as connection: upgrade(connection)\n"
+        "print(driftwatch.__file__)"
+    )
     environment = os.environ | {"PYTHONPATH": str(home), "PYTHONDONTWRITEBYTECODE": "1"}
     done = subprocess.run(
         [sys.executable, "-c", code], cwd=tmp_path, env=environment, capture_output=True, text=True, check=True
