@@ -5,7 +5,10 @@ search band with its exact finite sum (`decay_bins`). The onset is found by like
 begins at n0 with the pole already known, n0 and the amplitude free.
 
 Where the residuals contradict the model, because other modes and the blow itself still sound at first, a later cut
-and a smooth background in the bins are tried in a fixed order, and the first that fits is taken.
+and a smooth background in the bins are tried in a fixed order, and the first that fits is taken. Real decays seen 40 dB
+and more above the noise often contradict one pole whatever is tried, by damping that depends on the amplitude or by
+faint neighbours, and still tell that pole well: then the remainder widens the uncertainties (`decay_spread`), and only
+a large one makes the fit unusable.
 
 Uncertainties hold for noise that is flat over the search band. Where the noise is the mode's own random response, which
 is strongest at its peak, the figures stay right but scatter more than stated: by 2.7 where there is no other noise.
@@ -31,6 +34,7 @@ from driftwatch.measure.decay_bins import (
 )
 from driftwatch.measure.decay_checks import chance, decrement_q, excess_p, residual_p
 from driftwatch.measure.decay_onset import refined_onset, steepest_rise
+from driftwatch.measure.decay_spread import log_covariance, remainder_gain
 
 CUT = 0.02
 """The cut after the onset, in time constants."""
@@ -51,7 +55,12 @@ MISFIT_P = 0.01
 """p-value of the residual test below which other cuts are tried."""
 
 REFUSED_P = 1e-4
-"""p-value below which the fit that was taken is not usable."""
+"""p-value below which the fit that was taken is not usable, unless what it leaves is small."""
+
+SMALL_REMAINDER = 0.05
+"""Amplitude of what the fit leaves over that of the decay, up to which a contradicted fit stays usable.
+
+Two modes one half-power width apart or more leave 0.11 or more where the fainter has 0.3 of the other's amplitude."""
 
 COARSE = 0.03
 """Standard deviation of ln Q above which a fit that leaves more than the noise before the onset is not usable."""
@@ -204,7 +213,15 @@ class _Attempt:
 
     @property
     def std_ln_g(self) -> float:
+        """By the residuals alone."""
         return math.sqrt(float(self.pole.covariance[0, 0]))
+
+    @property
+    def remainder(self) -> float:
+        """Amplitude of what the fit leaves over that of the decay fitted."""
+        signal = float(np.sum(np.abs(self.bins.values - self.pole.residual) ** 2))
+        noise = 2.0 * self.pole.noise * len(self.bins.values)
+        return math.sqrt(noise / signal) if signal > 0.0 else math.inf
 
 
 def _attempt(
@@ -269,14 +286,12 @@ def _assemble(
     bins, pole = attempt.bins, attempt.pole
     omega = math.hypot(pole.g, pole.damped)
     frequency, q = omega / (2.0 * math.pi), omega / (2.0 * pole.g)
-    covariance = _log_covariance(pole)
+    contradicted = attempt.p < MISFIT_P or excess < MISFIT_P
+    covariance = log_covariance(pole) * (1.0 + (remainder_gain(pole) if contradicted else 0.0))
     std_f, std_q = math.sqrt(covariance[0, 0]), math.sqrt(covariance[1, 1])
     # Where nothing is known of q its interval is all that floating point can say.
     reach = min(float(special.stdtrit(pole.freedom, 0.975)) * std_q, 50.0)
-    fitted = bins.values - pole.residual
-    signal = float(np.sum(np.abs(fitted) ** 2))
-    noise = 2.0 * pole.noise * len(bins.values)
-    snr_db = 10.0 * math.log10(signal / noise) if noise > 0.0 and signal > 0.0 else None
+    ratio = attempt.remainder
     reasons = _reasons(attempt, frequency, q, search_hz, excess)
     return RingdownFit(
         frequency_hz=frequency,
@@ -287,7 +302,7 @@ def _assemble(
         q_low=q * math.exp(-reach),
         q_high=q * math.exp(reach),
         level=bins.level,
-        snr_db=snr_db,
+        snr_db=-20.0 * math.log10(ratio) if 0.0 < ratio < math.inf else None,
         fit_p=attempt.p,
         onset_sample=onset,
         onset_std=onset_std,
@@ -301,14 +316,6 @@ def _assemble(
     )
 
 
-def _log_covariance(pole: PoleFit) -> Reals:
-    """Covariance of (ln fn, ln q) from that of (ln g, wd): wn^2 = g^2 + wd^2, q = wn / (2 g)."""
-    square = pole.g**2 + pole.damped**2
-    of_f = [pole.g**2 / square, pole.damped / square]
-    slope = np.array([of_f, [of_f[0] - 1.0, of_f[1]]])
-    return np.asarray(slope @ pole.covariance @ slope.T)
-
-
 def _reasons(
     attempt: _Attempt, frequency: float, q: float, search_hz: tuple[float, float], excess: float
 ) -> tuple[str, ...]:
@@ -319,7 +326,8 @@ def _reasons(
         "no_mode": chance(attempt.bins, attempt.pole) > NO_MODE_P,
         "band_edge": not search_hz[0] + width / 2 < frequency < search_hz[1] - width / 2,
         "too_wide": width > band / 2,
-        "misfit": attempt.p < REFUSED_P or (excess < REFUSED_P and attempt.std_ln_g > COARSE),
+        "misfit": (attempt.p < REFUSED_P and attempt.remainder > SMALL_REMAINDER)
+        or (excess < REFUSED_P and attempt.std_ln_g > COARSE),
     }
     return tuple(word for word, holds in found.items() if holds)
 

@@ -245,7 +245,7 @@ class ModeLine:
     def _decay(
         self, impact: Impact, end: int, raw: SampleBuffer[np.float32], missing: MissingList, ready: int
     ) -> Iterator[_Measured]:
-        """Yield the measurement of a decay up to stream index `end`; none where the samples only begin there."""
+        """Yield the measurement of a decay up to stream index `end`; none where a begin may be no decay."""
         if impact.doubtful and not self._impacts.falls(impact, self._baseband, end // self._band.decimation):
             return
         onset = impact.onset * self._band.decimation
@@ -262,7 +262,7 @@ class ModeLine:
             fit = ringdown.fit(raw.view(first, end), self._subject.rate_hz, self._band.search_hz, onset - first)
             used = Extent(first + fit.first_sample, fit.samples) if fit.usable else extent
             body = ringdown_body(self._subject, used, fit)
-        if not impact.doubtful or (body.usable and (body.snr_db or 0.0) >= CERTAIN_DB):
+        if not impact.doubtful or (body.snr_db or 0.0) >= CERTAIN_DB:
             yield ready, body
 
     # ------------------------------------------------------------------------------------------ memory

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import json
+import subprocess
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -68,3 +71,44 @@ def test_onset_is_found_in_the_zoomed_stream_and_leads_to_the_pole(
     start = round(place) - context
     fit = ringdown.fit(both[start : start + context + rate], rate, search_hz, place - start)
     assert_agrees(fit, frequency, q_low, q_high)
+
+
+WINDOWS_S = (0.8, 1.5, 3.0)
+CONFIG = """
+schema = 1
+[[channel]]
+name = "skin"
+quantity = "pressure"
+"""
+MODE = """
+[[mode]]
+name = "{window_s} s"
+channel = "skin"
+search_hz = [{low}, {high}]
+methods = ["ringdown"]
+window_s = {window_s}
+"""
+
+
+@pytest.mark.parametrize(("name", "search_hz", "frequency", "q_low", "q_high"), CASES)
+def test_replay_of_a_recording_that_begins_with_the_stroke_gives_the_pole_for_every_window(
+    tmp_path: Path, name: str, search_hz: tuple[float, float], frequency: float, q_low: float, q_high: float
+) -> None:
+    """A real process; to 40 dB and more these decays contradict one pole, and nevertheless tell it."""
+    low, high = search_hz
+    modes = [MODE.format(window_s=window_s, low=low, high=high) for window_s in WINDOWS_S]
+    (tmp_path / "drum.toml").write_text(CONFIG + "".join(modes))
+    arguments = ["replay", "drum.toml", str(DECAYS / name), "--start", "2026-03-01T06:00:00Z", "--json"]
+    command = [sys.executable, "-m", "driftwatch", *arguments]
+    done = subprocess.run(command, cwd=tmp_path, capture_output=True, text=True, timeout=60, check=False)
+    assert done.returncode == 0, done.stderr
+    records = [json.loads(line) for line in done.stdout.splitlines()]
+    found = {one["mode"]: one for one in records if one["kind"] == "measurement"}
+    assert set(found) == {f"{window_s} s" for window_s in WINDOWS_S}
+    for one in found.values():
+        assert one["usable"], one
+        assert one["method"] == "ringdown"
+        assert one["frequency_hz"] == pytest.approx(frequency, rel=5e-4)
+        assert 0.95 * q_low <= one["q"] <= 1.05 * q_high
+        assert one["q_low"] < q_high
+        assert one["q_high"] > q_low
