@@ -41,7 +41,7 @@ are taken as proportional to a velocity (radiated sound, an induction coil)."""
 _EDGE_ATTENUATION_DB = 100.0
 _EDGE_BETA = 0.1102 * (_EDGE_ATTENUATION_DB - 8.7)  # Kaiser & Schafer 1980
 _EDGE_PRODUCT = (_EDGE_ATTENUATION_DB - 7.95) / 14.36 / 2  # half the impulse response's length times the edge's width
-_EDGE_SHARE = 0.25  # an edge's width over the search band's, at least
+_EDGE_SHARE = 0.35  # an edge's width over the search band's, at least
 _EDGE_OF_WINDOW = 0.125  # the edge delay over the window's length, at most
 _HOP_SHARE = 0.75  # of a block that is new, at least
 _ODD_COST = 0.07  # what each doubling of the odd part of a length adds to its FFT's cost

@@ -135,14 +135,16 @@ class ChannelLine:
         ]
         keep = min(self._block * zoom.hop - zoom.edge, *(line.keeps_from for line in self._lines))
         self._raw.forget(keep)
-        self._missing.forget(keep)
+        self._missing.forget(keep - self._longest)  # impacts look further back for what is quiet
         return readings
 
     def _complete_blocks(self) -> int:
-        """Return how many blocks can be zoomed now, at most `MOST_BLOCKS`."""
+        """Return how many blocks can be zoomed now, at most `MOST_BLOCKS`, and few that lie across the raw's seam."""
         zoom = self._zoom
         beyond = self._raw.end - zoom.edge - self._block * zoom.hop
-        return min(beyond // zoom.hop, MOST_BLOCKS)
+        before_seam = self._raw.seam + zoom.edge - self._block * zoom.hop
+        most = -(-before_seam // zoom.hop) if before_seam > 0 else MOST_BLOCKS
+        return min(beyond // zoom.hop, most, MOST_BLOCKS)
 
     def _flush(self) -> list[Reading]:
         """Go on with zeros until everything up to the position is measured; the position stays."""
