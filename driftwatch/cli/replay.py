@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import shlex
 import sys
 import uuid
 from contextlib import ExitStack
@@ -20,6 +19,7 @@ from driftwatch.cli.shared import (
     print_json,
     refuse_misfit,
     stopped_by_signal,
+    typed,
     work_failed,
 )
 from driftwatch.cli.view import RunView, folded
@@ -119,5 +119,5 @@ def _replay(
 def _close(view: RunView, store: str) -> None:
     for line in view.summary():
         click.echo(line)
-    click.echo(f"What next:  {shlex.join(['driftwatch', 'readings', '--store', store, '--run', view.run[:8]])}")
+    click.echo(f"What next:  {typed('readings', '--store', store, '--run', view.run[:8])}")
     click.echo(folded(CAUTION))

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import shlex
 import time
 import uuid
 from collections.abc import Iterator
@@ -21,6 +20,7 @@ from driftwatch.cli.shared import (
     refuse,
     refuse_misfit,
     stopped_by_signal,
+    typed,
     work_failed,
 )
 from driftwatch.cli.view import RunView, folded
@@ -150,5 +150,5 @@ def _close(view: RunView, config: str, store: list[str]) -> None:
         ("its limits", ["check", config]),
         ("a recording", ["replay", config, "RECORDING"]),
     ):
-        click.echo(f"  {what:<11}  {shlex.join(['driftwatch', *words])}")
+        click.echo(f"  {what:<11}  {typed(*words)}")
     click.echo(folded(CAUTION))

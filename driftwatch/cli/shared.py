@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import os
+import shlex
+import shutil
 import signal
 import sys
 from collections.abc import Callable, Iterator, Sequence
@@ -21,6 +23,20 @@ CAUTION = (
     "driftwatch advises; it is no protective system. Where a failure can hurt someone a qualified person decides, "
     "and trips and guards work without it."
 )
+
+
+def typed(*words: str) -> str:
+    """Return a command of this program as a person types it where it was started."""
+    return shlex.join([_program(), *words])
+
+
+def _program() -> str:
+    """Return the program's name where the shell finds it by that, else the path that it was started by."""
+    started, found = Path(sys.argv[0]), shutil.which("driftwatch")
+    if started.name != "driftwatch" or not started.exists() or (found and started.samefile(found)):
+        return "driftwatch"
+    here = Path.cwd()
+    return str(started.relative_to(here) if started.is_relative_to(here) else started)
 
 
 def refuse(lines: Sequence[object]) -> NoReturn:
