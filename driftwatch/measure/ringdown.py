@@ -11,7 +11,8 @@ faint neighbours, and still tell that pole well: then the remainder widens the u
 a large one makes the fit unusable.
 
 Uncertainties hold for noise that is flat over the search band. Where the noise is the mode's own random response, which
-is strongest at its peak, the figures stay right but scatter more than stated: by 2.7 where there is no other noise.
+is strongest at its peak, estimates scatter up to 2.7 times more than the residuals tell; then the stretch before the
+onset, where it is given, tells how much more.
 """
 
 from __future__ import annotations
@@ -23,36 +24,23 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import special
 
-from driftwatch.measure.decay_bins import (
-    Bins,
-    Complexes,
-    PoleFit,
-    Reals,
-    fit_pole,
-    start,
-    transform,
+from driftwatch.measure.decay_attempts import (
+    CUT,
+    FEWEST_BINS,
+    MISFIT_P,
+    SHORTEST,
+    Attempt,
+    attempt_at,
+    best_attempt,
+    rough_pole,
 )
-from driftwatch.measure.decay_checks import chance, decrement_q, excess_p, residual_p
+from driftwatch.measure.decay_bins import Reals
+from driftwatch.measure.decay_checks import chance, decrement_q, excess_p
 from driftwatch.measure.decay_onset import refined_onset, steepest_rise
-from driftwatch.measure.decay_spread import log_covariance, remainder_gain
-
-CUT = 0.02
-"""The cut after the onset, in time constants."""
-
-LATER_CUTS = (0.1, 0.25, 0.5, 0.75, 1.0, 1.25)
-"""Cuts tried one after the other, in time constants, where the residuals contradict an earlier one."""
+from driftwatch.measure.decay_spread import Quiet, log_covariance, remainder_gain, widening
 
 GUARD = 13.0
 """What `fit_baseband` leaves out after the onset, in reciprocal bandwidths: the reach of the band edge's ringing."""
-
-LONGEST = 7.0
-"""Time constants after the cut that are used at most: what follows is noise."""
-
-SHORTEST = 0.5
-"""Time constants that a record must show at least."""
-
-MISFIT_P = 0.01
-"""p-value of the residual test below which other cuts are tried."""
 
 REFUSED_P = 1e-4
 """p-value below which the fit that was taken is not usable, unless what it leaves is small."""
@@ -60,18 +48,14 @@ REFUSED_P = 1e-4
 SMALL_REMAINDER = 0.05
 """Amplitude of what the fit leaves over that of the decay, up to which a contradicted fit stays usable.
 
-Two modes one half-power width apart or more leave 0.11 or more where the fainter has 0.3 of the other's amplitude."""
+Two modes one half-power width apart or more, the fainter of 0.3 of the amplitude or more, leave 0.07 or more nine times
+in ten; the real decays that are contradicted and right leave up to 0.04."""
 
 COARSE = 0.03
 """Standard deviation of ln Q above which a fit that leaves more than the noise before the onset is not usable."""
 
 NO_MODE_P = 0.01
 """Probability that noise alone looks so much like a decay, above which there is none."""
-
-_LATER = [(cut, background) for cut in LATER_CUTS for background in (False, True)]
-_FEWEST_SAMPLES = 16
-_FEWEST_BINS = 4
-_FEWEST_BINS_WITH_BACKGROUND = 8
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,6 +93,7 @@ def fit(
     rate_hz: float,
     search_hz: tuple[float, float],
     onset_hint: float | None = None,
+    before: Quiet | None = None,
 ) -> RingdownFit:
     """Fit one mode's free decay in raw samples that hold some noise, an onset, and the decay up to their end.
 
@@ -124,6 +109,8 @@ def fit(
         Where the mode is searched for.
     onset_hint
         Index of the onset to about two reciprocal bandwidths; left out: the steepest rise of the band's envelope.
+    before
+        Baseband from long before the onset, which tells noise that is not flat; left out: it is taken as flat.
 
     Raises
     ------
@@ -136,7 +123,7 @@ def fit(
         return _nothing(len(samples), trouble)
     data = np.asarray(samples, dtype=np.float64)
     hint = steepest_rise(data, rate_hz, search_hz) if onset_hint is None else onset_hint
-    return _fit_after(data, rate_hz, search_hz, hint)
+    return _fit_after(data, rate_hz, search_hz, hint, before)
 
 
 def fit_baseband(
@@ -179,118 +166,49 @@ def fit_baseband(
         return _nothing(len(stream), trouble)
     data = np.asarray(stream, dtype=np.complex128)
     begin = math.ceil(onset + GUARD * rate_hz / (band[1] - band[0]))
-    rough = _rough_pole(data, rate_hz, band, begin)
-    plain = None if rough is None else _attempt(data, rate_hz, band, float(begin), rough, 0.0)
+    rough = rough_pole(data, rate_hz, band, begin)
+    plain = None if rough is None else attempt_at(data, rate_hz, band, float(begin), rough, 0.0)
     if plain is None:
         return _nothing(len(stream), ("short",))
-    best = _best_attempt(data, rate_hz, band, float(begin), plain)
+    best = best_attempt(data, rate_hz, band, float(begin), plain)
     pole = replace(best.pole, damped=best.pole.damped + 2.0 * math.pi * centre_hz)
     return _assemble(replace(best, pole=pole), search_hz, onset, None)
 
 
-def _fit_after(data: Reals, rate_hz: float, search_hz: tuple[float, float], hint: float) -> RingdownFit:
+def _fit_after(
+    data: Reals, rate_hz: float, search_hz: tuple[float, float], hint: float, before: Quiet | None
+) -> RingdownFit:
     reciprocal = rate_hz / (search_hz[1] - search_hz[0])
-    rough = _rough_pole(data, rate_hz, search_hz, round(hint + reciprocal))
+    rough = rough_pole(data, rate_hz, search_hz, round(hint + reciprocal))
     if rough is None:
         return _nothing(len(data), ("short",))
     onset, onset_std = refined_onset(data, rate_hz, search_hz, hint, rough)
-    plain = _attempt(data, rate_hz, search_hz, onset, rough, CUT)
+    plain = attempt_at(data, rate_hz, search_hz, onset, rough, CUT)
     if plain is None:
         return _nothing(len(data), ("short",))
-    best = _best_attempt(data, rate_hz, search_hz, onset, plain)
+    best = best_attempt(data, rate_hz, search_hz, onset, plain)
     quiet = data[: max(0, math.floor(onset - min(max(2.0 * onset_std, 0.1 * reciprocal), reciprocal)))]
-    return _assemble(best, search_hz, onset, onset_std, excess_p(best.bins, best.pole, quiet, search_hz))
-
-
-@dataclass(frozen=True, slots=True)
-class _Attempt:
-    """One fit of one record."""
-
-    first: int  # index of the record's first sample
-    bins: Bins
-    pole: PoleFit
-    p: float  # of the residual test
-
-    @property
-    def std_ln_g(self) -> float:
-        """By the residuals alone."""
-        return math.sqrt(float(self.pole.covariance[0, 0]))
-
-    @property
-    def remainder(self) -> float:
-        """Amplitude of what the fit leaves over that of the decay fitted."""
-        signal = float(np.sum(np.abs(self.bins.values - self.pole.residual) ** 2))
-        noise = 2.0 * self.pole.noise * len(self.bins.values)
-        return math.sqrt(noise / signal) if signal > 0.0 else math.inf
-
-
-def _attempt(
-    data: Reals | Complexes,
-    rate_hz: float,
-    search_hz: tuple[float, float],
-    onset: float,
-    guess: PoleFit,
-    cut: float,
-    background: bool = False,
-) -> _Attempt | None:
-    """Fit the record that begins `cut` time constants after the onset; None where too little is left."""
-    # A guess from little data may be far off: no decay is taken for longer than the record, or wider than the band.
-    shortest = 2.0 * rate_hz / (math.pi * (search_hz[1] - search_hz[0]))
-    tau = min(max(rate_hz / guess.g, shortest), len(data) - onset)
-    first = max(0, math.ceil(onset + cut * tau))
-    last = min(len(data), first + math.ceil(LONGEST * tau))
-    if last - first < _FEWEST_SAMPLES:
-        return None
-    bins = transform(data[first:last], rate_hz, search_hz)
-    if len(bins.values) < (_FEWEST_BINS_WITH_BACKGROUND if background else _FEWEST_BINS) or not np.any(bins.values):
-        return None
-    pole = fit_pole(bins, (guess.g, guess.damped), background)
-    return _Attempt(first, bins, pole, residual_p(pole))
-
-
-def _best_attempt(
-    data: Reals | Complexes, rate_hz: float, search_hz: tuple[float, float], onset: float, plain: _Attempt
-) -> _Attempt:
-    """The plain fit if its residuals do not contradict it, else the first later cut or background that serves better.
-
-    Better is: not contradicted, and more certain of the decay rate by its own residuals. Of mere noise, which now and
-    then contradicts by chance, a shorter record is less certain. Where none serves, the most certain is taken.
-    """
-    if plain.p > MISFIT_P:
-        return plain
-    best = plain
-    for cut, background in _LATER:
-        trial = _attempt(data, rate_hz, search_hz, onset, plain.pole, cut, background)
-        if trial is None or not trial.pole.converged or trial.bins.length * trial.pole.g < SHORTEST * rate_hz:
-            continue
-        if trial.p > MISFIT_P and trial.std_ln_g < plain.std_ln_g:
-            return trial
-        if trial.std_ln_g < best.std_ln_g:
-            best = trial
-    return best
-
-
-def _rough_pole(data: Reals | Complexes, rate_hz: float, search_hz: tuple[float, float], first: int) -> PoleFit | None:
-    """The pole of all that comes a reciprocal bandwidth after the hint, where the onset cannot be."""
-    if len(data) - first < 4:
-        return None
-    bins = transform(data[first:], rate_hz, search_hz)
-    if len(bins.values) < _FEWEST_BINS or not np.any(bins.values):
-        return None
-    return fit_pole(bins, start(bins), accuracy=0.1)
+    excess = excess_p(best.bins, best.pole, quiet, search_hz)
+    return _assemble(best, search_hz, onset, onset_std, excess, widening(best.bins, best.pole, before, search_hz))
 
 
 def _assemble(
-    attempt: _Attempt, search_hz: tuple[float, float], onset: float, onset_std: float | None, excess: float = 1.0
+    attempt: Attempt,
+    search_hz: tuple[float, float],
+    onset: float,
+    onset_std: float | None,
+    excess: float = 1.0,
+    noise: tuple[float, float] | None = None,
 ) -> RingdownFit:
     bins, pole = attempt.bins, attempt.pole
     omega = math.hypot(pole.g, pole.damped)
     frequency, q = omega / (2.0 * math.pi), omega / (2.0 * pole.g)
     contradicted = attempt.p < MISFIT_P or excess < MISFIT_P
-    covariance = log_covariance(pole) * (1.0 + (remainder_gain(pole) if contradicted else 0.0))
+    gain, freedom = (1.0, float(pole.freedom)) if noise is None else noise
+    covariance = log_covariance(pole) * (gain + (remainder_gain(pole) if contradicted else 0.0))
     std_f, std_q = math.sqrt(covariance[0, 0]), math.sqrt(covariance[1, 1])
     # Where nothing is known of q its interval is all that floating point can say.
-    reach = min(float(special.stdtrit(pole.freedom, 0.975)) * std_q, 50.0)
+    reach = min(float(special.stdtrit(freedom, 0.975)) * std_q, 50.0)
     ratio = attempt.remainder
     reasons = _reasons(attempt, frequency, q, search_hz, excess)
     return RingdownFit(
@@ -317,7 +235,7 @@ def _assemble(
 
 
 def _reasons(
-    attempt: _Attempt, frequency: float, q: float, search_hz: tuple[float, float], excess: float
+    attempt: Attempt, frequency: float, q: float, search_hz: tuple[float, float], excess: float
 ) -> tuple[str, ...]:
     pole, width, band = attempt.pole, frequency / q, search_hz[1] - search_hz[0]
     found = {
@@ -347,7 +265,7 @@ def _check(
 
 
 def _trouble(samples: NDArray[np.inexact], rate_hz: float, search_hz: tuple[float, float]) -> tuple[str, ...]:
-    if len(samples) * (search_hz[1] - search_hz[0]) < _FEWEST_BINS * rate_hz:
+    if len(samples) * (search_hz[1] - search_hz[0]) < FEWEST_BINS * rate_hz:
         return ("short",)
     if not np.all(np.isfinite(samples)):
         return ("not_finite",)

@@ -10,8 +10,10 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
+from numpy.typing import NDArray
 
 from driftwatch.measure import onset
+from driftwatch.measure.ringdown import GUARD
 
 if TYPE_CHECKING:
     from driftwatch.measure.zoom import Band
@@ -34,6 +36,7 @@ class Impact:
     before: float  # mean power before it
     looked: int  # up to where its end was looked for
     doubtful: bool  # so near the begin of the samples that the begin itself may look like it
+    quiet: NDArray[np.complex64]  # what is free of any disturbance in the window's length before it
     settled: int | None = None  # where its decay is over; None: not yet
 
 
@@ -89,7 +92,7 @@ class Impacts:
             for begin, ones in zip(begins, found, strict=True)
             for one in ones
         ]
-        new = [] if self._begun else [self._new(baseband, float(self._begin))]
+        new = [] if self._begun else [self._new(baseband, float(self._begin), missing)]
         self._begun = True
         self._next += count * self._segment
         for place in places:
@@ -100,7 +103,7 @@ class Impacts:
             if self._detector.is_repetition(place, self._last_onset()):
                 continue
             self._settle(baseband, math.floor(place))
-            new.append(self._new(baseband, place))
+            new.append(self._new(baseband, place, missing))
         self._settle(baseband, self.settled_until)
         return new
 
@@ -108,14 +111,16 @@ class Impacts:
         """Return where the last impact began, if it was more than the begin of the samples."""
         return self._impacts[-1].onset if self._impacts and self._impacts[-1].onset != self._begin else None
 
-    def _new(self, baseband: SampleBuffer[np.complex64], place: float) -> Impact:
+    def _new(self, baseband: SampleBuffer[np.complex64], place: float, missing: MissingList) -> Impact:
         first = math.ceil(place) + 1
         if self._impacts and self._impacts[-1].doubtful:
             self._impacts[-1].settled = math.floor(place)
         if place < self._begin + self.before:  # nothing before it to compare with
-            impact = Impact(place, 0.0, first, doubtful=True, settled=first + self._band.window)
+            nothing = np.zeros(0, np.complex64)
+            impact = Impact(place, 0.0, first, doubtful=True, quiet=nothing, settled=first + self._band.window)
         else:
-            impact = Impact(place, self._power_before(baseband, place), first, doubtful=False)
+            quiet = self._quiet_before(baseband, place, missing)
+            impact = Impact(place, self._power_before(baseband, place), first, doubtful=False, quiet=quiet)
         self._impacts.append(impact)
         return impact
 
@@ -173,6 +178,18 @@ class Impacts:
         if end <= first:
             return 0.0
         return float(np.mean(np.square(np.abs(baseband.view(first, end)))))
+
+    def _quiet_before(
+        self, baseband: SampleBuffer[np.complex64], place: float, missing: MissingList
+    ) -> NDArray[np.complex64]:
+        """Return a copy of what lies within a window's length before an onset, clear of everything by the guard."""
+        guard = math.ceil(GUARD * self._reciprocal)
+        end = math.floor(place) - guard
+        first = max(self._begin + guard, math.floor(place) - 1 - self._band.window)
+        step = self._band.decimation
+        gaps = [-(-run.end // step) + guard for run in missing.within((first - guard) * step, end * step)]
+        first = max([first, *gaps, *(until + guard for _, until in self.disturbed(first, end))])
+        return baseband.view(first, end).copy() if first < end else np.zeros(0, np.complex64)
 
     def _settle(self, baseband: SampleBuffer[np.complex64], until: int) -> None:
         """Look for the end of each decay that goes on, chunk by chunk on its own grid, up to baseband index `until`."""

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from driftwatch.measure import ambient, ringdown
+from driftwatch.measure.decay_spread import Quiet
 from driftwatch.pipeline.buffer import SampleBuffer
 from driftwatch.pipeline.impacts import Impact, Impacts
 from driftwatch.pipeline.missing import MissingList
@@ -259,7 +260,8 @@ class ModeLine:
         if first > onset or extent.samples == 0:
             body = unusable_body(self._subject, Method.RINGDOWN, extent, ("gap",))
         else:
-            fit = ringdown.fit(raw.view(first, end), self._subject.rate_hz, self._band.search_hz, onset - first)
+            quiet = Quiet(impact.quiet, self._band.rate_hz, self._band.centre_hz, self._band.velocity_power)
+            fit = ringdown.fit(raw.view(first, end), self._subject.rate_hz, self._band.search_hz, onset - first, quiet)
             used = Extent(first + fit.first_sample, fit.samples) if fit.usable else extent
             body = ringdown_body(self._subject, used, fit)
         if not impact.doubtful or (body.snr_db or 0.0) >= CERTAIN_DB:

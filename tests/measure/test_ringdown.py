@@ -7,6 +7,7 @@ import math
 import numpy as np
 import pytest
 from driftwatch.measure import ringdown
+from driftwatch.measure.decay_attempts import CUT
 from driftwatch.measure.limits_decay import whole_record
 from driftwatch.measure.zoom import BandRequest, Zoom
 from driftwatch.records import REASONS
@@ -67,7 +68,7 @@ def test_the_onset_is_refined_from_any_hint_within_a_reciprocal_bandwidth(hint: 
     assert_right(fit)
     assert fit.onset_sample is not None
     assert fit.onset_sample == pytest.approx(ONSET, abs=0.02 * TAU * RATE)
-    assert fit.first_sample == pytest.approx(ONSET + ringdown.CUT * TAU * RATE, abs=0.02 * TAU * RATE)
+    assert fit.first_sample == pytest.approx(ONSET + CUT * TAU * RATE, abs=0.02 * TAU * RATE)
     assert not fit.background
 
 
@@ -82,8 +83,8 @@ def test_every_derivative_of_a_decay_has_the_same_pole() -> None:
 def test_level_and_snr_are_those_of_the_record() -> None:
     """A decay of amplitude A has the mean square A^2 tau / (4 T); 3 %: the band holds that much less of it."""
     fit = ringdown.fit(record(level=1e-4), RATE, SEARCH, ONSET)
-    assert fit.amplitude == pytest.approx(math.exp(-ringdown.CUT), rel=0.02)
-    expected = math.exp(-2.0 * ringdown.CUT) * TAU * RATE / 4.0 / fit.samples
+    assert fit.amplitude == pytest.approx(math.exp(-CUT), rel=0.02)
+    expected = math.exp(-2.0 * CUT) * TAU * RATE / 4.0 / fit.samples
     assert fit.level == pytest.approx(math.sqrt(expected), rel=0.03)
     assert fit.snr_db == pytest.approx(10.0 * math.log10(expected / 1e-8), abs=2.0)  # 32 degrees of freedom
     assert fit.decrement_q == pytest.approx(Q, rel=0.1)
@@ -141,7 +142,7 @@ def test_what_a_faint_neighbour_does_lies_in_the_interval_that_the_remainder_wid
 
 
 def test_a_contradicted_fit_is_usable_where_little_is_left_and_refused_where_much_is() -> None:
-    """Neighbours four half-power widths off, 0.02 and 0.75 of the amplitude, 80 dB over the noise and nothing before."""
+    """Neighbours four half-power widths off, 0.02 and 0.75 of the amplitude; no quiet before to compare with."""
     for amplitude, usable in ((0.02, True), (0.75, False)):
         samples = record(level=1e-4) + record(level=0.0, frequency=990.0, amplitude=amplitude, phase=3.0)
         fit = ringdown.fit(samples[math.ceil(ONSET) :], RATE, SEARCH, 0.0)
