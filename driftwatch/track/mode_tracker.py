@@ -37,6 +37,9 @@ class ModeTracker:
     *Outliers and steps.* A reading beyond the gate is remembered and not taken. If another that shares no sample with
     it agrees with it before any reading falls inside the gate, the mode has stepped: the filter starts afresh there.
 
+    *Shared.* A small error that all estimates of ln q have in common, `shared_q`, is part of the uncertainty stated and
+    of no average.
+
     *Doubt.* While a reading outside the gate is neither taken nor contradicted by a later one, the uncertainty stated
     covers it too: it may be the truth.
 
@@ -61,6 +64,8 @@ class ModeTracker:
         After how many windows without finding it a mode counts as lost.
     silence_s : float
         After how long without any reading a mode counts as lost, seconds.
+    shared_q : float
+        Share of a reading's standard deviation of ln q that all readings may have in common.
     """
 
     def __init__(
@@ -74,6 +79,7 @@ class ModeTracker:
         memory_windows: float = 25.0,
         lost_windows: float = 5.0,
         silence_s: float = 60.0,
+        shared_q: float = 0.0,
     ) -> None:
         self._channel, self._mode, self._search_hz = channel, mode, search_hz
         self._window_s = window_s
@@ -89,6 +95,8 @@ class ModeTracker:
         self._spacing_s = window_s
         self._pending: list[Reading] = []
         self._refused_since_ns: int | None = None  # begin of a run of readings outside the gate
+        self._shared_q = shared_q
+        self._shared_var_q = 0.0  # of ln q, common to all readings
         self._doubt = (0.0, 0.0)  # by how much the last of them differs in ln fn and ln q
         self._before: Reading | None = None
         self._usual_var_q: float | None = None
@@ -221,6 +229,7 @@ class ModeTracker:
         if not reading.decay:
             self._before = reading
         self._pending.clear()
+        self._shared_var_q = self._shared_q**2 * reading.var_q
         self._refused_since_ns, self._doubt = None, (0.0, 0.0)
         self._missing_since_ns, self._missed_decays = None, 0
         self._status, self._reason = TrackStatus.TRACKING, None
@@ -294,7 +303,8 @@ class ModeTracker:
             return self._point(None, None, None, None, None, None, None, None, None)
         x = self._carried(self._state, time_ns)
         f, q = math.exp(x.ln_f), math.exp(x.ln_q)
-        std_f, std_q = math.sqrt(x.p_ff + self._doubt[0] ** 2), math.sqrt(x.p_qq + self._doubt[1] ** 2)
+        std_f = math.sqrt(x.p_ff + self._doubt[0] ** 2)
+        std_q = math.sqrt(x.p_qq + self._doubt[1] ** 2 + self._shared_var_q)
         reach = math.exp(_Z95 * std_q)
         correlation = x.p_fq / (std_f * std_q)
         rate, rate_std = x.rate * DAY_S, math.sqrt(x.p_rr) * DAY_S

@@ -420,3 +420,21 @@ def assert_sound(point: Track) -> None:
         assert point.frequency_std_hz > 0.0
         assert point.q_low < point.q < point.q_high
         assert abs(point.frequency_q_correlation) <= 1.0
+
+
+def test_an_error_that_all_readings_share_is_part_of_the_uncertainty_however_many_there_are(follower):
+    """The averaged part shrinks, the shared one stays: 0.3 of a reading's 0.07 of ln q."""
+    plain, sharing = follower(), follower(shared_q=0.3)
+    for count in (20, 300):
+        alone, together = plain.feed(count, std_q=0.07), sharing.feed(count, std_q=0.07)
+        assert together.q_std / together.q == pytest.approx(math.hypot(alone.q_std / alone.q, 0.3 * 0.07), rel=1e-6)
+        assert together.frequency_std_hz == alone.frequency_std_hz
+
+
+def test_a_reading_outside_the_gate_is_covered_until_it_is_taken_or_contradicted(follower):
+    line = follower()
+    before = line.feed(40)
+    doubted = line.feed(1, f=930.0)
+    assert doubted.frequency_hz == pytest.approx(before.frequency_hz, rel=1e-4)
+    assert doubted.frequency_std_hz >= 930.0 - before.frequency_hz - 1.0
+    assert line.feed(8).frequency_std_hz < 2 * before.frequency_std_hz
