@@ -56,7 +56,12 @@ class ModeLine:
         self._start_ns = start_ns
         self._subject = Subject(channel.name, mode.name, channel.unit, channel.scale, zoom.rate_hz)
         self._tracker = ModeTracker(
-            channel.name, mode.name, self._band.search_hz, mode.window_s, self._band.step / self._band.rate_hz
+            channel.name,
+            mode.name,
+            self._band.search_hz,
+            mode.window_s,
+            self._band.step / self._band.rate_hz,
+            shared_q=ambient.SHARED_Q,
         )
         self._now_ns = start_ns  # time of the last track point or tick
         self._silent_ns = start_ns  # time of the last tick
