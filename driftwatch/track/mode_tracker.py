@@ -40,8 +40,8 @@ class ModeTracker:
     *Shared.* A small error that all estimates of ln q have in common, `shared_q`, is part of the uncertainty stated and
     of no average.
 
-    *Doubt.* While a reading outside the gate is neither taken nor contradicted by a later one, the uncertainty stated
-    covers it too: it may be the truth.
+    *Doubt.* While a reading outside the gate is neither taken nor contradicted by a later one, the 95 % interval stated
+    reaches it: it may be the truth.
 
     *Held.* While unusable readings come and the last reading used is a window old or older, the status is held and
     the figures stay, with growing uncertainty. One reading inside the gate ends it.
@@ -97,7 +97,7 @@ class ModeTracker:
         self._refused_since_ns: int | None = None  # begin of a run of readings outside the gate
         self._shared_q = shared_q
         self._shared_var_q = 0.0  # of ln q, common to all readings
-        self._doubt = (0.0, 0.0)  # by how much the last of them differs in ln fn and ln q
+        self._doubt = (0.0, 0.0)  # standard deviations of ln fn and ln q by which the interval reaches the last of them
         self._before: Reading | None = None
         self._usual_var_q: float | None = None
         self._used_ns: int | None = None
@@ -163,7 +163,7 @@ class ModeTracker:
         if kalman.innovation(now, reading).distance <= GATE:
             self._accept(now, reading)
         elif not self._confirm(reading):
-            self._doubt = reading.ln_f - now.ln_f, reading.ln_q - now.ln_q
+            self._doubt = (reading.ln_f - now.ln_f) / _Z95, (reading.ln_q - now.ln_q) / _Z95
             self._refused_since_ns = reading.end_ns if self._refused_since_ns is None else self._refused_since_ns
             if reading.end_ns - self._refused_since_ns >= self._pending_ns(reading):
                 self._hold("misfit", reading.end_ns)

@@ -436,5 +436,5 @@ def test_a_reading_outside_the_gate_is_covered_until_it_is_taken_or_contradicted
     before = line.feed(40)
     doubted = line.feed(1, f=930.0)
     assert doubted.frequency_hz == pytest.approx(before.frequency_hz, rel=1e-4)
-    assert doubted.frequency_std_hz >= 930.0 - before.frequency_hz - 1.0
+    assert doubted.frequency_hz * (1 + 1.96 * doubted.frequency_std_hz / doubted.frequency_hz) >= 929.0
     assert line.feed(8).frequency_std_hz < 2 * before.frequency_std_hz
