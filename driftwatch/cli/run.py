@@ -26,9 +26,8 @@ from driftwatch.cli.shared import (
 from driftwatch.cli.view import RunView, folded
 
 if TYPE_CHECKING:
-    from threading import Event
-
     from driftwatch.config import Configuration
+    from driftwatch.daemon.stop import Stop
     from driftwatch.stream.source import Source
 
 LINES_EVERY_S = 5.0
@@ -87,7 +86,7 @@ def _run(
     store: str | None,
     publish: str | None,
     view: RunView | None,
-    stop: Event,
+    stop: Stop,
 ) -> None:
     """Run to the end; without a view print JSON."""
     from driftwatch.bus.publisher import Publisher

@@ -10,13 +10,13 @@ import sys
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
-from threading import Event
 from typing import TYPE_CHECKING, NoReturn
 
 import click
 
 if TYPE_CHECKING:
     from driftwatch.config import Configuration, Problem
+    from driftwatch.daemon.stop import Stop
     from driftwatch.records import Envelope
 
 CAUTION = (
@@ -79,9 +79,11 @@ def print_json(envelopes: Sequence[Envelope]) -> None:
 
 
 @contextmanager
-def stopped_by_signal() -> Iterator[Event]:
-    """Give an event that SIGINT and SIGTERM set, so that the work ends in good order."""
-    stop = Event()
+def stopped_by_signal() -> Iterator[Stop]:
+    """Give what SIGINT and SIGTERM set, so that the work ends in good order."""
+    from driftwatch.daemon.stop import Stop
+
+    stop = Stop()
     before = {number: signal.signal(number, lambda *_: stop.set()) for number in (signal.SIGINT, signal.SIGTERM)}
     try:
         yield stop
@@ -102,7 +104,7 @@ class Output:
         in good order.
     """
 
-    def __init__(self, show: Callable[[Sequence[Envelope]], None], stop: Event) -> None:
+    def __init__(self, show: Callable[[Sequence[Envelope]], None], stop: Stop) -> None:
         self._show = show
         self._stop = stop
         self._error: OSError | None = None

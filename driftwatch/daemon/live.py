@@ -5,10 +5,10 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from threading import Event
 
 from driftwatch.bus.publisher import Publisher
 from driftwatch.daemon.keeper import Keeper
+from driftwatch.daemon.stop import Stop
 from driftwatch.pipeline.station import Station
 from driftwatch.pipeline.ticks import with_ticks
 from driftwatch.records import NS, Block, Heartbeat, Tick, sample_time_ns
@@ -29,7 +29,7 @@ class Clock:
     """The two things a live run asks of time; a test gives its own."""
 
     monotonic: Callable[[], float] = time.monotonic  # seconds
-    wait: Callable[[Event, float], bool] = Event.wait  # until the event or so many seconds; True: the event came
+    wait: Callable[[Stop, float], bool] = Stop.wait  # until the stop or so many seconds; True: the stop came
 
 
 class LiveRun:
@@ -70,7 +70,7 @@ class LiveRun:
         self._began = self._beat_due = self._clock.monotonic()
         self._sample_came: float | None = None
 
-    def until(self, stop: Event) -> str:
+    def until(self, stop: Stop) -> str:
         """Run until the source ends or `stop` is set; store everything; return why it ended.
 
         Raises
@@ -89,7 +89,7 @@ class LiveRun:
         self._end(reason)
         return reason
 
-    def _feed(self, stop: Event) -> str:
+    def _feed(self, stop: Stop) -> str:
         for item in self._items():
             if not self._wait_for(item, stop):
                 return "stopped"
@@ -103,7 +103,7 @@ class LiveRun:
         frames = max(1, round(BLOCK_S * self._source.rate_hz * max(1.0, self._pace)))
         return with_ticks(self._source.blocks(frames), self._source.rate_hz)
 
-    def _wait_for(self, item: Block | Tick, stop: Event) -> bool:
+    def _wait_for(self, item: Block | Tick, stop: Stop) -> bool:
         """Wait until an item would have been there; False: stop was set."""
         if self._pace == 0:
             return not stop.is_set()

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
-from threading import Event
 from typing import Any
 
 import numpy as np
@@ -12,6 +11,7 @@ import pytest
 from driftwatch.config import Configuration, loads
 from driftwatch.daemon.keeper import Keeper
 from driftwatch.daemon.live import Clock, LiveRun
+from driftwatch.daemon.stop import Stop
 from driftwatch.pipeline.station import RunHeader, Station
 from driftwatch.records import NS, Block, Envelope, Heartbeat, Measurement, Origin, Run, TimeQuality, sample_time_ns
 from driftwatch.stream.source import SourceFailedError
@@ -28,7 +28,7 @@ class Stepped:
 
     now: float = 100.0
 
-    def wait(self, stop: Event, seconds: float) -> bool:
+    def wait(self, stop: Stop, seconds: float) -> bool:
         self.now += seconds
         return stop.is_set()
 
@@ -110,7 +110,7 @@ def make(config: Configuration) -> Make:
 @pytest.mark.parametrize(("pace", "took"), [(1.0, 3.0), (2.0, 1.5), (0.0, 0.0)])
 def test_the_source_sets_the_pace(make: Make, pace: float, took: float) -> None:
     clock, run, _, out = make(Source(3.0), pace=pace)
-    assert run.until(Event()) == "the source ended"
+    assert run.until(Stop()) == "the source ended"
     assert clock.now - 100.0 == pytest.approx(took)
     assert sum(isinstance(envelope.body, Measurement) for _, envelope in out) == 9
 
@@ -125,7 +125,7 @@ def test_a_record_is_committed_within_200_ms_of_when_it_was_made(make: Make, mon
         take(keeper, envelopes)
 
     monkeypatch.setattr(Keeper, "take", noting)
-    run.until(Event())
+    run.until(Stop())
     waited = [now - made[envelope.sequence] for now, envelope in out]
     assert len(waited) == 20  # nine measurements with their track points, begin and end
     assert max(waited) <= DUE_S + 1e-9
@@ -133,7 +133,7 @@ def test_a_record_is_committed_within_200_ms_of_when_it_was_made(make: Make, mon
 
 def test_a_heartbeat_comes_every_second_also_while_no_samples_come(make: Make) -> None:
     _, run, beats, _ = make(Source(3.0, gap_at_s=1.5))
-    run.until(Event())
+    run.until(Stop())
     times = [round(now - 100.0, 6) for now, _ in beats.beats]
     assert len(times) == 9
     # A look every 50 ms finds a beat that late at most; lateness does not add up.
@@ -143,8 +143,8 @@ def test_a_heartbeat_comes_every_second_also_while_no_samples_come(make: Make) -
     assert max(age for age in ages if age is not None) > 3.0
 
 
-def test_the_stop_event_ends_the_run_with_everything_told(make: Make) -> None:
-    stop = Event()
+def test_the_stop_ends_the_run_with_everything_told(make: Make) -> None:
+    stop = Stop()
     _, run, _, out = make(Source(60.0), chore=lambda now: stop.set() if now >= 102.0 else None)
     assert run.until(stop) == "stopped"
     bodies = [envelope.body for _, envelope in out]
@@ -157,7 +157,7 @@ def test_the_stop_event_ends_the_run_with_everything_told(make: Make) -> None:
 def test_a_source_that_fails_ends_the_run_with_what_it_gave(make: Make) -> None:
     _, run, _, out = make(Source(3.0, fails=True))
     with pytest.raises(SourceFailedError, match="pulled out"):
-        run.until(Event())
+        run.until(Stop())
     last = out[-1][1].body
     assert isinstance(last, Run)
     assert last.reason == "failed: the card was pulled out"
@@ -167,5 +167,5 @@ def test_a_source_that_fails_ends_the_run_with_what_it_gave(make: Make) -> None:
 def test_chores_are_done_about_once_a_second(make: Make) -> None:
     done: list[float] = []
     _, run, _, _ = make(Source(4.0), chore=done.append)
-    run.until(Event())
+    run.until(Stop())
     assert [round(now - 100.0) for now in done] == [0, 1, 2, 3, 4]
