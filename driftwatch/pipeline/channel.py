@@ -184,7 +184,7 @@ class ChannelLine:
         """Pass over samples that are no numbers, and say so."""
         first, end = self._position, self._position + count
         if self._unfinite.bad(first, end):
-            yield self._unfinite_record(Phase.BEGIN, first, ready=first)
+            yield self._unfinite_record(Phase.BEGIN, first, ready=first + 1)  # known once that sample is here
         self._zeros(count, "not_finite")
 
     def _unfinite_ends(self) -> Reading:

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import pytest
 from driftwatch.config import Configuration, loads
+from driftwatch.pipeline.channel import zoom_of
 from driftwatch.pipeline.station import RunHeader, Station
 from driftwatch.pipeline.ticks import with_ticks
 from driftwatch.records import (
@@ -175,6 +176,17 @@ def test_gaps_and_samples_that_are_no_numbers_do_not_depend_on_the_cut_either(ga
     """Once as long runs, once cut into blocks of one size."""
     whole, cut = _with_holes(gaps, SOURCE.length), _with_holes(gaps, sizes)
     assert whole == cut
+
+
+@pytest.mark.parametrize("kind", ["missing", "nan"])
+def test_a_fault_that_begins_just_when_a_window_is_known_has_its_place_after_it_in_any_cut(kind):
+    """Known is a window at the end of a block of the zoom; a cut there parts it from the fault."""
+    config = loads(CONFIG)
+    zoom = zoom_of(config.channel[0], [mode for mode in config.mode if mode.channel == "near"], RATE_HZ)
+    known = list(range(zoom.hop + zoom.edge, SOURCE.length, zoom.hop))
+    assert len(known) >= 4
+    for first in known:
+        assert _with_holes([(first, 50, kind)], first) == _with_holes([(first, 50, kind)], SOURCE.length)
 
 
 def _with_holes(gaps: list[tuple[int, int, str]], size: int) -> list[Envelope]:
