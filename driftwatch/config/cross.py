@@ -13,7 +13,7 @@ from driftwatch.config.errors import Problem
 from driftwatch.config.keys import Loc, place
 from driftwatch.config.models import ChannelConfig, Configuration
 from driftwatch.config.sources import SimulatedSourceConfig, SoundcardSourceConfig
-from driftwatch.config.values import is_number
+from driftwatch.config.values import composed, is_number
 
 Document = Mapping[str, Any]
 
@@ -63,8 +63,9 @@ def _tables(holder: Any, key: str) -> list[tuple[int, Document]]:
 
 
 def _text(table: Document, key: str) -> str | None:
+    """Return a text as the models keep names, None where there is none: equal looks are equal names."""
     value = table.get(key)
-    return value if isinstance(value, str) else None
+    return composed(value) if isinstance(value, str) else None
 
 
 def _whole(table: Document, key: str, default: int | None) -> int | None:
@@ -183,7 +184,8 @@ def _mode_problems(document: Document) -> Iterator[Problem]:
         wanted = mode.get("regimes")
         for name in wanted if isinstance(wanted, list) else []:
             if isinstance(name, str):
-                yield from _unknown_name(place(document, ("mode", index, "regimes")), name, regimes, "regime")
+                key = place(document, ("mode", index, "regimes"))
+                yield from _unknown_name(key, composed(name), regimes, "regime")
 
 
 def _rate_of_mode(document: Document, index: int, mode: Document, channel: str) -> Iterator[Problem]:

@@ -75,14 +75,18 @@ Flag = Annotated[bool, Field(strict=True)]
 _NAME = re.compile(r"(?:[^\W_]|[ .-]){1,64}")
 
 
+def composed(text: str) -> str:
+    """Return a text in its composed form, so that equal looks are equal names."""
+    return unicodedata.normalize("NFC", text)
+
+
 def _name(text: str) -> str:
-    """Return the name in its composed form, so that equal looks are equal names."""
-    composed = unicodedata.normalize("NFC", text)
-    if _NAME.fullmatch(composed) is None or composed != composed.strip():
+    name = composed(text)
+    if _NAME.fullmatch(name) is None or name != name.strip():
         raise refusal(
             "1 to 64 letters, digits, spaces, . or -, not beginning or ending with a space", "choose another name"
         )
-    return composed
+    return name
 
 
 Name = Annotated[str, Field(strict=True), AfterValidator(_name)]

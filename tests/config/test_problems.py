@@ -288,6 +288,16 @@ def test_a_name_used_twice_is_refused_without_regard_to_case(array: str, lines: 
     assert earlier in problem.expected
 
 
+def test_names_that_look_equal_are_equal_however_their_accents_are_written() -> None:
+    joined, apart = "driv\N{LATIN SMALL LETTER E WITH ACUTE}", "drive\N{COMBINING ACUTE ACCENT}"
+    text = 'schema = 1\n[[channel]]\nname = "{}"\n[[mode]]\nname = "m"\nchannel = "{}"\nsearch_hz = [8.0, 16.0]\n'
+    assert loads(text.format(joined, apart)).mode[0].channel == joined
+    with pytest.raises(ConfigError) as caught:
+        loads(text.format(joined, joined) + f'[[channel]]\nname = "{apart}"\n')
+    (problem,) = caught.value.problems
+    assert "a second time" in problem.came
+
+
 def test_the_same_mode_name_on_two_channels_is_allowed() -> None:
     loads(
         "".join(GOOD.values()) + '[[channel]]\nname = "b"\n[[mode]]\nname = "m"\nchannel = "b"\nsearch_hz = [1, 20]\n'
