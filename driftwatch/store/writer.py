@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sqlite3
 import time
 from functools import cache
 from pathlib import Path
@@ -170,10 +171,10 @@ class _Transaction:
         self._synchronous = synchronous
 
     def __enter__(self) -> Connection:
-        self._say("FULL" if self._synchronous else "NORMAL")
         try:
+            self._say("FULL" if self._synchronous else "NORMAL")
             self._begun = self._connection.begin()
-        except sa.exc.DBAPIError as error:
+        except (sa.exc.DBAPIError, sqlite3.Error) as error:
             raise commit_failed(self._path, error) from error
         return self._connection
 
@@ -201,7 +202,7 @@ def _prepared(path: Path) -> Connection:
         with connection.begin():
             migrate(connection, path)
         connection.connection.cursor().execute("PRAGMA journal_mode = WAL")
-    except sa.exc.DBAPIError as error:
+    except (sa.exc.DBAPIError, sqlite3.Error) as error:
         engine.dispose()
         raise unreachable(path, error) from error
     except StoreError:

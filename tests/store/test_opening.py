@@ -10,6 +10,7 @@ from pathlib import Path
 
 import pytest
 from driftwatch.records import Envelope
+from driftwatch.store import opening
 from driftwatch.store.errors import ForeignDatabaseError, OtherSchemaError, StoreError, StoreUnreachableError
 from driftwatch.store.location import database_path
 from driftwatch.store.queries import Reader
@@ -125,6 +126,22 @@ def test_a_database_that_may_only_be_read_is_read(powerless: Path, measurement: 
     _give_up_power(powerless)
     with Reader.open(path) as reader:
         assert list(reader.records("measurement")) == [measurement(1)]
+
+
+def test_a_database_that_a_reader_keeps_from_its_log_is_refused_with_the_remedy(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Write-ahead logging cannot begin while another program reads in the old way."""
+    path = tmp_path / "a.db"
+    Writer.open(path, "s").close()
+    monkeypatch.setattr(opening, "BUSY_MS", 50)
+    with closing(sqlite3.connect(path, isolation_level=None)) as reading:
+        reading.execute("PRAGMA journal_mode = DELETE")
+        reading.execute("BEGIN")
+        reading.execute("SELECT * FROM header").fetchall()
+        with pytest.raises(StoreUnreachableError, match="locked; another program holds the database"):
+            Writer.open(path, "s")
+    Writer.open(path, "s").close()
 
 
 @pytest.mark.parametrize("records", [2, 5000], ids=["in its schema", "in its rows"])
