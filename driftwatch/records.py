@@ -34,6 +34,9 @@ SCHEMA = 1
 NS = 1_000_000_000
 """Nanoseconds in a second."""
 
+Z95 = 1.959963984540054
+"""Half the width of the 95 % interval of a Gaussian, in standard deviations."""
+
 
 # ---------------------------------------------------------------------------------------------- words
 
@@ -535,7 +538,8 @@ def parse_time(text: str) -> int:
     Raises
     ------
     ValueError
-        When the text is no RFC 3339 time with a zone, saying what was expected.
+        When the text is no RFC 3339 time with a zone, or its nanoseconds need more than 64 bits, saying what was
+        expected.
     """
     found = _RFC3339.fullmatch(text.strip())
     if found is None:
@@ -546,7 +550,10 @@ def parse_time(text: str) -> int:
     except ValueError as error:
         raise ValueError(f"{text!r} is not a time: {error}") from None
     since = moment - _EPOCH
-    return (since.days * 86_400 + since.seconds) * NS + int((fraction or "").ljust(9, "0"))
+    time_ns = (since.days * 86_400 + since.seconds) * NS + int((fraction or "").ljust(9, "0"))
+    if not -(2**63) <= time_ns < 2**63:
+        raise ValueError(f"{text!r} is not a time of our day; expected one between the years 1678 and 2262")
+    return time_ns
 
 
 def sample_time_ns(start_ns: int, sample: int, rate_hz: int) -> int:

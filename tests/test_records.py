@@ -310,6 +310,10 @@ def test_times_as_people_and_programs_write_them_are_read(text: str, time_ns: in
         "２０２６-03-01T06:14:56Z",  # noqa: RUF001 - digits of another script are meant
         "2026-03-01T06:14:56.\u0665Z",  # a digit of another script
         "1772345696",
+        "9999-01-01T00:00:00Z",  # no database keeps so many nanoseconds
+        "0001-01-01T00:00:00Z",
+        "2262-04-11T23:47:16.854775808Z",
+        "0001-01-01T00:00:00+01:00",
     ],
 )
 def test_what_is_no_time_is_refused_naming_what_came(text: str) -> None:

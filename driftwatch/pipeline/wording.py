@@ -7,14 +7,11 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from driftwatch.records import Measurement, Method
+from driftwatch.records import Z95, Measurement, Method
 
 if TYPE_CHECKING:
     from driftwatch.measure.ambient import AmbientFit
     from driftwatch.measure.ringdown import RingdownFit
-
-Z95 = 1.959963984540054
-"""Half the width of the 95 % interval of a Gaussian, in standard deviations."""
 
 
 @dataclass(frozen=True, slots=True)

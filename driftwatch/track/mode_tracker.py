@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from driftwatch.records import NS, Measurement, Method, Track, TrackStatus
+from driftwatch.records import NS, Z95, Measurement, Method, Track, TrackStatus
 from driftwatch.track import filter as kalman
 from driftwatch.track.consistency import Cusum, Drifted
 from driftwatch.track.reading import Reading, agree, new_part, reading_of, share_no_sample, with_var_q
@@ -23,7 +23,6 @@ NOT_FOUND = frozenset({"no_mode", "misfit", "band_edge", "too_wide", "not_conver
 
 DAY_S = 86_400.0
 _SMOOTHING = 0.1  # share of the newest reading in what is usual
-_Z95 = 1.959963984540054
 
 
 class ModeTracker:
@@ -163,7 +162,7 @@ class ModeTracker:
         if kalman.innovation(now, reading).distance <= GATE:
             self._accept(now, reading)
         elif not self._confirm(reading):
-            self._doubt = (reading.ln_f - now.ln_f) / _Z95, (reading.ln_q - now.ln_q) / _Z95
+            self._doubt = (reading.ln_f - now.ln_f) / Z95, (reading.ln_q - now.ln_q) / Z95
             self._refused_since_ns = reading.end_ns if self._refused_since_ns is None else self._refused_since_ns
             if reading.end_ns - self._refused_since_ns >= self._pending_ns(reading):
                 self._hold("misfit", reading.end_ns)
@@ -305,7 +304,7 @@ class ModeTracker:
         f, q = math.exp(x.ln_f), math.exp(x.ln_q)
         std_f = math.sqrt(x.p_ff + self._doubt[0] ** 2)
         std_q = math.sqrt(x.p_qq + self._doubt[1] ** 2 + self._shared_var_q)
-        reach = math.exp(_Z95 * std_q)
+        reach = math.exp(Z95 * std_q)
         correlation = x.p_fq / (std_f * std_q)
         rate, rate_std = x.rate * DAY_S, math.sqrt(x.p_rr) * DAY_S
         return self._point(f, f * std_f, q, q * std_q, q / reach, q * reach, correlation, rate, rate_std)
