@@ -8,7 +8,8 @@ import click
 
 from driftwatch.cli.figures import NONE, known_with_std, moment, with_interval
 from driftwatch.cli.looking import opened_store, print_lines, print_table, quiet_pipe, store_options
-from driftwatch.records import Envelope, Measurement, Method, Track, parse_time
+from driftwatch.cli.shared import told_time
+from driftwatch.records import Envelope, Measurement, Method, Track
 
 if TYPE_CHECKING:
     from collections.abc import Iterable
@@ -19,14 +20,6 @@ SHOWN = 40
 """How many rows a table shows where no limit is given."""
 
 
-def _moment(ctx: click.Context, param: click.Parameter, text: str | None) -> int | None:
-    """Return the nanoseconds of a time on the command line."""
-    try:
-        return None if text is None else parse_time(text)
-    except ValueError as error:
-        raise click.BadParameter(str(error), ctx, param) from None
-
-
 @click.command("readings")
 @store_options
 @click.option("--run", "run", metavar="UUID", help="Only this run: its UUID, the begin of it, or `last`.")
@@ -35,8 +28,8 @@ def _moment(ctx: click.Context, param: click.Parameter, text: str | None) -> int
 @click.option(
     "--method", type=click.Choice([str(method) for method in Method]), help="Only measurements by this method."
 )
-@click.option("--since", callback=_moment, metavar="TIME", help="From this moment on, such as 2026-03-01T06:00:00Z.")
-@click.option("--until", callback=_moment, metavar="TIME", help="Before this moment.")
+@click.option("--since", callback=told_time, metavar="TIME", help="From this moment on, such as 2026-03-01T06:00:00Z.")
+@click.option("--until", callback=told_time, metavar="TIME", help="Before this moment.")
 @click.option("--limit", type=click.IntRange(min=1), help=f"The latest so many; left out: {SHOWN}, or all with --json.")
 @click.option("--tracks", is_flag=True, help="Track points instead of measurements.")
 @click.option("--json", "as_json", is_flag=True, help="One JSON object a line, as on the bus.")

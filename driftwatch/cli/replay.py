@@ -17,33 +17,26 @@ from driftwatch.cli.shared import (
     load_served,
     nothing_started,
     print_json,
+    refuse,
     refuse_misfit,
     stopped_by_signal,
+    told_time,
     typed,
     work_failed,
 )
 from driftwatch.cli.view import RunView, folded
 
 if TYPE_CHECKING:
-    from driftwatch.config import Configuration
+    from driftwatch.config import Configuration, SourceConfig
     from driftwatch.stream.recording import RecordingSource
-
-
-def _time(_context: click.Context, _parameter: click.Parameter, value: str | None) -> int | None:
-    from driftwatch.records import parse_time
-
-    if value is None:
-        return None
-    try:
-        return parse_time(value)
-    except ValueError as error:
-        raise click.BadParameter(str(error)) from None
 
 
 @click.command("replay", short_help="Send recordings through the same pipeline, as fast as it can.")
 @click.argument("config", type=click.Path(path_type=Path))
 @click.argument("recordings", metavar="REC...", nargs=-1, required=True, type=click.Path(path_type=Path))
-@click.option("--start", metavar="TIME", callback=_time, help="When the first sample was taken, RFC 3339 with a zone.")
+@click.option(
+    "--start", metavar="TIME", callback=told_time, help="When the first sample was taken, RFC 3339 with a zone."
+)
 @click.option("--store", metavar="URL", help="Database to write; left out: a new one named after the run.")
 @click.option("--publish", metavar="ENDPOINT", help="Publish on the bus as well, such as tcp://127.0.0.1:5571.")
 @click.option("--json", "as_json", is_flag=True, help="Print every record as one JSON object a line.")
@@ -71,17 +64,30 @@ def _opened(configuration: Configuration, recordings: tuple[Path, ...], start_ns
     """Return the checked recordings, or leave with everything that is wrong with them."""
     from driftwatch.stream.recording import open_recordings
 
-    only = configuration.source[0] if len(configuration.source) == 1 else None
+    stood_for = _stood_for(configuration)
     with nothing_started():
         source = open_recordings(
             recordings,
             start_ns,
-            only.name if only else "recording",
-            rate_hz=getattr(only, "rate_hz", None),
+            stood_for.name if stood_for else "recording",
+            rate_hz=getattr(stood_for, "rate_hz", None),
             least_inputs=max(channel.input for channel in configuration.channel),
         )
     refuse_misfit(configuration, source.rate_hz, source.inputs)
     return source
+
+
+def _stood_for(configuration: Configuration) -> SourceConfig | None:
+    """Return the source in whose place the recordings are read, None in a file without; leave where that is open."""
+    sources = {one.name: one for channel in configuration.channel if (one := configuration.source_of(channel))}
+    if len(sources) > 1:
+        listed = ", ".join(f'"{name}"' for name in sources)
+        problem = (
+            f"source: got channels of {len(sources)}, {listed}; expected those of one, in whose place the recordings "
+            "are read; replay with a file that has only its channels and modes"
+        )
+        refuse([problem])
+    return next(iter(sources.values()), None)
 
 
 def _replay(
@@ -105,11 +111,11 @@ def _replay(
         output = Output(print_json if as_json else view.show, stop)
         bar = opened.enter_context(progress(source.length, source.rate_hz, shown=not (as_json and sys.stdout.isatty())))
         with work_failed():
-            replay(source, station, Keeper(writer, publisher, output), bar, stop.is_set)
+            ended = replay(source, station, Keeper(writer, publisher, output), bar, stop.is_set)
     output.check()
     if not as_json:
         _close(view, store)
-    if stop.is_set() and not output.is_lost:
+    if not ended and not output.is_lost:
         done = station.samples / source.rate_hz
         raise click.ClickException(
             f"interrupted after {done:.1f} s of signal; what was read is stored in {writer.path}"

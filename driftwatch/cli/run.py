@@ -17,7 +17,6 @@ from driftwatch.cli.shared import (
     load_served,
     nothing_started,
     print_json,
-    refuse,
     refuse_misfit,
     stopped_by_signal,
     typed,
@@ -65,9 +64,7 @@ def _opened(configuration: Configuration) -> tuple[Source, float]:
     from driftwatch.stream.recording import open_recordings
     from driftwatch.stream.simulated import SimulatedSource
 
-    if len(configuration.source) > 1:
-        refuse([f"source: got {len(configuration.source)}; expected one, more are not served by this version"])
-    chosen = configuration.source[0]
+    (chosen,) = configuration.source  # more are refused as not served
     if isinstance(chosen, SimulatedSourceConfig):
         return SimulatedSource(chosen, time.time_ns(), TimeQuality.FREE), chosen.pace
     if not isinstance(chosen, RecordingSourceConfig):
@@ -119,11 +116,23 @@ def _run(
 
 @contextmanager
 def _folder_of(url: str) -> Iterator[None]:
-    """Make the folder of the configuration's own store; take it away again if nothing came into it."""
-    folder = Path(url.removeprefix("sqlite:///")).parent
+    """Make the folder of the configuration's own store; take it away again if nothing came into it.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When it cannot be made.
+    """
+    from driftwatch.store.errors import unreachable
+
+    path = Path(url.removeprefix("sqlite:///"))
+    folder = path.parent
     missing = not folder.exists() and folder.parent.is_dir()
     if missing:
-        folder.mkdir()
+        try:
+            folder.mkdir()
+        except OSError as error:
+            raise unreachable(path, error) from None
     try:
         yield
     finally:

@@ -39,6 +39,16 @@ def _program() -> str:
     return str(started.relative_to(here) if started.is_relative_to(here) else started)
 
 
+def told_time(context: click.Context, parameter: click.Parameter, text: str | None) -> int | None:
+    """Return the UTC nanoseconds of a time on the command line; click's callback of an option."""
+    from driftwatch.records import parse_time
+
+    try:
+        return None if text is None else parse_time(text)
+    except ValueError as error:
+        raise click.BadParameter(str(error), context, parameter) from None
+
+
 def refuse(lines: Sequence[object]) -> NoReturn:
     """Print what is wrong, a line each, and leave with exit status 2: nothing was started."""
     for line in lines:

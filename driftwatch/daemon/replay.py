@@ -29,8 +29,8 @@ def replay(
     keeper: Keeper,
     progress: Callable[[int], None] = lambda _: None,
     stopped: Callable[[], bool] = lambda: False,
-) -> None:
-    """Send a source through a station to the end, and commit everything.
+) -> bool:
+    """Send a source through a station to the end, and commit everything; return whether it was read to its end.
 
     Parameters
     ----------
@@ -55,8 +55,9 @@ def replay(
         keeper.take(station.finish(f"failed: {error}"))
         keeper.flush()
         raise
-    keeper.take(station.finish(ended))
+    keeper.take(station.finish("the recordings ended" if ended else "interrupted"))
     keeper.flush()
+    return ended
 
 
 def _feed(
@@ -65,12 +66,12 @@ def _feed(
     keeper: Keeper,
     progress: Callable[[int], None],
     stopped: Callable[[], bool],
-) -> str:
+) -> bool:
     for item in with_ticks(source.blocks(block_frames(source.rate_hz, source.inputs)), source.rate_hz):
         if stopped():
-            return "interrupted"
+            return False
         keeper.take(station.feed(item))
         keeper.flush_due(time.monotonic())
         if isinstance(item, Block):
             progress(item.first_sample + len(item.samples))
-    return "the recordings ended"
+    return True

@@ -268,9 +268,28 @@ def test_what_is_no_place_for_rows_is_refused_and_left_as_it_is(
 
 def test_the_configurations_own_store_is_refused_alike_and_no_folder_stays(bench: Any, folder: Path) -> None:
     text = (folder / bench.config()).read_text()
-    for url, says in (("good.wav/rows.db", "Not a directory"), ("none/none/rows.db", "No such file")):
+    for url, says in (
+        ("good.wav/rows.db", "Not a directory"),
+        ("none/none/rows.db", "No such file"),
+        ("/proc/none/rows.db", "No such file"),  # where nobody can make a folder
+    ):
         (folder / "bench.toml").write_text(text.replace("state/bench.db", url))
         refused(bench, "run", "bench.toml", says=(f"{url}: the database cannot be opened: {says}",))
+
+
+def test_recordings_that_could_stand_for_several_sources_are_refused(bench: Any, folder: Path) -> None:
+    """Their channels would be fed by none of them: a replay that measures nothing would look like one of silence."""
+    text = (folder / "tiny.toml").read_text()
+    sources = "".join(f'[[source]]\nname = "{name}"\nkind = "soundcard"\n' for name in ("left", "right"))
+    both = text.replace("[[channel]]\n", f'{sources}[[channel]]\nsource = "left"\n', 1)
+    other = both.replace("[[mode]]", '[[channel]]\nname = "free end"\nsource = "right"\n[[mode]]', 1)
+    (folder / "two.toml").write_text(other)
+    says = ('source: got channels of 2, "left", "right"; expected those of one',)
+    refused(bench, "replay", "two.toml", "good.wav", says=says)
+    (folder / "one.toml").write_text(both.replace('"soundcard"', '"recording"\npath = "none.wav"'))
+    done = bench.run("replay", "one.toml", "good.wav", "--json")
+    assert done.returncode == 0, done.stderr
+    assert '"kind":"measurement"' in done.stdout
 
 
 @pytest.fixture
