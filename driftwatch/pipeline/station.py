@@ -264,7 +264,7 @@ class Station:
 def _lines(config: Configuration, source: Source, only: bool) -> Iterator[ChannelLine]:
     """Yield the channels that a source feeds and that have modes, in file order."""
     for channel in config.channel:
-        modes = [mode for mode in config.mode if mode.channel.casefold() == channel.name.casefold()]
+        modes = [mode for mode in config.mode if mode.channel == channel.name]
         if modes and _feeds(source, channel, only):
             yield ChannelLine(channel, modes, source.rate_hz, source.start_ns)
 
