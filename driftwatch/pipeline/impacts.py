@@ -168,13 +168,13 @@ class Impacts:
         return runs
 
     def _power_before(self, baseband: SampleBuffer[np.complex64], place: float) -> float:
-        """Return the mean power over a window's length before an onset, or before the impact that still rings then."""
+        """Return the mean power over a window before an onset, or before the last impact if that has hardly ended."""
         end = math.floor(place) - 1
         first = max(self._begin, end - self._band.window)
         earlier = self.disturbed(first, end) if end > first else []
-        if earlier and self._impacts[-1].settled is None:
-            return self._impacts[-1].before
         first = max([first, *(stretch[1] for stretch in earlier)])
+        if earlier and (self._impacts[-1].settled is None or end - first < self._chunk):
+            return self._impacts[-1].before
         if end <= first:
             return 0.0
         return float(np.mean(np.square(np.abs(baseband.view(first, end)))))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import itertools
+from typing import Any
 
 import numpy as np
 import pytest
@@ -10,6 +11,7 @@ from driftwatch.config import loads
 from driftwatch.measure import ringdown
 from driftwatch.measure.decay_spread import Quiet
 from driftwatch.pipeline.channel import ChannelLine
+from driftwatch.pipeline.impacts import Impact, Impacts
 from driftwatch.stream.resonator import free_decay
 from numpy.typing import NDArray
 
@@ -31,15 +33,15 @@ GAP_S = (6.2, 6.4)
 RMS = 0.01  # of white noise at the full rate
 
 
-def samples() -> NDArray[np.float32]:
+def samples(impacts_s: tuple[float, ...] = IMPACTS_S) -> NDArray[np.float32]:
     count = 10 * RATE_HZ
     found = np.random.default_rng(0).normal(0.0, RMS, count)
-    for at in IMPACTS_S:
+    for at in impacts_s:
         found += free_decay(count, RATE_HZ, 620.0, 50.0, 1.0, 0.3, at * RATE_HZ)
     return found.astype(np.float32)
 
 
-def quiets(monkeypatch: pytest.MonkeyPatch, size: int) -> list[Quiet]:
+def quiets(monkeypatch: pytest.MonkeyPatch, size: int, impacts_s: tuple[float, ...] = IMPACTS_S) -> list[Quiet]:
     """Feed the samples in blocks of one size, without those of the gap; return the quiet that each fit was given."""
     found: list[Quiet] = []
     fit = ringdown.fit
@@ -52,7 +54,7 @@ def quiets(monkeypatch: pytest.MonkeyPatch, size: int) -> list[Quiet]:
     config = loads(CONFIG)
     line = ChannelLine(config.channel[0], config.mode, RATE_HZ, 0)
     gap = tuple(round(at * RATE_HZ) for at in GAP_S)
-    whole = samples()
+    whole = samples(impacts_s)
     with monkeypatch.context() as patch:
         patch.setattr(ringdown, "fit", noted)
         for begin, end in ((0, gap[0]), (gap[1], len(whole))):
@@ -88,3 +90,22 @@ def test_quiet_does_not_depend_on_how_the_samples_came(monkeypatch: pytest.Monke
     assert len(whole) == len(cut) == len(IMPACTS_S)
     for one, other in zip(whole, cut, strict=True):
         assert np.array_equal(one.stream, other.stream)
+
+
+@pytest.mark.parametrize("delay_s", [0.195, 0.2, 0.205])
+def test_a_blow_on_a_decay_s_very_end_settles_at_the_level_before_both(
+    monkeypatch: pytest.MonkeyPatch, delay_s: float
+) -> None:
+    """The few samples between them are no level to come back to: the first one's serves, that of the noise."""
+    levels: list[float] = []
+    new = Impacts._new
+
+    def noted(self: Impacts, *arguments: Any) -> Impact:
+        impact = new(self, *arguments)
+        levels.append(impact.before)
+        return impact
+
+    monkeypatch.setattr(Impacts, "_new", noted)
+    quiets(monkeypatch, 10 * RATE_HZ, (3.0, 3.0 + delay_s, 9.0))
+    assert len(levels) == 4  # the first is the begin of the samples
+    assert levels[2] == levels[1]
