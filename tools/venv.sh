@@ -14,12 +14,12 @@ find_python() {
     return 1
 }
 
-# make_venv EXTRAS: .venv with driftwatch and the named extras ("" or "[test]"); does nothing when it is there and
-# the requirements are unchanged, so a second start needs no network
+# make_venv EXTRAS: .venv with driftwatch and the named extras ("" or "[test]"); does nothing when it is there, the
+# requirements are unchanged and the folder was not moved, so a second start needs no network
 make_venv() {
     local extras=$1 python stamp wanted
     python=$(find_python) || return 1
-    wanted="$(cksum <pyproject.toml) $extras $("$python" -c 'import sys; print(sys.version)')"
+    wanted="$(cksum <pyproject.toml) $PWD $("$python" -c 'import sys; print(sys.version)')"
     stamp=".venv/driftwatch-installed${extras//[^a-z]/-}"
     if [ -f "$stamp" ] && [ "$(cat "$stamp")" = "$wanted" ]; then
         return 0
@@ -37,6 +37,7 @@ make_venv() {
         return 1
     fi
     printf '%s' "$wanted" >"$stamp"
+    printf '%s' "$wanted" >.venv/driftwatch-installed # the extras only add to it
 }
 
 # system_package NAME WHY: installs a Debian package where that is allowed, else names the command; never fails
