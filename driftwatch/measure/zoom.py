@@ -45,6 +45,7 @@ _EDGE_SHARE = 0.35  # an edge's width over the search band's, at least
 _EDGE_OF_WINDOW = 0.125  # the edge delay over the window's length, at most
 _HOP_SHARE = 0.75  # of a block that is new, at least
 _ODD_COST = 0.07  # what each doubling of the odd part of a length adds to its FFT's cost
+_MOST_SHAPES = 1_000_000  # of blocks that are compared
 _HOP_S = 1.0  # a hop is about this long at least: longer costs less, shorter answers sooner
 
 
@@ -244,11 +245,16 @@ def _block_cost(hop: int, edge: int) -> float:
 
 def _block_shape(rate_hz: int, edge: int, unit: int) -> tuple[int, int]:
     """Return hop and edge, both multiples of `unit`, for the block of the least cost about one second long."""
-    shortest = _ceil_to(max(_HOP_S * rate_hz, 2 * edge * _HOP_SHARE / (1 - _HOP_SHARE)), unit)
+    least = max(_HOP_S * rate_hz, 2 * edge * _HOP_SHARE / (1 - _HOP_SHARE))
+    step = unit
+    while 0.3 * least / step * 0.5 * edge / step > _MOST_SHAPES:  # a long edge need not be cut so fine
+        step *= 2
+    edge = _ceil_to(edge, step)
+    shortest = _ceil_to(least, step)
     shapes = [
         (hop, edge + more)
-        for hop in range(shortest, int(1.3 * shortest) + unit + 1, unit)
-        for more in range(0, edge // 2 + unit, unit)
+        for hop in range(shortest, int(1.3 * shortest) + step + 1, step)
+        for more in range(0, edge // 2 + step, step)
         if _smooth(hop + 2 * (edge + more)) and hop % 2 == 0
     ]
     if not shapes:

@@ -206,13 +206,21 @@ def _overlaps(config: Configuration, channel: ChannelConfig) -> Iterator[str]:
 
 
 def _late_remark(mode: ModeConfig, outlook: ModeOutlook) -> Iterator[str]:
-    """A band far narrower than the rate needs long blocks: they cost time and memory."""
-    if outlook.latency_s is not None and outlook.latency_s > mode.window_s:
-        yield (
-            f'mode "{mode.name}" of "{mode.channel}": a search band of {mode.search_hz.width:g} Hz is so narrow for '
-            f"{outlook.rate_hz} samples a second that figures come {outlook.latency_s:.0f} s late; widen it or sample "
-            "slower"
-        )
+    """A band far narrower than the rate, or with no room beside it, needs long blocks: they cost time and memory."""
+    if outlook.latency_s is None or outlook.rate_hz is None or outlook.latency_s <= mode.window_s:
+        return
+    search, half_hz = mode.search_hz, outlook.rate_hz / 2
+    below, above = search.low / 2, half_hz - search.high  # room for the band's edges
+    if min(below, above) > search.width / 3:
+        cause = f"a search band of {search.width:g} Hz is so narrow for {outlook.rate_hz} samples a second"
+        remedy = "widen it or sample slower"
+    elif below < above:
+        cause, remedy = "search_hz begins so near 0 Hz", "raise its lower end"
+    else:
+        cause = f"search_hz ends so near half the rate, {half_hz:g} Hz,"
+        remedy = "lower its upper end or sample faster"
+    where = f'mode "{mode.name}" of "{mode.channel}"'
+    yield f"{where}: {cause} that figures come {outlook.latency_s:.0f} s late; {remedy}"
 
 
 def _band_remarks(mode: ModeConfig) -> Iterator[str]:

@@ -131,3 +131,16 @@ def test_a_search_band_too_narrow_for_the_rate_is_said_to_make_figures_late() ->
     text = text.replace("rate_hz = 8192", "rate_hz = 48000").replace("window_s = 4.0\nstep_s = 1.0", "window_s = 64.0")
     late, _ = remarks(loads(text))
     assert "a search band of 0.5 Hz is so narrow for 48000 samples a second that figures come" in late
+
+
+@pytest.mark.parametrize(
+    ("search", "words"),
+    [
+        ("[820, 4095.7]", "search_hz ends so near half the rate, 4096 Hz, that figures come"),
+        ("[0.2, 980]", "search_hz begins so near 0 Hz that figures come"),
+    ],
+)
+def test_a_search_band_without_room_beside_it_is_said_to_make_figures_late(search: str, words: str) -> None:
+    text = BASE.split("[[mode.band]]")[0].replace("[820, 980]", search)
+    late, _ = remarks(loads(text))
+    assert words in late
