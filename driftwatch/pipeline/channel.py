@@ -135,6 +135,7 @@ class ChannelLine:
         ]
         keep = min(self._block * zoom.hop - zoom.edge, *(line.keeps_from for line in self._lines))
         self._raw.forget(keep)
+        self._raw.give_back()  # so that a block and the next one are never held at a time
         self._missing.forget(keep - self._longest)  # impacts look further back for what is quiet
         return readings
 
@@ -195,12 +196,13 @@ class ChannelLine:
 
     def _unfinite_record(self, phase: Phase, at: int, ready: int) -> Reading:
         first = self._unfinite.first or 0
+        since_ns = sample_time_ns(self._start_ns, first, self._rate_hz)
         health = Health(
             channel=self.name,
             fault=Fault.NOT_FINITE,
             phase=phase,
-            incident=str(uuid.uuid5(uuid.NAMESPACE_URL, f"{self.name}/not_finite/{first}")),
-            since_ns=sample_time_ns(self._start_ns, first, self._rate_hz),
+            incident=str(uuid.uuid5(uuid.NAMESPACE_URL, f"{self.name}/not_finite/{since_ns}")),
+            since_ns=since_ns,
             seconds=(at - first) / self._rate_hz,
             first_sample=first,
             lost_samples=0 if phase is Phase.BEGIN else self._unfinite.lost,

@@ -174,7 +174,7 @@ class Station:
             yield Reading(block.first_sample, block.time_ns, None)
         rate_hz = self._rate(block)
         since_ns = block.time_ns - sample_time_ns(0, lost, rate_hz)
-        incident = str(uuid.uuid5(uuid.NAMESPACE_URL, f"{self.header.station}/{block.source}/gap/{expected}"))
+        incident = str(uuid.uuid5(uuid.NAMESPACE_URL, f"{self.header.station}/{block.source}/gap/{since_ns}"))
         for phase, time_ns, missing in ((Phase.BEGIN, since_ns, 0), (Phase.END, block.time_ns, lost)):
             health = Health(
                 channel=None,

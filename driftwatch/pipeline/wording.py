@@ -42,8 +42,7 @@ def ambient_bodies(
     subject: Subject, extents: list[Extent], fit: AmbientFit, also: list[tuple[str, ...]]
 ) -> Iterator[Measurement]:
     """Yield the measurement of each row of a fit; `also` are reasons that do not make it unusable."""
-    columns = zip(
-        extents,
+    figures = zip(
         fit.frequency_hz.tolist(),
         fit.ln_frequency_std.tolist(),
         fit.ln_q.tolist(),
@@ -52,35 +51,41 @@ def ambient_bodies(
         fit.level.tolist(),
         fit.snr_db.tolist(),
         fit.fit_p.tolist(),
-        fit.reasons,
-        also,
         strict=True,
     )
-    for extent, frequency_hz, std_f, ln_q, std_q, correlation, level, snr_db, fit_p, reasons, also_row in columns:
-        usable = not reasons
-        q = math.exp(ln_q) if usable else math.nan
-        yield Measurement(
-            channel=subject.channel,
-            mode=subject.mode,
-            method=Method.AMBIENT,
-            regime=None,
-            window_s=extent.samples / subject.rate_hz,
-            first_sample=extent.first_sample,
-            samples=extent.samples,
-            frequency_hz=frequency_hz if usable else None,
-            frequency_std_hz=frequency_hz * std_f if usable else None,
-            q=q if usable else None,
-            q_std=q * std_q if usable else None,
-            q_low=q * math.exp(-Z95 * std_q) if usable else None,
-            q_high=q * math.exp(Z95 * std_q) if usable else None,
-            frequency_q_correlation=correlation if usable else None,
-            level=known(level * subject.scale),
-            level_unit=subject.unit,
-            snr_db=known(snr_db),
-            fit_p=known(fit_p),
-            usable=usable,
-            reasons=reasons + also_row,
-        )
+    for extent, row, reasons, also_row in zip(extents, figures, fit.reasons, also, strict=True):
+        yield _ambient_body(subject, extent, row, reasons, also_row)
+
+
+def _ambient_body(
+    subject: Subject, extent: Extent, figures: tuple[float, ...], reasons: tuple[str, ...], also: tuple[str, ...]
+) -> Measurement:
+    """Return the measurement of one row: its figures are fn, std of ln fn, ln q and its std, ... as in the fit."""
+    frequency_hz, std_f, ln_q, std_q, correlation, level, snr_db, fit_p = figures
+    usable = not reasons
+    q = math.exp(ln_q) if usable else math.nan
+    return Measurement(
+        channel=subject.channel,
+        mode=subject.mode,
+        method=Method.AMBIENT,
+        regime=None,
+        window_s=extent.samples / subject.rate_hz,
+        first_sample=extent.first_sample,
+        samples=extent.samples,
+        frequency_hz=frequency_hz if usable else None,
+        frequency_std_hz=frequency_hz * std_f if usable else None,
+        q=q if usable else None,
+        q_std=q * std_q if usable else None,
+        q_low=q * math.exp(-Z95 * std_q) if usable else None,
+        q_high=q * math.exp(Z95 * std_q) if usable else None,
+        frequency_q_correlation=correlation if usable else None,
+        level=known(level * subject.scale),
+        level_unit=subject.unit,
+        snr_db=known(snr_db),
+        fit_p=known(fit_p),
+        usable=usable,
+        reasons=reasons + also,
+    )
 
 
 def ringdown_body(subject: Subject, extent: Extent, fit: RingdownFit) -> Measurement:

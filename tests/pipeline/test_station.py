@@ -265,6 +265,22 @@ def test_a_gap_is_one_incident_and_spoils_only_the_windows_that_touch_it():
             assert (body.reasons == ("gap",)) == touches
 
 
+def test_incidents_of_one_place_at_two_times_are_two():
+    """A run of tomorrow that misses the same samples of its own has an incident of its own."""
+    found = []
+    for start_ns in (START_NS, START_NS + 86_400 * NS):
+        samples = SOURCE.samples.copy()
+        samples[5_000:5_010, 0] = np.nan
+        source = replace(SOURCE, samples=samples, start_ns=start_ns)
+        station = station_for(source)
+        blocks = (source.block(0, 20_000), source.block(26_000, source.length))
+        moved = (replace(block, time_ns=sample_time_ns(start_ns, block.first_sample, RATE_HZ)) for block in blocks)
+        records = [record for block in moved for record in station.feed(block)]
+        found += [body.incident for body in bodies(records, Health)]
+    assert len(found) == 8
+    assert len(set(found)) == 4
+
+
 def test_samples_that_are_no_numbers_touch_only_their_own_channel():
     records = _with_holes([(4 * RATE_HZ, 10, "nan")], SOURCE.length)
     begin, end = (body for body in bodies(records, Health) if body.fault is Fault.NOT_FINITE)
