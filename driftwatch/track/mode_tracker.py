@@ -299,7 +299,7 @@ class ModeTracker:
 
     def _track(self, time_ns: int) -> Track:
         if self._state is None or self._status is TrackStatus.SEARCHING:
-            return self._point(None, None, None, None, None, None, None, None, None)
+            return self._point()
         x = self._carried(self._state, time_ns)
         f, q = math.exp(x.ln_f), math.exp(x.ln_q)
         std_f = math.sqrt(x.p_ff + self._doubt[0] ** 2)
@@ -311,15 +311,15 @@ class ModeTracker:
 
     def _point(
         self,
-        frequency_hz: float | None,
-        frequency_std_hz: float | None,
-        q: float | None,
-        q_std: float | None,
-        q_low: float | None,
-        q_high: float | None,
-        correlation: float | None,
-        rate: float | None,
-        rate_std: float | None,
+        frequency_hz: float | None = None,
+        frequency_std_hz: float | None = None,
+        q: float | None = None,
+        q_std: float | None = None,
+        q_low: float | None = None,
+        q_high: float | None = None,
+        correlation: float | None = None,
+        rate: float | None = None,
+        rate_std: float | None = None,
     ) -> Track:
         return Track(
             channel=self._channel,
