@@ -64,8 +64,9 @@ class Publisher:
 
     def __init__(self, endpoint: str, context: zmq.Context[zmq.Socket[bytes]] | None = None) -> None:
         checked_endpoint(endpoint)
-        self._owned = zmq.Context() if context is None else None
-        self._socket = (context or self._owned or zmq.Context()).socket(zmq.PUB)
+        used = zmq.Context() if context is None else context
+        self._owned = used if context is None else None
+        self._socket = used.socket(zmq.PUB)
         self._socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
         self._socket.setsockopt(zmq.LINGER, LINGER_MS)
         self._socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
