@@ -74,4 +74,5 @@ def _feed(
         keeper.flush_due(time.monotonic())
         if isinstance(item, Block):
             progress(item.first_sample + len(item.samples))
+        del item  # a block may be large: the next one is read only now
     return True

@@ -16,8 +16,8 @@ BORROWED = 1 << 16
 class SampleBuffer(Generic[_Scalar]):
     """A stretch of a stream that grows at its end and is forgotten from its begin.
 
-    What comes in small pieces is copied together. A large array is borrowed until the next one comes; of the usual
-    one only its end is then still wanted, and copied.
+    What comes in small pieces is copied together. A large array is borrowed until it is given back; of the usual one
+    only its end is then still wanted, and copied.
 
     Parameters
     ----------
@@ -51,7 +51,7 @@ class SampleBuffer(Generic[_Scalar]):
 
     def append(self, samples: NDArray[_Scalar]) -> None:
         """Add samples behind the last one; they must not change any more."""
-        self._return_loan()
+        self.give_back()
         if len(samples) >= BORROWED and samples.flags.c_contiguous:
             self._loan = samples
         else:
@@ -59,11 +59,21 @@ class SampleBuffer(Generic[_Scalar]):
 
     def append_zeros(self, count: int) -> None:
         """Add `count` zeros behind the last sample."""
-        self._return_loan()
+        self.give_back()
         self._room(count)[:] = 0
 
+    def give_back(self) -> None:
+        """Copy what is still wanted of what is borrowed, and let go of it."""
+        loan, begin = self._loan, self._own_end
+        self._loan = self._own[:0]
+        if self._keep > begin and len(loan):  # nothing of the own is wanted any more
+            loan = loan[self._keep - begin :]
+            self._origin = self._own_end = self._keep
+        if len(loan):
+            self._room(len(loan))[:] = loan
+
     def view(self, first: int, end: int) -> NDArray[_Scalar]:
-        """Return the samples from index `first` to before `end`, not to be written to: valid until the next `append`.
+        """Return the samples from index `first` to before `end`, not to be written to: valid until the next change.
 
         Raises
         ------
@@ -80,16 +90,6 @@ class SampleBuffer(Generic[_Scalar]):
     def forget(self, before: int) -> None:
         """Let go of the samples before index `before`."""
         self._keep = min(max(self._keep, before), self.end)
-
-    def _return_loan(self) -> None:
-        """Copy what is still wanted of what is borrowed."""
-        loan, begin = self._loan, self._own_end
-        self._loan = self._own[:0]
-        if self._keep > begin and len(loan):  # nothing of the own is wanted any more
-            loan = loan[self._keep - begin :]
-            self._origin = self._own_end = self._keep
-        if len(loan):
-            self._room(len(loan))[:] = loan
 
     def _room(self, count: int) -> NDArray[_Scalar]:
         """Return the place for `count` samples behind the last one."""

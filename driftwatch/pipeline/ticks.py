@@ -20,6 +20,7 @@ def with_ticks(blocks: Iterable[Block], rate_hz: int) -> Iterator[Block | Tick]:
             yield from _ticks(sample_time_ns(start_ns, end, rate_hz), block.time_ns)
         end = block.first_sample + len(block.samples)
         yield block
+        del block  # it may be large: the next one is read only now
 
 
 def _ticks(from_ns: int, until_ns: int) -> Iterator[Tick]:

@@ -62,6 +62,7 @@ class RecordingSource:
             for first_sample, samples in _read(piece, frames):
                 time_ns = sample_time_ns(self.start_ns, first_sample, self.rate_hz)
                 yield Block(self.name, first_sample, time_ns, samples)
+                del samples  # they may be large: the next ones are read only now
 
 
 def open_recordings(
@@ -232,6 +233,7 @@ def _read(piece: Piece, frames: int) -> Iterator[tuple[int, np.ndarray[tuple[int
                 if came < len(samples):
                     raise _stopped(piece, done + came, "it has become shorter")
                 yield piece.first_sample + done, samples
+                del samples
                 done += came
     except (soundfile.SoundFileError, OSError, ValueError) as error:  # ValueError: other inputs than when checked
         raise _stopped(piece, done, str(error)) from error

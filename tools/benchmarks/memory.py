@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-import os
+import re
 import subprocess
 import sys
 import tempfile
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -41,9 +42,18 @@ def run(size: Size) -> Iterator[Row]:
 
 def _peak_mb(folder: Path, recording: Path) -> float:
     command = [sys.executable, "-m", "driftwatch", "replay", "scene.toml", recording.name, "--store", "out.db"]
-    child = subprocess.Popen(command, cwd=folder, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL)
-    _, status, usage = os.wait4(child.pid, 0)
-    child.returncode = os.waitstatus_to_exitcode(status)
+    peak = 0.0
+    with subprocess.Popen(command, cwd=folder, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL) as child:
+        while child.poll() is None:
+            peak = max(peak, _high_water_mb(child.pid))
+            time.sleep(0.02)
     if child.returncode:
         raise RuntimeError(f"the replay ended with exit status {child.returncode}")
-    return usage.ru_maxrss / 1024
+    return peak
+
+
+def _high_water_mb(pid: int) -> float:
+    """Return the peak of a process so far; what it inherited of this one before it began does not count."""
+    status = Path(f"/proc/{pid}/status").read_text(encoding="ascii", errors="replace")
+    found = re.search(r"VmHWM:\s+(\d+) kB", status)
+    return int(found[1]) / 1024 if found else 0.0
