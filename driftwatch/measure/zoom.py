@@ -116,11 +116,6 @@ class Zoom:
         self._slices = slices
         self.bands = tuple(part.band for part in slices)
 
-    @property
-    def latency_s(self) -> float:
-        """Longest wait from a window's last sample to its result, in seconds: one hop and the edge delay."""
-        return (self.hop + self.edge) / self.rate_hz
-
     def blocks(self, samples: NDArray[np.float32], index: int, count: int = 1) -> list[NDArray[np.complex64]]:
         """Return each band's baseband samples of `count` blocks from block `index` on.
 

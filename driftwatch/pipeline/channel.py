@@ -64,11 +64,6 @@ class ChannelLine:
         """Most samples from the end of a window to its result."""
         return max(line.late for line in self._lines)
 
-    @property
-    def latency_s(self) -> float:
-        """Longest wait from the end of a window to its result, seconds."""
-        return self.late / self._rate_hz
-
     def push(self, first_sample: int, samples: NDArray[np.float32]) -> list[Reading]:
         """Take a block in and return what it makes known.
 

@@ -108,7 +108,7 @@ def test_an_endpoint_beyond_loopback_is_refused(endpoint: str) -> None:
         Publisher(endpoint)
 
 
-@pytest.mark.parametrize("endpoint", ["", "5571", "ipc:///tmp/a", "tcp://127.0.0.1", "tcp://127.0.0.1:70000"])
+@pytest.mark.parametrize("endpoint", ["", "5571", "ipc://a", "tcp://127.0.0.1", "tcp://127.0.0.1:70000"])
 def test_what_is_no_endpoint_is_refused(endpoint: str) -> None:
     with pytest.raises(BusError, match=r"expected tcp://host:port.*tcp://127\.0\.0\.1:5571"):
         Publisher(endpoint)
