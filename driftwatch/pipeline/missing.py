@@ -9,6 +9,10 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
+LARGEST = 1e18
+"""Samples of this size and more, full scale being 1, count as no numbers: the squares of their transforms would
+overflow in single precision, and nothing but a broken file holds them."""
+
 
 @dataclass(frozen=True, slots=True)
 class Missing:
@@ -46,13 +50,13 @@ def unfinite_runs(samples: NDArray[np.float32]) -> Iterator[tuple[int, int, bool
     """Yield (begin, end, all are numbers) of the longest runs that are all numbers, or all none."""
     if not len(samples):
         return
-    # a sum of squares is a number only if every sample is; it may also overflow, then the slow way decides
+    # a sum of squares is small only if every sample is a small number; where it is not, the slow way decides
     with np.errstate(over="ignore", invalid="ignore"):
         total = np.dot(samples, samples)
-    if np.isfinite(total):
+    if total < LARGEST**2:
         yield 0, len(samples), True
         return
-    finite = np.isfinite(samples)
+    finite = np.abs(samples) < LARGEST
     edges = [0, *(np.flatnonzero(np.diff(finite)) + 1).tolist(), len(samples)]
     for begin, end in itertools.pairwise(edges):
         yield begin, end, bool(finite[begin])

@@ -265,6 +265,19 @@ def test_a_gap_is_one_incident_and_spoils_only_the_windows_that_touch_it():
             assert (body.reasons == ("gap",)) == touches
 
 
+@pytest.mark.parametrize("size", [1.1e18, 3e38])
+def test_samples_too_large_to_transform_are_no_numbers_in_any_cut(size):
+    samples = SOURCE.samples.copy()
+    samples[20_000, 0] = size
+    samples[20_005, 0] = -size
+    source = replace(SOURCE, samples=samples)
+    whole = records_of(source, [])
+    assert whole == records_of(source, [19_990, 20_000, 20_001, 20_006, 30_000])
+    begin, end = (body for body in bodies(whole, Health) if body.fault is Fault.NOT_FINITE)
+    assert (begin.first_sample, end.lost_samples) == (20_000, 2)
+    assert any(body.usable for body in bodies(whole, Measurement) if body.first_sample > 20_005)
+
+
 def test_incidents_of_one_place_at_two_times_are_two():
     """A run of tomorrow that misses the same samples of its own has an incident of its own."""
     found = []
