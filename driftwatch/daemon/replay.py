@@ -11,10 +11,10 @@ from driftwatch.pipeline.ticks import with_ticks
 from driftwatch.records import Block
 from driftwatch.stream.source import Source, StreamError
 
-BLOCK_S = 60.0
+BLOCK_S = 120.0
 """Samples handed to the pipeline at a time, seconds: longer saves little, and memory grows with it."""
 
-BLOCK_VALUES = 4_000_000
+BLOCK_VALUES = 6_000_000
 """Most values in a block, over all inputs."""
 
 

@@ -52,7 +52,7 @@ _FLOOR_SHARE = 0.07  # which is this much of the least section's mean: most of t
 _ROUGH, _FINE = 1.0, 0.15  # standard deviations: when to pool anew, when to stop
 _ROUGH_MOST, _FINE_MOST = 2, 10  # evaluations of the model
 _PLAIN = (1e-25, 1e30)  # mean of squares that single precision holds with all their spread
-_ROWS = 64  # windows at a time: their arrays stay in the cache
+_ROWS = 128  # windows at a time: their arrays stay in the cache
 _FIGURES = (
     "frequency_hz",
     "ln_q",
