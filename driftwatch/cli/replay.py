@@ -37,7 +37,7 @@ if TYPE_CHECKING:
 @click.option(
     "--start", metavar="TIME", callback=told_time, help="When the first sample was taken, RFC 3339 with a zone."
 )
-@click.option("--store", metavar="URL", help="Database to write; left out: a new one named after the run.")
+@click.option("--store", metavar="URL|PATH", help="Database to write; left out: a new one named after the run.")
 @click.option("--publish", metavar="ENDPOINT", help="Publish on the bus as well, such as tcp://127.0.0.1:5571.")
 @click.option("--json", "as_json", is_flag=True, help="Print every record as one JSON object a line.")
 def command(

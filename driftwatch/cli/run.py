@@ -35,7 +35,7 @@ LINES_EVERY_S = 5.0
 
 @click.command("run", short_help="Watch live, in the foreground, until interrupted.")
 @click.argument("config", type=click.Path(path_type=Path))
-@click.option("--store", metavar="URL", help="Database to write; left out: the configuration's.")
+@click.option("--store", metavar="URL|PATH", help="Database to write; left out: the configuration's.")
 @click.option("--publish", metavar="ENDPOINT", help="Where to publish; left out: the configuration's.")
 @click.option("--json", "as_json", is_flag=True, help="Print every record as one JSON object a line.")
 def command(config: Path, store: str | None, publish: str | None, as_json: bool) -> None:

@@ -24,7 +24,8 @@ def command(store: str | None, config: str | None, as_json: bool) -> None:
     """Print the runs in a store, in the order in which they were written, with the alerts that stand.
 
     Times are stream time. A run without an end still goes on, or was cut off. The table shows the begin of each run's
-    UUID, which --run of other commands takes; --json shows all of it.
+    UUID, which --run of other commands takes; --json shows all of it. What is counted are records: an alert has one for
+    each change, also the first time that it can be told.
 
     Example: driftwatch runs --config config/demo.toml
     """

@@ -130,7 +130,10 @@ class RunView:
         lines += [f"  {line}" for line in self._mode_lines()]
         unfound = [track for track in self._tracks.values() if track.status is TrackStatus.SEARCHING]
         if unfound:
-            lines.append(f"  {len(unfound)} of {len(self._names)} modes were not found.")
+            lines.append(
+                f"  Not followed: {len(unfound)} of {len(self._names)} modes, for that takes two readings that agree. "
+                "`driftwatch readings` shows each single one."
+            )
         lines.append(f"Alerts: {self._raised} raised, {self._returned} came back, {len(self._standing)} standing.")
         lines += [f"  {alert_line(alert)}" for alert in self._standing.values()]
         return [folded(line, "    ") for line in lines]

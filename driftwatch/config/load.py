@@ -34,7 +34,8 @@ def load(path: Path | str) -> Configuration:
     except UnicodeDecodeError as error:
         line = raw.count(b"\n", 0, error.start) + 1
         came = f"byte 0x{raw[error.start]:02x} in line {line}"
-        raise ConfigError((Problem(str(file), came, "text in UTF-8", "save the file as UTF-8"),)) from None
+        remedy = "save it as UTF-8, or name a configuration here: recordings come behind it"
+        raise ConfigError((Problem(str(file), came, "text in UTF-8", remedy),)) from None
     config = loads(text.removeprefix("\ufeff"), file.parent, name=str(file))
     config._path = file.absolute()
     config._sha256 = hashlib.sha256(raw).hexdigest()

@@ -143,9 +143,16 @@ def _inspect_all(paths: Sequence[Path]) -> list[RecordingFile]:
 
 def _misfits(file: RecordingFile, first: RecordingFile, rate_hz: int | None, least_inputs: int) -> Iterator[str]:
     """Yield what keeps a file out of the stream."""
-    expected, why = (first.rate_hz, f"like {first.path}") if rate_hz is None else (rate_hz, "as configured")
-    if file.rate_hz != expected:
-        yield f"{file.path}: {file.rate_hz} Hz; expected {expected} Hz {why}; resample it or replay it on its own"
+    if rate_hz is not None and file.rate_hz != rate_hz:
+        yield (
+            f"{file.path}: {file.rate_hz} Hz; expected {rate_hz} Hz as configured; "
+            "resample it or correct the source's rate_hz"
+        )
+    elif rate_hz is None and file.rate_hz != first.rate_hz:
+        yield (
+            f"{file.path}: {file.rate_hz} Hz; expected {first.rate_hz} Hz like {first.path}; "
+            "resample it or replay it on its own"
+        )
     if file.inputs != first.inputs:
         yield (
             f"{file.path}: {_inputs(file.inputs)}; expected {_inputs(first.inputs)} like {first.path}; "
