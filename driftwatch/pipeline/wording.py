@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 from driftwatch.records import Z95, Measurement, Method
@@ -90,29 +90,24 @@ def _ambient_body(
 
 def ringdown_body(subject: Subject, extent: Extent, fit: RingdownFit) -> Measurement:
     """Return the measurement of one decay."""
-    usable = fit.usable and fit.frequency_hz is not None and fit.q is not None
-    frequency_hz, q = (fit.frequency_hz, fit.q) if usable else (None, None)
-    return Measurement(
-        channel=subject.channel,
-        mode=subject.mode,
-        method=Method.RINGDOWN,
-        regime=None,
-        window_s=extent.samples / subject.rate_hz,
-        first_sample=extent.first_sample,
-        samples=extent.samples,
-        frequency_hz=frequency_hz,
-        frequency_std_hz=_product(frequency_hz, fit.std_ln_f),
-        q=q,
-        q_std=_product(q, fit.std_ln_q),
-        q_low=fit.q_low if usable else None,
-        q_high=fit.q_high if usable else None,
-        frequency_q_correlation=fit.correlation if usable else None,
+    told = replace(
+        unusable_body(subject, Method.RINGDOWN, extent, fit.reasons),
         level=_product(fit.level, subject.scale),
-        level_unit=subject.unit,
         snr_db=fit.snr_db,
         fit_p=fit.fit_p,
-        usable=usable,
-        reasons=fit.reasons,
+    )
+    if not fit.usable:
+        return told
+    return replace(
+        told,
+        frequency_hz=fit.frequency_hz,
+        frequency_std_hz=_product(fit.frequency_hz, fit.std_ln_f),
+        q=fit.q,
+        q_std=_product(fit.q, fit.std_ln_q),
+        q_low=fit.q_low,
+        q_high=fit.q_high,
+        frequency_q_correlation=fit.correlation,
+        usable=True,
     )
 
 
