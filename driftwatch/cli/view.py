@@ -36,7 +36,7 @@ def folded(text: str, indent: str = "") -> str:
 def mode_line(name: str, track: Track | None) -> str:
     """Return one line about a mode; None: nothing is known of it yet."""
     if track is None:
-        return f"{name}  no reading: less signal than a window"
+        return f"{name}  no reading yet: no full window, no decay"
     status = f"{track.status}{f' ({track.reason})' if track.reason else ''}".replace("_", " ")
     if track.frequency_hz is None:
         return f"{name}  {status}"
@@ -131,8 +131,8 @@ class RunView:
         unfound = [track for track in self._tracks.values() if track.status is TrackStatus.SEARCHING]
         if unfound:
             lines.append(
-                f"  Not followed: {len(unfound)} of {len(self._names)} modes, for that takes two readings that agree. "
-                "`driftwatch readings` shows each single one."
+                f"  Not followed: {len(unfound)} of {len(self._names)} modes; it takes two readings that agree. "
+                "`readings` shows each one."
             )
         lines.append(f"Alerts: {self._raised} raised, {self._returned} came back, {len(self._standing)} standing.")
         lines += [f"  {alert_line(alert)}" for alert in self._standing.values()]

@@ -72,7 +72,7 @@ def test_modes_stand_in_the_order_given_whatever_came_first(capsys: pytest.Captu
 
 def test_a_mode_of_which_nothing_is_known_says_why() -> None:
     unknown = {"frequency_hz": None, "frequency_std_hz": None, "q": None}
-    assert mode_line("a / b", None) == "a / b  no reading: less signal than a window"
+    assert mode_line("a / b", None) == "a / b  no reading yet: no full window, no decay"
     held = _track(status=TrackStatus.HELD, reason="not_finite", **unknown)
     assert mode_line("a / b", held) == "a / b  held (not finite)"
 
