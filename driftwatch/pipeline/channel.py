@@ -1,8 +1,8 @@
 """One channel: samples in, measurements and track points out.
 
 The channel owns the raw samples and the zoom; each of its modes owns its baseband (`ModeLine`). Blocks of the zoom
-lie on a fixed grid anchored at sample 0. Missing samples are zeros that no usable window may touch; after a long gap
-the channel begins again at the grid's block that holds the first new sample.
+lie on a fixed grid anchored at sample 0. Missing samples are zeros that no usable window may touch; after a gap longer
+than a block the channel begins again at the grid's block that holds the first new sample.
 """
 
 from __future__ import annotations
@@ -55,7 +55,7 @@ class ChannelLine:
         self._missing = MissingList()
         self._unfinite = Incident(rate_hz)
         self._lines = [ModeLine(channel, mode, self._zoom, number, start_ns) for number, mode in enumerate(modes)]
-        self._longest = max(line.longest for line in self._lines) + self._zoom.fft_length
+        self._look_back = max(line.longest for line in self._lines)
         self._position = 0  # stream index of the next sample
         self._begin_at(0)
 
@@ -131,7 +131,7 @@ class ChannelLine:
         keep = min(self._block * zoom.hop - zoom.edge, *(line.keeps_from for line in self._lines))
         self._raw.forget(keep)
         self._raw.give_back()  # so that a block and the next one are never held at a time
-        self._missing.forget(keep - self._longest)  # impacts look further back for what is quiet
+        self._missing.forget(keep - self._look_back)  # impacts look further back for what is quiet
         return readings
 
     def _complete_blocks(self) -> int:
@@ -157,7 +157,7 @@ class ChannelLine:
     def _skip(self, until: int) -> list[Reading]:
         """Pass over samples that never came, up to stream index `until`."""
         count = until - self._position
-        if count <= self._longest:
+        if count <= self._zoom.fft_length:
             self._zeros(count, "gap")
             return []
         self._missing.add(Missing(self._position, until, "gap"))

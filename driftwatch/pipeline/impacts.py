@@ -28,7 +28,7 @@ FALL = 10.0
 """Power at the begin of a decay over that of its last quarter, at least, where only the decay can prove the onset."""
 
 
-@dataclass(slots=True)
+@dataclass(slots=True, eq=False)
 class Impact:
     """One impact and what it disturbs, in baseband samples."""
 
@@ -156,6 +156,12 @@ class Impacts:
         self._impacts = [
             one for one in self._impacts[:-1] if one.settled is None or one.settled > before
         ] + self._impacts[-1:]
+
+    def begun_by_blow(self, baseband: SampleBuffer[np.complex64], first: int, end: int) -> bool:
+        """Say whether the samples begin between `first` and `end` with what can only be a decay."""
+        return any(
+            one.doubtful and first <= one.onset < end and self.falls(one, baseband, end) for one in self._impacts
+        )
 
     def disturbed(self, first: int, end: int) -> list[tuple[int, int]]:
         """Return what impacts disturb of the baseband from `first` to before `end`: runs (begin, end), in order."""

@@ -156,14 +156,16 @@ class ModeLine:
     def _tracked(self, measured: list[_Measured]) -> Iterator[Reading]:
         """Yield measurements in the order in which they are known, each with the track point after it.
 
-        What was measured before a silence and is known after it does not wake a track that the silence has ended.
+        What was measured before a silence and is known after it counts, but does not wake a track that the silence has
+        ended: until new samples are measured the mode is held or lost.
         """
         for ready, body in sorted(measured, key=lambda pair: pair[0]):
             end_ns = sample_time_ns(self._start_ns, body.first_sample + body.samples, self._subject.rate_hz)
             yield Reading(ready, end_ns, body)
-            if end_ns >= self._silent_ns:
-                self._now_ns = max(self._now_ns, end_ns)
-                yield Reading(ready, self._now_ns, self._tracker.update(body, end_ns, self._now_ns))
+            self._now_ns = max(self._now_ns, end_ns)
+            track = self._tracker.update(body, end_ns, self._now_ns)
+            silent = self._tracker.tick(self._silent_ns) if end_ns < self._silent_ns else None
+            yield Reading(ready, self._now_ns, silent or track)
 
     # ------------------------------------------------------------------------------------------ ambient
 
@@ -200,7 +202,8 @@ class ModeLine:
             extent = self._extent(window)
             disturbed = self._impacts.disturbed(*self._baseband_of(extent))
             lost = sum(end - first for first, end in disturbed)
-            if spoilt is None and lost <= (1.0 - LEAST_QUIET) * self._band.window:
+            quiet = lost <= (1.0 - LEAST_QUIET) * self._band.window
+            if spoilt is None and quiet and not self._impacts.begun_by_blow(self._baseband, *self._baseband_of(extent)):
                 batch.append(extent)
                 blanks.append(disturbed)
                 continue

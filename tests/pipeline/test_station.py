@@ -348,3 +348,62 @@ def test_blocks_out_of_order_or_of_an_unknown_source_are_refused():
         station.feed(source.block(1_000, 3_000))
     with pytest.raises(ValueError, match="known are held"):
         station.feed(replace(source.block(2_000, 3_000), source="other"))
+
+
+def struck(gap_s: float, count: int) -> tuple[Held, list[Block]]:
+    """Pieces of 3 s that each begin with a blow, with a pause before each but the first."""
+    length, apart = 3 * RATE_HZ, round((3 + gap_s) * RATE_HZ)
+    decay = free_decay(length, RATE_HZ, 620.0, 50.0, 0.5, 0.3, 0.0)
+    rng = np.random.default_rng(0)
+    pieces = [(decay + 1e-4 * rng.standard_normal(length)).astype(np.float32) for _ in range(count)]
+    both = [np.stack([piece, piece], axis=1) for piece in pieces]
+    source = Held(both[0])
+    blocks = [
+        Block("held", number * apart, sample_time_ns(START_NS, number * apart, RATE_HZ), piece)
+        for number, piece in enumerate(both)
+    ]
+    return source, blocks
+
+
+@pytest.mark.parametrize("gap_s", [3.0, 10.0, 30.0, 118.0])
+def test_blows_in_pieces_with_pauses_are_each_measured_and_together_followed(gap_s):
+    """As an analyst has them: one blow a recording. After the last one the mode is tracked."""
+    source, blocks = struck(gap_s, 4)
+    station = station_for(source, CONFIG.replace('["ambient", "ringdown"]', '["ringdown"]'))
+    records = station.begin()
+    for item in with_ticks(blocks, RATE_HZ):
+        records += station.feed(item)
+    records += station.finish()
+    decays = [body for body in bodies(records, Measurement) if body.method is Method.RINGDOWN and body.usable]
+    assert len(decays) == 4
+    for body in decays:
+        assert abs(body.frequency_hz - 620.0) < 5 * body.frequency_std_hz
+    last = [body for body in bodies(records, Track) if (body.channel, body.mode) == ("near", "rocking")][-1]
+    assert last.status is TrackStatus.TRACKING
+
+
+def test_what_was_measured_before_a_silence_does_not_wake_a_track_after_it():
+    """Ten seconds of random response, a minute of silence, and the first second after it."""
+    source = rig(11.0)
+    gap = 60 * RATE_HZ
+    whole = source.block(0, 10 * RATE_HZ)
+    rest = Block("held", 10 * RATE_HZ + gap, START_NS + 70 * NS, source.samples[10 * RATE_HZ :])
+    station = station_for(source)
+    station.begin()
+    records = []
+    for item in with_ticks([whole, rest], RATE_HZ):
+        records += station.feed(item)
+    late = [record for record in records if isinstance(record.body, Track) and record.time_ns >= START_NS + 15 * NS]
+    assert late
+    assert not any(record.body.status is TrackStatus.TRACKING for record in late)
+
+
+def test_a_blow_at_the_begin_is_no_random_response():
+    """The first window of a piece that begins with a blow is not measured as ambient."""
+    source, blocks = struck(3.0, 1)
+    station = station_for(source)
+    records = [record for block in blocks for record in station.feed(block)] + station.finish()
+    first = next(
+        body for body in bodies(records, Measurement) if body.method is Method.AMBIENT and body.channel == "near"
+    )
+    assert (first.first_sample, first.usable, first.reasons) == (0, False, ("impact",))
