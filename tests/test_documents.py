@@ -33,7 +33,7 @@ from driftwatch.records import REASONS, AlertState, Method, TrackStatus
 from pydantic import BaseModel
 
 from benchmarks.__main__ import NAMES
-from pictures.transcript import Block, blocks, disagreement, disagreements, prepared, steps
+from pictures.shown import Block, blocks, disagreement, disagreements, prepared, steps
 
 ROOT = Path(__file__).parent.parent
 README = (ROOT / "README.md").read_text(encoding="utf-8")

@@ -10,7 +10,7 @@ A page marks what can be played:
 What is printed must agree in kind (`kind_of`): the same words around other numbers. Moments, UUIDs and the last digits
 of a figure may differ from machine to machine.
 
-``.venv/bin/python tools/pictures/transcript.py`` puts what is printed now into the README; read the difference before
+``.venv/bin/python tools/pictures/shown.py`` puts what is printed now into the README; read the difference before
 you keep it.
 """
 
