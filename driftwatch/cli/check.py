@@ -30,19 +30,17 @@ def command(config: Path, as_json: bool) -> None:
     """Read a configuration and explain it: what is followed, what its windows can resolve, where the rows go.
 
     Whatever is wrong is listed in one go, each line with the key, what came, what was expected and what to do; the
-    exit status is then 2. Nothing is started and nothing is written.
+    exit status is then 2. What is right but not served by this version is a remark: `run` and `replay` would refuse it.
+    Nothing is started and nothing is written.
 
     Example: driftwatch check config/demo.toml
     """
-    from driftwatch.config import ConfigError, load, unserved
+    from driftwatch.config import ConfigError, load
 
     try:
         configuration = load(config)
     except ConfigError as error:
         _refuse(error.problems, as_json)
-    problems = unserved(configuration, live=False)
-    if problems:
-        _refuse(problems, as_json)
     if as_json:
         click.echo(json.dumps(explained(configuration), ensure_ascii=False, allow_nan=False))
     else:
@@ -250,7 +248,7 @@ def _bands(config: Configuration) -> Table:
 
 
 def _inside(band: BandConfig) -> str:
-    name, unit = ("frequency", " Hz") if band.quantity == "frequency" else ("Q", "")
+    name, unit = "frequency" if band.quantity == "frequency" else "Q", _unit(band)
     if band.low is None:
         return f"{name} under {band.high:g}{unit}"
     if band.high is None:
@@ -258,9 +256,15 @@ def _inside(band: BandConfig) -> str:
     return f"{name} {band.low:g} to {band.high:g}{unit}"
 
 
+def _unit(band: BandConfig) -> str:
+    """Return the limits' own unit."""
+    if band.limits != "absolute":
+        return " % of baseline" if band.limits == "percent" else f" {band.limits} of baseline"
+    return " Hz" if band.quantity == "frequency" else ""
+
+
 def _returns(band: BandConfig) -> str:
-    unit = " Hz" if band.quantity == "frequency" else ""
-    by = f" by {band.deadband:g}{unit}" if band.deadband else ""
+    by = f" by {band.deadband:g}{_unit(band)}" if band.deadband else ""
     return f"inside{by} for {band.off_delay_s:g} s"
 
 

@@ -169,9 +169,10 @@ def remarks(config: Configuration) -> Iterator[str]:
     """Yield what is allowed and worth a second look."""
     from driftwatch.config import unserved
 
+    replayed = [str(problem) for problem in unserved(config, live=False)]
+    yield from (f"run and replay refuse this: {problem}" for problem in replayed)
     if config.source:
-        served = {str(problem) for problem in unserved(config, live=False)}
-        yield from (f"run: {problem}" for problem in unserved(config) if str(problem) not in served)
+        yield from (f"run refuses this: {problem}" for problem in map(str, unserved(config)) if problem not in replayed)
     for channel in config.channel:
         if channel.quantity == "pressure":
             yield f'channel "{channel.name}": a microphone may record speech: get consent and follow local law'

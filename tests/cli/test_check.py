@@ -119,14 +119,16 @@ def test_json_of_a_wrong_file_is_one_object_a_problem(tmp_path: Path) -> None:
     assert {key for problem in problems for key in problem} == {"kind", "key", "came", "expected", "remedy"}
 
 
-def test_what_is_not_served_is_refused_and_a_sound_card_only_remarked(tmp_path: Path) -> None:
-    done = check(written(tmp_path, SOUND.replace("search_hz", 'methods = ["halfpower"]\nsearch_hz')))
-    assert done.exit_code == 2
-    assert "not served by this version" in done.stderr
+def test_what_is_valid_and_not_served_is_explained_with_who_will_refuse_it(tmp_path: Path) -> None:
+    relative = SOUND.replace("search_hz", 'methods = ["halfpower"]\nsearch_hz')
+    done = check(written(tmp_path, relative + '[[mode.band]]\nname = "shift"\nlimits = "percent"\nlow = -2.0\n'))
+    assert done.exit_code == 0
+    assert "frequency over -2 % of baseline" in done.stdout
+    assert done.stdout.count("run and replay refuse this:") == 2
     done = check(written(tmp_path, SOUND + '[[source]]\nname = "card"\nkind = "soundcard"\n'))
     assert done.exit_code == 0
     assert "Worth a second look" in done.stdout
-    assert '"soundcard", not served by this version' in done.stdout
+    assert 'run refuses this: source[1] "card" . kind: got "soundcard", not served by this version' in done.stdout
 
 
 def test_a_missing_file_is_one_line_and_exit_status_2(tmp_path: Path) -> None:
