@@ -36,10 +36,13 @@ def run(size: Size) -> Iterator[Row]:
             path = Path(folder) / "scene.wav"
             samples = scene(seconds, impacts=impacts)
             soundfile.write(path, samples, RATE_HZ, subtype="PCM_24")
-            yield from _pairs(f"{seconds} s, {len(MODES)} modes, {case}", path, samples, Path(folder))
+            limit = None if impacts else LIMIT  # what the decay fits cost on top is for information
+            yield from _pairs(f"{seconds} s, {len(MODES)} modes, {case}", path, samples, Path(folder), limit)
 
 
-def _pairs(case: str, path: Path, samples: np.ndarray[tuple[int], np.dtype[np.float32]], folder: Path) -> Iterator[Row]:
+def _pairs(
+    case: str, path: Path, samples: np.ndarray[tuple[int], np.dtype[np.float32]], folder: Path, limit: float | None
+) -> Iterator[Row]:
     ratios, ours, peers = [], [], []
     for pair in range(PAIRS + 1):
         our = _cost(lambda pair=pair: _replayed(path, folder / f"{case[-9:].strip()}-{pair}.db"))
@@ -52,7 +55,8 @@ def _pairs(case: str, path: Path, samples: np.ndarray[tuple[int], np.dtype[np.fl
     ratio = float(np.median(ratios))
     yield Row(case, "replay, processor time", float(np.median(ours)), "", None)
     yield Row(case, "plain spectral pass, processor time", float(np.median(peers)), "", None)
-    yield Row(case, "replay over plain spectral pass", ratio, f"at most {LIMIT}", ratio <= LIMIT)
+    bar, ok = ("", None) if limit is None else (f"at most {limit}", ratio <= limit)
+    yield Row(case, "replay over plain spectral pass", ratio, bar, ok)
 
 
 def _cost(work: Callable[[], object]) -> float:
