@@ -106,7 +106,11 @@ def test_what_is_taken_for_granted_is_said(old: str, new: str, words: str) -> No
 
 MORE_MODE = '[[mode]]\nname = "n"\nchannel = "a"\nsearch_hz = [970, 1200]\n[[mode.band]]\nname = "w"\nlow = 990\n'
 REMARKS = [
-    ('kind = "simulated"\nrate_hz = 8192', 'kind = "soundcard"', 'run refuses this: source[1] "s" . kind: got "soundcard"'),
+    (
+        'kind = "simulated"\nrate_hz = 8192',
+        'kind = "soundcard"',
+        'run refuses this: source[1] "s" . kind: got "soundcard"',
+    ),
     ('quantity = "acceleration"', 'quantity = "pressure"', "a microphone may record speech"),
     ("[[mode]]", '[[channel]]\nname = "b"\nunit = "V"\nscale = 1\n[[mode]]', 'channel "b": no mode is followed on it'),
     ("[[mode]]", "[channel.sensor]\nusable_hz = [10, 900]\n[[mode]]", "search_hz leaves what the sensor"),
