@@ -55,7 +55,7 @@ class ChannelLine:
         self._missing = MissingList()
         self._unfinite = Incident(rate_hz)
         self._lines = [ModeLine(channel, mode, self._zoom, number, start_ns) for number, mode in enumerate(modes)]
-        self._look_back = max(line.longest for line in self._lines)
+        self._look_back = max(line.look_back for line in self._lines)
         self._position = 0  # stream index of the next sample
         self._begin_at(0)
 

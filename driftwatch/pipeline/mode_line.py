@@ -67,7 +67,7 @@ class ModeLine:
         self._silent_ns = start_ns  # time of the last tick
         self._impacts = Impacts(self._band, zoom.hop // self._band.decimation)
         self._run_up = round(ringdown.context_s(self._band.search_hz) * zoom.rate_hz)  # wanted before an onset
-        self.longest = (
+        self.look_back = (  # samples before what is measured next that may still be asked for
             self._band.window * self._band.decimation + self._run_up + self._impacts.memory * self._band.decimation
         )
         self.begin_at(0, 0)
