@@ -130,6 +130,7 @@ class Fault(StrEnum):
     DISK = "disk"
     STORE = "store"
     DEVICE = "device"
+    PROCESS = "process"
 
 
 class Phase(StrEnum):
@@ -151,6 +152,7 @@ class Block:
     first_sample: int  # index of the first row, counted from the start of the stream; a jump is a gap
     time_ns: int  # stream time of the first row
     samples: NDArray[np.float32]  # shape (samples, inputs), digital full scale = 1.0; not to be written to
+    cause: Fault = Fault.GAP  # why samples are missing before it, where they are
 
 
 @dataclass(frozen=True, slots=True)
@@ -158,6 +160,7 @@ class Tick:
     """A second has passed while no samples came."""
 
     time_ns: int  # stream time
+    cause: Fault = Fault.GAP  # why none came, as far as is known
 
 
 @dataclass(frozen=True, slots=True)
@@ -362,6 +365,19 @@ class Level:
 
 
 @dataclass(frozen=True, slots=True)
+class Clock:
+    """What the sample clock of a source does against the computer's."""
+
+    source: str
+    rate_hz: float  # nominal: every frequency in every record refers to it
+    deviation_ppm: float | None  # of the true rate from the nominal one
+    deviation_std_ppm: float | None
+    span_s: float  # for how long samples were counted for this
+    offset_s: float  # UTC less stream time, of the latest sample
+    offset_std_s: float | None
+
+
+@dataclass(frozen=True, slots=True)
 class CovariateValue:
     """One value of a slow quantity, as it entered the stream."""
 
@@ -428,6 +444,7 @@ Body = (
     | Decay
     | Tone
     | Level
+    | Clock
     | CovariateValue
     | Note
     | Baseline
@@ -444,6 +461,7 @@ KINDS: dict[str, type[Body]] = {
     "decay": Decay,
     "tone": Tone,
     "level": Level,
+    "clock": Clock,
     "covariate": CovariateValue,
     "note": Note,
     "baseline": Baseline,
@@ -505,6 +523,8 @@ def topic_of(body: Body) -> str:
             about = body.channel
         case Health():
             about = body.channel or ""
+        case Clock():
+            about = body.source
         case CovariateValue():
             about = body.name
         case _:

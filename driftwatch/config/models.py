@@ -32,6 +32,7 @@ from driftwatch.config.values import (
     Number,
     Positive,
     Quantity,
+    Seconds,
     SpanHz,
     Table,
     Text,
@@ -209,6 +210,38 @@ class BusConfig(Table):
         return control
 
 
+# ---------------------------------------------------------------------------------------------- daemon, record
+
+
+class DaemonConfig(Table):
+    """How the daemon works; nothing here changes a figure."""
+
+    workers: Annotated[int, Field(strict=True, ge=1, le=64)] = 1  # processes that measure
+    state: Text | None = None  # folder of the lock and the recordings; None: the store's own
+    queue_s: Annotated[Seconds, Field(ge=2.0, le=600.0)] = 20.0  # of samples that wait for a late worker
+    log_level: Literal["debug", "info", "warning", "error"] = "info"
+
+    @field_validator("state")
+    @classmethod
+    def _beside_the_file(cls, state: str | None, info: ValidationInfo) -> str | None:
+        return str((base_of(info) / state).resolve()) if state is not None and info.context else state
+
+
+class RecordConfig(Table):
+    """The raw recorder: keeps the last hours as they came."""
+
+    keep_hours: Annotated[Number, Field(ge=0)] = 0.0  # 0: nothing is recorded
+    most_gb: Positive = 20.0  # on the disk, in 1e9 bytes
+    segment_s: Annotated[Seconds, Field(ge=1.0, le=3600.0)] = 300.0
+    folder: Text | None = None  # None: recordings, in the state folder
+    pressure_allowed_by: Text | None = None  # who allowed that a microphone is recorded
+
+    @field_validator("folder")
+    @classmethod
+    def _beside_the_file(cls, folder: str | None, info: ValidationInfo) -> str | None:
+        return str((base_of(info) / folder).resolve()) if folder is not None and info.context else folder
+
+
 # ---------------------------------------------------------------------------------------------- the whole file
 
 
@@ -231,6 +264,8 @@ class Configuration(Table):
     alert: tuple[AlertConfig, ...] = ()
     store: StoreConfig = StoreConfig()
     bus: BusConfig = BusConfig()
+    daemon: DaemonConfig = DaemonConfig()
+    record: RecordConfig = RecordConfig()
 
     _path: Path | None = PrivateAttr(default=None)
     _sha256: str = PrivateAttr(default="")
@@ -255,6 +290,11 @@ class Configuration(Table):
             return channels
         only = sources[0].name
         return tuple(channel if channel.source else channel.model_copy(update={"source": only}) for channel in channels)
+
+    @property
+    def state(self) -> Path:
+        """The folder of the lock and the recordings."""
+        return Path(self.daemon.state or Path(self.store.url.removeprefix("sqlite:///")).parent)
 
     def source_of(self, channel: ChannelConfig) -> SourceConfig | None:
         """Return the source a channel comes from, None in a file without sources."""

@@ -16,7 +16,7 @@ from driftwatch.records import KINDS, FieldInfo, fields_of
 APPLICATION_ID = 0x64726674
 """Marks a database as ours in the file's own header (``drft``)."""
 
-HEAD = "0001"
+HEAD = "0002"
 """Revision of the schema that this program writes."""
 
 VERSION_TABLE = "alembic_version"

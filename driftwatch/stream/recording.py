@@ -46,6 +46,11 @@ class RecordingSource:
     pieces: tuple[Piece, ...]
 
     @property
+    def first_sample(self) -> int:
+        """Stream index of the first sample there is."""
+        return self.pieces[0].first_sample
+
+    @property
     def length(self) -> int:
         """Samples in all, gaps included."""
         return self.pieces[-1].end

@@ -47,6 +47,11 @@ class SimulatedSource:
         return self.config.inputs
 
     @property
+    def first_sample(self) -> int:
+        """The stream begins with it."""
+        return 0
+
+    @property
     def sources(self) -> tuple[str, ...]:
         """What is read, for the run's record."""
         return (f"simulated, seed {self.config.seed}",)

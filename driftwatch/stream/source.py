@@ -71,6 +71,11 @@ class Source(Protocol):
         ...
 
     @property
+    def first_sample(self) -> int:
+        """Stream index of the first sample there is: 0, except where a recording holds the end of a longer stream."""
+        ...
+
+    @property
     def time_quality(self) -> TimeQuality:
         """How far `start_ns` can be trusted."""
         ...
