@@ -26,6 +26,8 @@ from driftwatch.records import (
 )
 from hypothesis import strategies as st
 
+pytest_plugins = ["soundrig.fixtures"]
+
 _TEXT = st.text(st.characters(exclude_categories=["Cs"]), max_size=20)
 _INTEGERS = st.integers(-(2**63), 2**63 - 1)
 _TIMES = st.integers(-(2**62), 2**62)  # the years 1823 to 2116
