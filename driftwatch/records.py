@@ -154,6 +154,22 @@ class Block:
     samples: NDArray[np.float32]  # shape (samples, inputs), digital full scale = 1.0; not to be written to
     cause: Fault = Fault.GAP  # why samples are missing before it, where they are
 
+    @property
+    def count(self) -> int:
+        """Samples in it, per input."""
+        return len(self.samples)
+
+
+@dataclass(frozen=True, slots=True)
+class Stretch:
+    """Where a block lies, without its samples."""
+
+    source: str
+    first_sample: int
+    time_ns: int
+    count: int  # samples, per input
+    cause: Fault = Fault.GAP
+
 
 @dataclass(frozen=True, slots=True)
 class Tick:

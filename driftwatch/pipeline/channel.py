@@ -1,4 +1,4 @@
-"""One channel: samples in, measurements and track points out.
+"""One channel: samples in, measurements out.
 
 The channel owns the raw samples and the zoom; each of its modes owns its baseband (`ModeLine`). Blocks of the zoom
 lie on a fixed grid anchored at sample 0. Missing samples are zeros that no usable window may touch; after a gap longer
@@ -19,7 +19,7 @@ from driftwatch.pipeline.buffer import SampleBuffer
 from driftwatch.pipeline.missing import Incident, Missing, MissingList, unfinite_runs
 from driftwatch.pipeline.mode_line import ModeLine
 from driftwatch.pipeline.reading import Reading
-from driftwatch.records import Fault, Health, Phase, Track, sample_time_ns
+from driftwatch.records import Fault, Health, Phase, sample_time_ns
 
 if TYPE_CHECKING:
     from driftwatch.config import ChannelConfig, ModeConfig
@@ -29,7 +29,7 @@ MOST_BLOCKS = 16
 
 
 class ChannelLine:
-    """The pipeline of one channel.
+    """What measures the modes of one channel.
 
     Parameters
     ----------
@@ -39,6 +39,8 @@ class ChannelLine:
         What is followed on it, at least one.
     rate_hz, start_ns
         Sample rate, and stream time of sample 0.
+    first_sample
+        Stream index of the first sample to come: of what lies before nothing is known.
 
     Raises
     ------
@@ -46,7 +48,9 @@ class ChannelLine:
         When a search band does not fit the sample rate.
     """
 
-    def __init__(self, channel: ChannelConfig, modes: Sequence[ModeConfig], rate_hz: int, start_ns: int) -> None:
+    def __init__(
+        self, channel: ChannelConfig, modes: Sequence[ModeConfig], rate_hz: int, start_ns: int, first_sample: int = 0
+    ) -> None:
         self.name = channel.name
         self._input = channel.input - 1
         self._rate_hz = rate_hz
@@ -56,8 +60,10 @@ class ChannelLine:
         self._unfinite = Incident(rate_hz)
         self._lines = [ModeLine(channel, mode, self._zoom, number, start_ns) for number, mode in enumerate(modes)]
         self._look_back = max(line.look_back for line in self._lines)
-        self._position = 0  # stream index of the next sample
-        self._begin_at(0)
+        self._position = first_sample  # stream index of the next sample
+        if first_sample > 0:
+            self._missing.add(Missing(0, first_sample, "gap"))
+        self._begin_at(first_sample)
 
     @property
     def late(self) -> int:
@@ -93,9 +99,15 @@ class ChannelLine:
         readings.extend(self._advance())
         return readings
 
-    def tick(self, time_ns: int) -> list[Track]:
-        """Let a second without samples pass; return the track points whose status changed."""
-        return [track for line in self._lines if (track := line.tick(time_ns)) is not None]
+    @property
+    def steps_s(self) -> list[float]:
+        """Time between two windows of each mode, seconds."""
+        return [line.step_s for line in self._lines]
+
+    @property
+    def memory(self) -> int:
+        """Samples before the next one that may still bear on what is measured."""
+        return self._look_back + self.late
 
     def finish(self) -> list[Reading]:
         """Return what the last samples still make known."""

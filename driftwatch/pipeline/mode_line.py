@@ -1,4 +1,4 @@
-"""One mode on one channel: baseband in, measurements and track points out.
+"""One mode on one channel: baseband in, measurements out.
 
 Windows lie on a fixed grid anchored at sample 0. A measurement is a function of its window's samples and the
 configuration alone; batches only save time, for every estimator treats each row of a batch by itself.
@@ -20,8 +20,7 @@ from driftwatch.pipeline.impacts import Impact, Impacts
 from driftwatch.pipeline.missing import MissingList
 from driftwatch.pipeline.reading import Reading
 from driftwatch.pipeline.wording import Extent, Subject, ambient_bodies, ringdown_body, unusable_body
-from driftwatch.records import Measurement, Method, Track, sample_time_ns
-from driftwatch.track.mode_tracker import ModeTracker
+from driftwatch.records import Measurement, Method, sample_time_ns
 
 if TYPE_CHECKING:
     from driftwatch.config import ChannelConfig, ModeConfig
@@ -37,7 +36,7 @@ LEAST_QUIET = 0.5
 
 
 class ModeLine:
-    """The pipeline of one mode.
+    """What measures one mode.
 
     Parameters
     ----------
@@ -55,16 +54,6 @@ class ModeLine:
         self._zoom = zoom
         self._start_ns = start_ns
         self._subject = Subject(channel.name, mode.name, channel.unit, channel.scale, zoom.rate_hz)
-        self._tracker = ModeTracker(
-            channel.name,
-            mode.name,
-            self._band.search_hz,
-            mode.window_s,
-            self._band.step / self._band.rate_hz,
-            shared_q=ambient.SHARED_Q,
-        )
-        self._now_ns = start_ns  # time of the last track point or tick
-        self._silent_ns = start_ns  # time of the last tick
         self._impacts = Impacts(self._band, zoom.hop // self._band.decimation)
         self._run_up = round(ringdown.context_s(self._band.search_hz) * zoom.rate_hz)  # wanted before an onset
         self.look_back = (  # samples before what is measured next that may still be asked for
@@ -73,6 +62,11 @@ class ModeLine:
         self.begin_at(0, 0)
 
     # ------------------------------------------------------------------------------------------ grid
+
+    @property
+    def step_s(self) -> float:
+        """Time between two windows as the grid has it, seconds."""
+        return self._band.step / self._band.rate_hz
 
     @property
     def late(self) -> int:
@@ -135,7 +129,7 @@ class ModeLine:
         else:
             self._waiting.clear()
         self._forget()
-        return list(self._tracked(measured))
+        return self._readings(measured)
 
     def last(self, raw: SampleBuffer[np.float32], missing: MissingList, position: int) -> list[Reading]:
         """Return what ends with the stretch of samples: windows that a gap cut, and decays that go on no longer."""
@@ -146,26 +140,18 @@ class ModeLine:
             for impact in self._waiting:
                 measured += self._decay(impact, position, raw, missing, position)
             self._waiting.clear()
-        return list(self._tracked(measured))
+        return self._readings(measured)
 
-    def tick(self, time_ns: int) -> Track | None:
-        """Let a second without samples pass; return a track point if the status changes."""
-        self._now_ns = self._silent_ns = max(self._now_ns, time_ns)
-        return self._tracker.tick(time_ns)
-
-    def _tracked(self, measured: list[_Measured]) -> Iterator[Reading]:
-        """Yield measurements in the order in which they are known, each with the track point after it.
-
-        What was measured before a silence and is known after it counts, but does not wake a track that the silence has
-        ended: until new samples are measured the mode is held or lost.
-        """
-        for ready, body in sorted(measured, key=lambda pair: pair[0]):
-            end_ns = sample_time_ns(self._start_ns, body.first_sample + body.samples, self._subject.rate_hz)
-            yield Reading(ready, end_ns, body)
-            self._now_ns = max(self._now_ns, end_ns)
-            track = self._tracker.update(body, end_ns, self._now_ns)
-            silent = self._tracker.tick(self._silent_ns) if end_ns < self._silent_ns else None
-            yield Reading(ready, self._now_ns, silent or track)
+    def _readings(self, measured: list[_Measured]) -> list[Reading]:
+        """Return measurements in the order in which they are known."""
+        return [
+            Reading(
+                ready,
+                sample_time_ns(self._start_ns, body.first_sample + body.samples, self._subject.rate_hz),
+                body,
+            )
+            for ready, body in sorted(measured, key=lambda pair: pair[0])
+        ]
 
     # ------------------------------------------------------------------------------------------ ambient
 

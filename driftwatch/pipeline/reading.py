@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from driftwatch.records import Health, Measurement, Track
+from driftwatch.records import Health, Measurement
 
 
 @dataclass(frozen=True, slots=True)
@@ -13,4 +13,4 @@ class Reading:
 
     ready: int  # stream index at which it could be known: fixed by the grids, not by how the samples arrived
     time_ns: int  # stream time that it speaks of
-    body: Measurement | Track | Health | None  # None: a second of samples has passed
+    body: Measurement | Health | None  # None: a second of samples has passed

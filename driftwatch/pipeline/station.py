@@ -6,26 +6,27 @@ cut into blocks: what a block makes known is sorted by the stream index at which
 
 from __future__ import annotations
 
-import uuid
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from driftwatch import __version__
 from driftwatch.alert.book import AlertBook, AlertSettings, ConditionSettings, WatchedMode
-from driftwatch.pipeline.channel import ChannelLine
+from driftwatch.pipeline.followed import FollowedMode
+from driftwatch.pipeline.gaps import Gaps
+from driftwatch.pipeline.group import ChannelGroup, measured_channels
 from driftwatch.pipeline.reading import Reading
 from driftwatch.records import (
     NS,
     Block,
     Body,
+    Clock,
     Command,
     CommandDone,
     Condition,
     Covariate,
     CovariateValue,
     Envelope,
-    Fault,
     Health,
     Measurement,
     Origin,
@@ -33,6 +34,7 @@ from driftwatch.records import (
     Priority,
     Run,
     StreamItem,
+    Stretch,
     Tick,
     TimeQuality,
     Track,
@@ -41,7 +43,7 @@ from driftwatch.records import (
 )
 
 if TYPE_CHECKING:
-    from driftwatch.config import ChannelConfig, Configuration
+    from driftwatch.config import Configuration
     from driftwatch.stream.source import Source
 
 
@@ -77,16 +79,17 @@ class Station:
         self.header = header
         self._config_sha256 = config.sha256
         self._sources = {source.name: source for source in sources}
-        self._lines = {source.name: list(_lines(config, source, len(sources) == 1)) for source in sources}
-        self._late = {name: max((line.late for line in lines), default=0) for name, lines in self._lines.items()}
-        self._position = dict.fromkeys(self._sources, 0)
-        self._marked_from = dict.fromkeys(self._sources, 0)  # where the samples begin that are marked by seconds
+        self._groups = {source.name: _group(config, source, len(sources) == 1) for source in sources}
+        self._late = {name: group.late for name, group in self._groups.items()}
+        self._gaps = {source.name: Gaps(header.station, source) for source in sources}
+        self._marked_from = {source.name: source.first_sample for source in sources}  # where marks by seconds begin
         self._silent = False  # a tick has come since the last samples
+        self._modes = dict(_modes(config, self._groups, sources))
         self._alerts = _alerts(config, header.station)
         self._sequence = 0
         self._last_of_topic: dict[str, int] = {}
         self._measured: dict[tuple[str, str], int] = {}  # sequence of each mode's last measurement
-        self.now_ns = min(source.start_ns for source in sources)
+        self.now_ns = min(gaps.position_ns for gaps in self._gaps.values())
 
     @property
     def sequence(self) -> int:
@@ -101,7 +104,7 @@ class Station:
     @property
     def samples(self) -> int:
         """Samples taken in so far, per input, of the source that is furthest."""
-        return max(self._position.values())
+        return max(gaps.position for gaps in self._gaps.values())
 
     def begin(self) -> list[Envelope]:
         """Return the record that opens the run."""
@@ -117,7 +120,8 @@ class Station:
         """
         match item:
             case Block():
-                return list(self._block(item))
+                self._refuse_unknown(item.source)
+                return self.measured(item, self._groups[item.source].push(item))
             case Tick():
                 return list(self._tick(item))
             case Command():
@@ -126,28 +130,51 @@ class Station:
             case Covariate():
                 return [self._stamp(CovariateValue(item.name, item.value, item.unit), item.time_ns)]
 
-    def finish(self, reason: str | None = None) -> list[Envelope]:
-        """Return what the last samples still make known, and the record that closes the run."""
-        readings = [reading for lines in self._lines.values() for line in lines for reading in line.finish()]
-        records = list(self._readings(readings))
+    def measured(self, block: Block | Stretch, readings: Sequence[Reading]) -> list[Envelope]:
+        """Take in a block that was measured elsewhere, by groups of channels in file order, and return the records.
+
+        Raises
+        ------
+        ValueError
+            When the block comes from an unknown source, or before one that came already.
+        """
+        self._refuse_unknown(block.source)
+        return list(self._block(block, readings))
+
+    def finish(self, reason: str | None = None, readings: Sequence[Reading] | None = None) -> list[Envelope]:
+        """Return what the last samples still make known, and the record that closes the run.
+
+        `readings` are those that were measured elsewhere; None: here.
+        """
+        last = [one for group in self._groups.values() for one in group.finish()] if readings is None else readings
+        records = list(self._readings(last))
+        records += [
+            self._stamp(health, self.now_ns)
+            for gaps in self._gaps.values()
+            if (health := gaps.finish(self.now_ns)) is not None
+        ]
         return [*records, self._stamp(self._run_record(Phase.END, reason), self.now_ns)]
+
+    def note(self, body: Health | Clock) -> Envelope:
+        """Return the record of what the daemon knows of itself or of a sample clock, at this point of the stream."""
+        return self._stamp(body, self.now_ns)
 
     # ------------------------------------------------------------------------------------------ items
 
-    def _block(self, block: Block) -> Iterator[Envelope]:
-        if block.source not in self._lines:
-            raise ValueError(f"a block of source {block.source!r} came; known are {', '.join(self._lines)}")
-        end = block.first_sample + len(block.samples)
+    def _refuse_unknown(self, source: str) -> None:
+        if source not in self._groups:
+            raise ValueError(f"a block of source {source!r} came; known are {', '.join(self._groups)}")
+
+    def _block(self, block: Block | Stretch, measured: Sequence[Reading]) -> Iterator[Envelope]:
         source = self._sources[block.source]
+        end = block.first_sample + block.count
         self.now_ns = max(self.now_ns, sample_time_ns(source.start_ns, end, source.rate_hz))
-        readings = list(self._gap(block))
-        for line in self._lines[block.source]:
-            readings.extend(line.push(block.first_sample, block.samples))
+        readings = list(self._gap(block, end))
+        readings.extend(measured)
         readings.extend(self._seconds(block, end))
-        self._position[block.source] = end
         yield from self._readings(readings)
 
-    def _seconds(self, block: Block, end: int) -> Iterator[Reading]:
+    def _seconds(self, block: Block | Stretch, end: int) -> Iterator[Reading]:
         """Yield a mark for each second of samples, once all that can be known of it is known.
 
         The alerts' timers see these marks and not the blocks, so that they do not depend on how samples arrive.
@@ -159,69 +186,43 @@ class Station:
         for second in range(first, (end - late) // source.rate_hz + 1):
             yield Reading(second * source.rate_hz + late, source.start_ns + second * NS, None)
 
-    def _rate(self, block: Block) -> int:
-        return self._sources[block.source].rate_hz
-
-    def _gap(self, block: Block) -> Iterator[Reading]:
+    def _gap(self, block: Block | Stretch, end: int) -> Iterator[Reading]:
         """Yield begin and end of the incident when samples are missing before a block."""
-        expected = self._position[block.source]
-        lost = block.first_sample - expected
-        if lost <= 0:
-            return
         if self._silent:
             self._silent = False
             self._marked_from[block.source] = block.first_sample
             yield Reading(block.first_sample, block.time_ns, None)
-        rate_hz = self._rate(block)
-        since_ns = block.time_ns - sample_time_ns(0, lost, rate_hz)
-        incident = str(uuid.uuid5(uuid.NAMESPACE_URL, f"{self.header.station}/{block.source}/gap/{since_ns}"))
-        for phase, time_ns, missing in ((Phase.BEGIN, since_ns, 0), (Phase.END, block.time_ns, lost)):
-            health = Health(
-                channel=None,
-                fault=Fault.GAP,
-                phase=phase,
-                incident=incident,
-                since_ns=since_ns,
-                seconds=missing / rate_hz,
-                first_sample=expected,
-                lost_samples=missing,
-                value=None,
-                limit=None,
-                unit=None,
-                detail=f"source {block.source}: samples are missing; windows that touch them are not used",
-            )
-            yield Reading(block.first_sample, time_ns, health)
+        for health in self._gaps[block.source].block(block.first_sample, end, block.cause):
+            yield Reading(block.first_sample, health.since_ns if health.phase is Phase.BEGIN else block.time_ns, health)
 
     def _tick(self, tick: Tick) -> Iterator[Envelope]:
         self.now_ns = max(self.now_ns, tick.time_ns)
         if not self._silent:
             self._silent = True
-            last_ns = max(
-                sample_time_ns(source.start_ns, self._position[name], source.rate_hz)
-                for name, source in self._sources.items()
-            )
+            last_ns = max(gaps.position_ns for gaps in self._gaps.values())
             yield from (self._stamp(alert, last_ns) for alert in self._alerts.on_samples(last_ns))
-        for lines in self._lines.values():
-            for line in lines:
-                for track in line.tick(tick.time_ns):
-                    yield from self._judged(track, tick.time_ns)
+            for gaps in self._gaps.values():
+                if (health := gaps.tick(tick.cause)) is not None:
+                    yield self._stamp(health, health.since_ns)
+        for mode in self._modes.values():
+            if (track := mode.tick(tick.time_ns)) is not None:
+                yield from self._judged(track, tick.time_ns)
         yield from (self._stamp(alert, tick.time_ns) for alert in self._alerts.on_tick(tick.time_ns))
 
     # ------------------------------------------------------------------------------------------ records
 
-    def _readings(self, readings: list[Reading]) -> Iterator[Envelope]:
+    def _readings(self, readings: Sequence[Reading]) -> Iterator[Envelope]:
         """Stamp readings in the order in which they could be known; the sort keeps channels and modes in file order."""
         for reading in sorted(readings, key=lambda reading: reading.ready):
             if reading.body is None:
                 yield from (self._stamp(alert, reading.time_ns) for alert in self._alerts.on_samples(reading.time_ns))
                 continue
-            if isinstance(reading.body, Track):
-                yield from self._judged(reading.body, reading.time_ns)
-                continue
             envelope = self._stamp(reading.body, reading.time_ns)
-            if isinstance(reading.body, Measurement):
-                self._measured[reading.body.channel, reading.body.mode] = envelope.sequence
             yield envelope
+            if isinstance(reading.body, Measurement):
+                about = (reading.body.channel, reading.body.mode)
+                self._measured[about] = envelope.sequence
+                yield from self._judged(*self._modes[about].measured(reading.body, reading.time_ns))
 
     def _judged(self, track: Track, time_ns: int) -> Iterator[Envelope]:
         """Yield a track point and the alert transitions that it causes."""
@@ -261,16 +262,20 @@ class Station:
         )
 
 
-def _lines(config: Configuration, source: Source, only: bool) -> Iterator[ChannelLine]:
-    """Yield the channels that a source feeds and that have modes, in file order."""
-    for channel in config.channel:
-        modes = [mode for mode in config.mode if mode.channel == channel.name]
-        if modes and _feeds(source, channel, only):
-            yield ChannelLine(channel, modes, source.rate_hz, source.start_ns)
+def _group(config: Configuration, source: Source, only: bool) -> ChannelGroup:
+    return ChannelGroup(config, source, [channel.name for channel in measured_channels(config, source, only=only)])
 
 
-def _feeds(source: Source, channel: ChannelConfig, only: bool) -> bool:
-    return channel.source == source.name or (only and channel.source is None)
+def _modes(
+    config: Configuration, groups: dict[str, ChannelGroup], sources: Sequence[Source]
+) -> Iterator[tuple[tuple[str, str], FollowedMode]]:
+    """Yield what follows each mode, by channel and mode, in the order of the channels."""
+    for source in sources:
+        start_ns = sample_time_ns(source.start_ns, source.first_sample, source.rate_hz)
+        for line in groups[source.name].lines:
+            modes = [mode for mode in config.mode if mode.channel == line.name]
+            for mode, step_s in zip(modes, line.steps_s, strict=True):
+                yield (mode.channel, mode.name), FollowedMode(mode, step_s, start_ns)
 
 
 def _alerts(config: Configuration, station: str) -> AlertBook:

@@ -17,15 +17,19 @@ def with_ticks(blocks: Iterable[Block], rate_hz: int) -> Iterator[Block | Tick]:
     for block in blocks:
         if end is not None and block.first_sample > end:
             start_ns = block.time_ns - sample_time_ns(0, block.first_sample, rate_hz)
-            yield from _ticks(sample_time_ns(start_ns, end, rate_hz), block.time_ns)
+            for now_ns in tick_times(sample_time_ns(start_ns, end, rate_hz)):
+                if now_ns >= block.time_ns:
+                    break
+                yield Tick(now_ns, block.cause)
         end = block.first_sample + len(block.samples)
         yield block
         del block  # it may be large: the next one is read only now
 
 
-def _ticks(from_ns: int, until_ns: int) -> Iterator[Tick]:
+def tick_times(from_ns: int) -> Iterator[int]:
+    """Yield the stream times of the ticks of a silence that began at `from_ns`, without end."""
     now_ns = from_ns + NS
-    while now_ns < until_ns:
-        yield Tick(now_ns)
+    while True:
+        yield now_ns
         silent_s = (now_ns - from_ns) // NS
         now_ns += NS if silent_s < 3600 else 60 * NS if silent_s < 86_400 else 3600 * NS

@@ -53,6 +53,7 @@ class Source:
     assumed: tuple[str, ...] = ()
     warnings: tuple[str, ...] = ()
     length: int | None = None
+    first_sample: int = 0
 
     def blocks(self, frames: int) -> Iterator[Block]:
         rng = np.random.default_rng(0)

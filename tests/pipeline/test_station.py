@@ -82,6 +82,7 @@ class Held:
     samples: np.ndarray
     name: str = "held"
     rate_hz: int = RATE_HZ
+    first_sample: int = 0
     start_ns: int = START_NS
     time_quality: TimeQuality = TimeQuality.ASSUMED
     sources: tuple[str, ...] = ("memory",)
