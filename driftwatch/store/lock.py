@@ -1,4 +1,4 @@
-"""One writer at a time: a lock beside the database that dies with its holder."""
+"""One at a time: a lock on a file that dies with its holder, and the one beside the database."""
 
 from __future__ import annotations
 
@@ -13,12 +13,68 @@ if TYPE_CHECKING:
     from typing import Self
 
 
-class WriterLock:
-    """The right to write, held from construction until `release`.
+class HeldError(Exception):
+    """Somebody else holds the lock; translated by whoever asked for it, who knows what it is for.
 
-    The lock is the operating system's (``flock``) on ``NAME.lock``: it ends with the process however that ends, so a
-    stale file never locks anybody out. The file tells who holds it and stays behind on purpose, since removing it
-    could hand the same lock to two.
+    Attributes
+    ----------
+    holder
+        ``process PID (station 'NAME')``, as the file tells it.
+    """
+
+    def __init__(self, holder: str) -> None:
+        super().__init__(f"{holder} holds the lock")
+        self.holder = holder
+
+
+class HolderLock:
+    """The right to something, held from construction until `release`.
+
+    The lock is the operating system's (``flock``) on a file: it ends with the process however that ends, so a stale
+    file never locks anybody out. The file tells who holds it and stays behind on purpose, since removing it could hand
+    the same lock to two. Programs that the holder starts do not inherit it.
+
+    Raises
+    ------
+    HeldError
+        When another process, or another holder in this one, has it.
+    OSError
+        When the file cannot be opened for writing, or its file system knows no locks.
+    """
+
+    def __init__(self, path: Path, station: str) -> None:
+        self._file = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
+        try:
+            fcntl.flock(self._file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            os.ftruncate(self._file, 0)
+            os.pwrite(self._file, f"{os.getpid()} {station}\n".encode(), 0)
+        except BlockingIOError:
+            holder = self._holder()
+            self.release()
+            raise HeldError(holder) from None
+        except OSError:
+            self.release()
+            raise
+
+    def _holder(self) -> str:
+        pid, _, station = os.pread(self._file, 200, 0).decode(errors="replace").strip().partition(" ")
+        return f"process {pid or 'unknown'} (station {station or 'unknown'!r})"
+
+    def release(self) -> None:
+        """Let the next one in."""
+        if self._file >= 0:
+            os.close(self._file)
+            self._file = -1
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.release()
+
+
+class WriterLock(HolderLock):
+    """The right to write to a database, on ``NAME.lock`` beside it.
 
     Raises
     ------
@@ -29,35 +85,12 @@ class WriterLock:
     """
 
     def __init__(self, database: Path, station: str) -> None:
-        self._path = database.with_name(database.name + ".lock")
         try:
-            self._file = os.open(self._path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
+            super().__init__(database.with_name(database.name + ".lock"), station)
         except OSError as error:
             raise unreachable(database, error) from None
-        try:
-            fcntl.flock(self._file, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except OSError:
-            holder = self._holder()
-            os.close(self._file)
+        except HeldError as error:
             raise StoreBusyError(
-                f"{database}: {holder} is writing to this database; expected to be its only writer; "
+                f"{database}: {error.holder} is writing to this database; expected to be its only writer; "
                 "stop that process, or name another database with --store"
             ) from None
-        os.ftruncate(self._file, 0)
-        os.pwrite(self._file, f"{os.getpid()} {station}\n".encode(), 0)
-
-    def _holder(self) -> str:
-        pid, _, station = os.pread(self._file, 200, 0).decode(errors="replace").strip().partition(" ")
-        return f"process {pid or 'unknown'} (station {station or 'unknown'!r})"
-
-    def release(self) -> None:
-        """Let the next writer in."""
-        if self._file >= 0:
-            os.close(self._file)
-            self._file = -1
-
-    def __enter__(self) -> Self:
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.release()
