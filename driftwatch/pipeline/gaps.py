@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 from driftwatch.records import Fault, Health, Phase, sample_time_ns
 
 if TYPE_CHECKING:
-    from driftwatch.stream.source import Source
+    from driftwatch.stream.source import SourceFacts
 
 WORDS = {
     Fault.GAP: "samples are missing",
@@ -27,7 +27,7 @@ class Gaps:
     when the samples are back.
     """
 
-    def __init__(self, station: str, source: Source) -> None:
+    def __init__(self, station: str, source: SourceFacts) -> None:
         self._station = station
         self._source = source
         self.position = source.first_sample  # stream index of the next sample

@@ -15,7 +15,7 @@ from driftwatch.pipeline.reading import Reading
 if TYPE_CHECKING:
     from driftwatch.config import ChannelConfig, Configuration
     from driftwatch.records import Block
-    from driftwatch.stream.source import Source
+    from driftwatch.stream.source import SourceFacts
 
 
 class ChannelGroup:
@@ -39,7 +39,7 @@ class ChannelGroup:
     """
 
     def __init__(
-        self, config: Configuration, source: Source, channels: Iterable[str], first_sample: int | None = None
+        self, config: Configuration, source: SourceFacts, channels: Iterable[str], first_sample: int | None = None
     ) -> None:
         wanted = set(channels)
         first = source.first_sample if first_sample is None else first_sample
@@ -80,7 +80,7 @@ class ChannelGroup:
         return [reading for line in self.lines for reading in line.finish()]
 
 
-def measured_channels(config: Configuration, source: Source, *, only: bool) -> list[ChannelConfig]:
+def measured_channels(config: Configuration, source: SourceFacts, *, only: bool) -> list[ChannelConfig]:
     """Return the channels that a source feeds and that have modes, in file order.
 
     With `only` the source is the only one and also feeds the channels that name none.

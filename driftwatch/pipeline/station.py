@@ -44,7 +44,7 @@ from driftwatch.records import (
 
 if TYPE_CHECKING:
     from driftwatch.config import Configuration
-    from driftwatch.stream.source import Source
+    from driftwatch.stream.source import SourceFacts
 
 
 @dataclass(frozen=True, slots=True)
@@ -75,7 +75,7 @@ class Station:
         When a channel's source is not among several, or a search band does not fit the sample rate.
     """
 
-    def __init__(self, config: Configuration, header: RunHeader, sources: Sequence[Source]) -> None:
+    def __init__(self, config: Configuration, header: RunHeader, sources: Sequence[SourceFacts]) -> None:
         self.header = header
         self._config_sha256 = config.sha256
         self._sources = {source.name: source for source in sources}
@@ -262,12 +262,12 @@ class Station:
         )
 
 
-def _group(config: Configuration, source: Source, only: bool) -> ChannelGroup:
+def _group(config: Configuration, source: SourceFacts, only: bool) -> ChannelGroup:
     return ChannelGroup(config, source, [channel.name for channel in measured_channels(config, source, only=only)])
 
 
 def _modes(
-    config: Configuration, groups: dict[str, ChannelGroup], sources: Sequence[Source]
+    config: Configuration, groups: dict[str, ChannelGroup], sources: Sequence[SourceFacts]
 ) -> Iterator[tuple[tuple[str, str], FollowedMode]]:
     """Yield what follows each mode, by channel and mode, in the order of the channels."""
     for source in sources:

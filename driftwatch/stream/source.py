@@ -44,11 +44,8 @@ class NotWrittenError(StreamError):
     """A recording could not be written; nothing is left of it."""
 
 
-class Source(Protocol):
-    """Samples from somewhere, as one ordered stream of blocks.
-
-    Nothing here waits for real time: whoever wants a pace keeps it.
-    """
+class SourceFacts(Protocol):
+    """What is known of a source before its first sample."""
 
     @property
     def name(self) -> str:
@@ -99,6 +96,13 @@ class Source(Protocol):
     def length(self) -> int | None:
         """Samples expected in all, gaps included; None: no end is known."""
         ...
+
+
+class Source(SourceFacts, Protocol):
+    """Samples from somewhere, as one ordered stream of blocks.
+
+    Nothing here waits for real time: whoever wants a pace keeps it.
+    """
 
     def blocks(self, frames: int) -> Iterator[Block]:
         """Yield the stream from its begin in blocks of at most `frames` samples.
