@@ -131,6 +131,23 @@ def test_what_is_valid_and_not_served_is_explained_with_who_will_refuse_it(tmp_p
     assert 'run refuses this: source[1] "card" . kind: got "soundcard", not served by this version' in done.stdout
 
 
+@pytest.mark.parametrize("usable", ["[900, 9000]", "[10, 900]", "[900, 950]", "[10, 100]"])
+def test_a_search_band_that_leaves_what_the_sensor_is_usable_for_is_remarked_at_either_end(
+    tmp_path: Path, usable: str
+) -> None:
+    file = written(tmp_path, SOUND.replace("[[mode]]", f"[channel.sensor]\nusable_hz = {usable}\n[[mode]]"))
+    low, high = json.loads(usable)
+    words = f'mode "m": search_hz leaves what the sensor on "a.b" is usable for, {low} to {high} Hz'
+    assert check(file).stdout.count(words) == 1
+    assert sum(words in line for line in json.loads(check("--json", file).stdout)["remarks"]) == 1
+
+
+@pytest.mark.parametrize("usable", ["[820, 980]", "[10, 9000]"])
+def test_a_search_band_inside_what_the_sensor_is_usable_for_is_not_remarked(tmp_path: Path, usable: str) -> None:
+    file = written(tmp_path, SOUND.replace("[[mode]]", f"[channel.sensor]\nusable_hz = {usable}\n[[mode]]"))
+    assert "usable" not in check(file).stdout
+
+
 def test_a_missing_file_is_one_line_and_exit_status_2(tmp_path: Path) -> None:
     done = check(tmp_path / "no.toml")
     assert done.exit_code == 2
