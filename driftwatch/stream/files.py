@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING, BinaryIO
 import numpy as np
 import soundfile
 
+from driftwatch.records import Fault
 from driftwatch.stream.source import SourceRefusedError
 
 if TYPE_CHECKING:
@@ -41,6 +42,22 @@ class RecordingFile:
     def seconds(self) -> float:
         """Length of what can be read, in seconds."""
         return self.frames / self.rate_hz
+
+
+@dataclass(frozen=True, slots=True)
+class Piece:
+    """Samples of one recording that follow each other, with their place in the stream."""
+
+    file: RecordingFile
+    first_sample: int  # index of its first sample, counted from the start of the stream
+    frames: int  # samples
+    offset: int = 0  # where in the recording it begins, in samples
+    cause: Fault = Fault.GAP  # why samples are missing before it, where they are
+
+    @property
+    def end(self) -> int:
+        """Index of the sample after its last."""
+        return self.first_sample + self.frames
 
 
 def inspect_recording(path: Path) -> RecordingFile:

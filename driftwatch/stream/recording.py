@@ -10,25 +10,13 @@ from pathlib import Path
 import numpy as np
 import soundfile
 
-from driftwatch.records import NS, Block, TimeQuality, sample_time_ns, time_text
-from driftwatch.stream.files import RecordingFile, inspect_recording
+from driftwatch.records import NS, Block, Fault, TimeQuality, sample_time_ns, time_text
+from driftwatch.stream.files import Piece, RecordingFile, inspect_recording
+from driftwatch.stream.segments import Segments, open_segments
 from driftwatch.stream.source import SourceFailedError, SourceRefusedError
 
 JOIN_S = 2.0
 """Files whose dates lie no further apart than this are taken as joined: some file systems date to 2 s only."""
-
-
-@dataclass(frozen=True, slots=True)
-class Piece:
-    """One recording with its place in the stream."""
-
-    file: RecordingFile
-    first_sample: int  # index of its first sample, counted from the start of the stream
-
-    @property
-    def end(self) -> int:
-        """Index of the sample after its last."""
-        return self.first_sample + self.file.frames
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,7 +54,8 @@ class RecordingSource:
         for piece in self.pieces:
             for first_sample, samples in _read(piece, frames):
                 time_ns = sample_time_ns(self.start_ns, first_sample, self.rate_hz)
-                yield Block(self.name, first_sample, time_ns, samples)
+                cause = piece.cause if first_sample == piece.first_sample else Fault.GAP
+                yield Block(self.name, first_sample, time_ns, samples, cause)
                 del samples  # they may be large: the next ones are read only now
 
 
@@ -78,15 +67,17 @@ def open_recordings(
     rate_hz: int | None = None,
     least_inputs: int = 1,
 ) -> RecordingSource:
-    """Check recordings and lay them out as one stream, in the order given; nothing is held open yet.
+    """Check recordings and lay them out as one stream; nothing is held open yet.
 
     Parameters
     ----------
     paths : iterable of path
-        WAV, FLAC and whatever else the sound-file library reads; at least one.
+        WAV, FLAC and whatever else the sound-file library reads, in their order; or segments of the raw recorder in
+        any order, or folders that hold some; at least one.
     start_ns : int or None
         Stream time of the first sample. None: the first file's date less its duration, since a recorder touches its
-        file last when it ends. Either way the time is assumed, and `RecordingSource.assumed` says how.
+        file last when it ends. Either way the time is assumed, and `RecordingSource.assumed` says how. Segments say
+        themselves when they were taken: None is the only choice there.
     name : str
         What the configuration calls the source.
     rate_hz : int, optional
@@ -101,14 +92,19 @@ def open_recordings(
 
     Notes
     -----
+    Segments have exact places by their side files, see `segments`; the rest of this is about other recordings.
     Where the next file begins follows from the files' dates: within `JOIN_S` of the end of the one before they join
     exactly, later there is a gap of as many samples, and where the dates overlap (copies carry the date of the
     copying) they say nothing and the files are taken to follow directly.
     """
-    files = _inspect_all([Path(path) for path in paths])
+    given = [Path(path) for path in paths]
+    segments = open_segments(given, start_ns)
+    files = segments.files if segments else _inspect_all(given)
     problems = [problem for file in files for problem in _misfits(file, files[0], rate_hz, least_inputs)]
     if problems:
         raise SourceRefusedError(problems)
+    if segments:
+        return _of_segments(segments, name, given)
     pieces, assumed, warnings = lay_out(files)
     return RecordingSource(
         name=name,
@@ -120,6 +116,20 @@ def open_recordings(
         assumed=(_start_words(files[0], start_ns), *assumed),
         warnings=(*_cut_words(files), *warnings),
         pieces=pieces,
+    )
+
+
+def _of_segments(segments: Segments, name: str, given: Sequence[Path]) -> RecordingSource:
+    return RecordingSource(
+        name=name,
+        rate_hz=segments.identity.rate_hz,
+        inputs=segments.identity.inputs,
+        start_ns=segments.identity.start_ns,
+        time_quality=segments.identity.time_quality,
+        sources=tuple(str(path) for path in given),
+        assumed=(),
+        warnings=segments.warnings,
+        pieces=segments.pieces,
     )
 
 
@@ -179,7 +189,7 @@ def _inputs(count: int) -> str:
 
 def lay_out(files: Sequence[RecordingFile]) -> tuple[tuple[Piece, ...], tuple[str, ...], tuple[str, ...]]:
     """Return the files' places in the stream, what is assumed by it, and what to warn of, both in words."""
-    pieces = [Piece(files[0], 0)]
+    pieces = [Piece(files[0], 0, files[0].frames)]
     assumed, warnings = [], []
     joined = 0
     for before, file in itertools.pairwise(files):
@@ -196,7 +206,7 @@ def lay_out(files: Sequence[RecordingFile]) -> tuple[tuple[Piece, ...], tuple[st
             warnings.append(f"{text} and so say nothing; correct the dates if there was a pause")
         else:
             joined += 1
-        pieces.append(Piece(file, pieces[-1].end + gap))
+        pieces.append(Piece(file, pieces[-1].end + gap, file.frames))
     if joined:
         assumed.append(f"files dated within {JOIN_S:g} s of each other are taken to join without a gap: {joined} times")
     assumed.extend(_cut_words(files))
@@ -239,8 +249,10 @@ def _read(piece: Piece, frames: int) -> Iterator[tuple[int, np.ndarray[tuple[int
     path, done = piece.file.path, 0
     try:
         with soundfile.SoundFile(path) as file:
-            while done < piece.file.frames:
-                samples = np.empty((min(frames, piece.file.frames - done), piece.file.inputs), np.float32)
+            if piece.offset:
+                file.seek(piece.offset)
+            while done < piece.frames:
+                samples = np.empty((min(frames, piece.frames - done), piece.file.inputs), np.float32)
                 came = len(file.read(out=samples))
                 if came < len(samples):
                     raise _stopped(piece, done + came, "it has become shorter")
@@ -252,7 +264,7 @@ def _read(piece: Piece, frames: int) -> Iterator[tuple[int, np.ndarray[tuple[int
 
 
 def _stopped(piece: Piece, done: int, why: str) -> SourceFailedError:
-    at, expected = done / piece.file.rate_hz, piece.file.seconds
+    at, expected = (piece.offset + done) / piece.file.rate_hz, piece.file.seconds
     return SourceFailedError(
         f"{piece.file.path}: reading stopped at {at:.3f} s ({why}); expected {expected:.3f} s as when it was checked; "
         "see that nothing writes to it, and begin again"
