@@ -13,7 +13,9 @@ from driftwatch import __version__
 COMMANDS = {
     "run": "Watch live, in the foreground, until interrupted.",
     "replay": "Send recordings through the same pipeline, as fast as it can.",
+    "status": "Tell whether a daemon measures and what stands, worst first.",
     "check": "Read and explain a configuration.",
+    "devices": "Print the sound inputs, and what they hear.",
     "simulate": "Make a recording of resonators with known truth.",
     "readings": "Print stored measurements and track points.",
     "runs": "Print what runs a store holds.",
