@@ -11,7 +11,19 @@ from collections.abc import Iterable, Sequence
 import click
 
 from driftwatch.cli.figures import duration, known_with_std, moment, with_interval
-from driftwatch.records import NS, Alert, AlertState, Envelope, Fault, Health, Phase, Track, TrackStatus, time_text
+from driftwatch.records import (
+    NS,
+    Alert,
+    AlertState,
+    Envelope,
+    Fault,
+    Health,
+    Heartbeat,
+    Phase,
+    Track,
+    TrackStatus,
+    time_text,
+)
 
 WIDTH = 110
 """No line is wider, nor wider than the terminal; what is longer goes on in the next one."""
@@ -21,14 +33,18 @@ NAME_WIDTH = 34
 
 LEGEND = "Times are UTC, frequencies ± standard uncertainty, Q with its 95 % interval."
 
+_MISSING = (Fault.GAP, Fault.OVERFLOW, Fault.SLOW_CONSUMER, Fault.DEVICE)
+"""Faults for which samples never came."""
+
 _INDENT = " " * 10  # under the text, beside the time
 _VALUE = re.compile(r"(\d) (\S)")
 
 
-def folded(text: str, indent: str = "") -> str:
-    """Return a text in lines of at most `WIDTH` columns, the second and later ones indented."""
+def folded(text: str, indent: str = "", width: int | None = None) -> str:
+    """Return a text in lines of at most `width` columns, or `WIDTH`, the second and later ones indented."""
     joined = _VALUE.sub("\\1\N{NO-BREAK SPACE}\\2", text)  # a value and its unit stay on one line
-    width = min(WIDTH, shutil.get_terminal_size().columns) if sys.stdout.isatty() else WIDTH
+    if width is None:
+        width = min(WIDTH, shutil.get_terminal_size().columns) if sys.stdout.isatty() else WIDTH
     lines = textwrap.fill(joined, width, subsequent_indent=indent, break_on_hyphens=False, replace_whitespace=False)
     return lines.replace("\N{NO-BREAK SPACE}", " ")
 
@@ -50,7 +66,7 @@ def alert_line(alert: Alert) -> str:
     words = f"{alert.alert}: {alert.reason or alert.state}"
     if alert.state is alert.previous_state:
         return f"{alert.alert}: can tell again" if alert.determinate else f"CANNOT TELL  {words}"
-    return f"{'back inside' if _is_back(alert) else f'ALERT {alert.priority}'}  {words}"
+    return f"{'back inside' if is_back(alert) else f'ALERT {alert.priority}'}  {words}"
 
 
 def health_line(health: Health) -> str:
@@ -62,15 +78,24 @@ def health_line(health: Health) -> str:
     return f"FAULT  {where}: {fault}: {health.detail or 'no more is known'}"
 
 
-def _is_back(alert: Alert) -> bool:
+def is_back(alert: Alert) -> bool:
+    """Say whether an alert has come back, acknowledged or not."""
     return alert.state in (AlertState.NORMAL, AlertState.RETURNED_UNACKNOWLEDGED)
 
 
-def _elided(name: str) -> str:
-    """Return a name no longer than `NAME_WIDTH`: both its ends tell more than its middle."""
-    if len(name) <= NAME_WIDTH:
+def elided(names: Sequence[str], width: int = NAME_WIDTH) -> list[str]:
+    """Return names no longer than `width`, except those that would then be the same as others.
+
+    Both ends of a name tell more than its middle.
+    """
+    short = [_cut(name, width) for name in names]
+    return [cut if short.count(cut) == 1 else name for name, cut in zip(names, short, strict=True)]
+
+
+def _cut(name: str, width: int) -> str:
+    if len(name) <= width:
         return name
-    kept = NAME_WIDTH - 1
+    kept = width - 1
     return f"{name[: kept // 2]}…{name[kept // 2 - kept :]}"
 
 
@@ -86,9 +111,10 @@ class RunView:
     """
 
     def __init__(self, modes: Iterable[tuple[str, str]], every_s: float | None) -> None:
-        names = {_key(channel, mode): _elided(f"{channel} / {mode}") for channel, mode in modes}
-        width = max(map(len, names.values()), default=0)
-        self._names = {key: name.ljust(width) for key, name in names.items()}
+        known = {key_of(channel, mode): f"{channel} / {mode}" for channel, mode in modes}
+        names = elided(list(known.values()))
+        width = max(map(len, names), default=0)
+        self._names = {key: name.ljust(width) for key, name in zip(known, names, strict=True)}
         self._every_ns = None if every_s is None else round(every_s * NS)
         self._due_ns: int | None = None
         self._tracks: dict[tuple[str, str], Track] = {}
@@ -98,6 +124,7 @@ class RunView:
         self._missing_s = 0.0
         self._first_ns: int | None = None
         self._last_ns = 0
+        self._state = ""
         self.run = ""
 
     @property
@@ -108,7 +135,7 @@ class RunView:
     def show(self, envelopes: Sequence[Envelope]) -> None:
         """Take a group of records and print what is worth a line; before the first, what the figures mean."""
         if self._first_ns is None:
-            sys.stdout.write(f"{folded(LEGEND)}\n")
+            self._put(folded(LEGEND))
         for envelope in envelopes:
             self._first_ns = envelope.time_ns if self._first_ns is None else self._first_ns
             self._last_ns = max(self._last_ns, envelope.time_ns)
@@ -117,11 +144,24 @@ class RunView:
                 case Alert() as alert:
                     self._alert(alert, envelope.time_ns)
                 case Track() as track:
-                    self._tracks[_key(track.channel, track.mode)] = track
+                    self._tracks[key_of(track.channel, track.mode)] = track
                 case Health() as health if health.phase is not Phase.CONTINUE:
                     self._health(health, envelope.time_ns)
         self._round()
         sys.stdout.flush()
+
+    def status(self, text: str) -> None:
+        """Tell what the run itself does, such as wait for its device; the same text again is no news."""
+        if text and text != self._state:
+            sys.stdout.flush()
+            click.echo(text, err=True)  # standard output is for what was measured
+        self._state = text
+
+    def beat(self, heartbeat: Heartbeat) -> None:
+        """Take a sign of life; lines have no use for it."""
+
+    def close(self) -> None:
+        """Leave the terminal as it was found; nothing more is shown after it but the summary."""
 
     def summary(self) -> list[str]:
         """Return the lines that close a run."""
@@ -146,15 +186,15 @@ class RunView:
         if new and known and not moved:
             return  # every alert can be told for a first time: no news
         self._raised += fired
-        self._returned += moved and _is_back(alert)
+        self._returned += moved and is_back(alert)
         if fired:
             self._standing[alert.alert] = alert
-        elif _is_back(alert):
+        elif is_back(alert):
             self._standing.pop(alert.alert, None)
         self._say(time_ns, alert_line(alert), "red" if fired else "green" if moved else "yellow")
 
     def _health(self, health: Health, time_ns: int) -> None:
-        if health.fault is Fault.GAP and health.phase is Phase.END:
+        if health.fault in _MISSING and health.phase is Phase.END:
             self._missing_s += health.seconds
         self._say(time_ns, health_line(health), "yellow")
 
@@ -169,14 +209,16 @@ class RunView:
     def _mode_lines(self) -> list[str]:
         return [mode_line(name, self._tracks.get(key)).rstrip() for key, name in self._names.items()]
 
-    @staticmethod
-    def _say(time_ns: int, text: str, colour: str | None = None) -> None:
-        lines = folded(f"{time_text(time_ns)[11:19]}  {text}", _INDENT)
+    def _say(self, time_ns: int, text: str, colour: str | None = None) -> None:
+        self._put(folded(f"{time_text(time_ns)[11:19]}  {text}", _INDENT), colour)
+
+    def _put(self, lines: str, colour: str | None = None) -> None:
         if colour and sys.stdout.isatty():
             lines = f"{lines[:10]}{click.style(lines[10:], fg=colour, bold=colour == 'red')}"
         # Not by click: it writes past whoever stands in for standard output to keep a progress bar below the lines.
         sys.stdout.write(f"{lines}\n")
 
 
-def _key(channel: str, mode: str) -> tuple[str, str]:
-    return channel.casefold(), mode.casefold()  # names are unique without regard to case
+def key_of(channel: str, mode: str) -> tuple[str, str]:
+    """Return by what a mode is known: names are unique without regard to case."""
+    return channel.casefold(), mode.casefold()

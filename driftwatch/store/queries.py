@@ -10,6 +10,7 @@ import sqlalchemy as sa
 
 from driftwatch.records import Alert, AlertState, Envelope, Method, Origin, Phase, Run, TimeQuality
 from driftwatch.store.errors import StoreError, unreachable
+from driftwatch.store.latest import Latest, latest_of
 from driftwatch.store.location import database_path
 from driftwatch.store.opening import reading_engine, refuse_other_schema, revision_of
 from driftwatch.store.rows import HeaderKey, form_of
@@ -139,6 +140,20 @@ class Reader:
         try:
             with self._engine.begin() as connection:
                 return _summaries(connection)
+        except sa.exc.DBAPIError as error:
+            raise unreachable(self.path, error) from error
+
+    def latest(self, run: str | None = None, after: int | None = None) -> Latest | None:
+        """Return how things stand in a run, see `latest_of`; fast however much the database holds.
+
+        Raises
+        ------
+        StoreError
+            When the database cannot be read.
+        """
+        try:
+            with self._engine.begin() as connection:
+                return latest_of(connection, run, after)
         except sa.exc.DBAPIError as error:
             raise unreachable(self.path, error) from error
 
