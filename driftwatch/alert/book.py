@@ -88,6 +88,7 @@ class AlertBook:
 
     def __init__(self, station: str, modes: Sequence[WatchedMode], settings: AlertSettings | None = None) -> None:
         settings = AlertSettings() if settings is None else settings
+        self._station = station
         self._modes = {(each.channel, each.mode): _ModeAlerts(station, each, settings) for each in modes}
         subject = _condition_subject(station, settings.no_data.name, Condition.NO_DATA, settings.no_data)
         self._no_data = Watch(subject, Life())
@@ -137,6 +138,28 @@ class AlertBook:
         records += self._see_no_data(Finding.VIOLATED, time_ns)
         return records + self._look_at_silent_modes(time_ns)
 
+    def reload(self, modes: Sequence[WatchedMode], settings: AlertSettings) -> list[Alert]:
+        """Take over other bands and settings of the same modes; return the ends of alerts that are no more.
+
+        An alert that keeps its name goes on where it stands, and is judged by the new limits and delays from now on.
+
+        Raises
+        ------
+        ValueError
+            When the modes are not the same ones.
+        """
+        if {(each.channel, each.mode) for each in modes} != self._modes.keys():
+            raise ValueError("a reload has other modes; expected the same ones: that needs a restart")
+        before = {watch.subject.alert: watch for watch in self._watches()}
+        for each in modes:
+            self._modes[each.channel, each.mode].reload(self._station, each, settings, before)
+        name = settings.no_data.name
+        subject = _condition_subject(self._station, name, Condition.NO_DATA, settings.no_data)
+        self._no_data = _taken_over(before, subject, Life())
+        gone = [watch for watch in before.values() if all(watch is not one for one in self._watches())]
+        ends = [watch.withdraw("no longer watched: the configuration was reloaded") for watch in gone]
+        return [end for end in ends if end is not None]
+
     def standing(self) -> Standing:
         """Return what stands now."""
         every = [_standing(watch) for watch in self._watches()]
@@ -173,6 +196,14 @@ class _ModeAlerts:
         self._last_words = str(TrackStatus.SEARCHING)
         self._last_because: tuple[int, ...] = ()
         self.followed = False
+
+    def reload(self, station: str, watched: WatchedMode, settings: AlertSettings, before: dict[str, Watch]) -> None:
+        self._bands = [
+            (band, _taken_over(before, _band_subject(station, watched, band), UNKNOWN)) for band in watched.bands
+        ]
+        name = f"{watched.channel}/{watched.mode}/{settings.lost.name}"
+        subject = _condition_subject(station, name, Condition.LOST, settings.lost, watched)
+        self._lost = _taken_over(before, subject, Life())
 
     def watches(self) -> Iterable[Watch]:
         for _, watch in self._bands:
@@ -212,6 +243,15 @@ class _ModeAlerts:
         if event is Event.RETURNED:
             return "tracked again"
         return f"the mode could not be told for {held_s:.6g} s: {self._last_words}"
+
+
+def _taken_over(before: dict[str, Watch], subject: Subject, life: Life) -> Watch:
+    """Return the watch that had this name, now about `subject`; a new one where there was none of its kind."""
+    known = before.get(subject.alert)
+    if known is None or (known.subject.condition, known.subject.quantity) != (subject.condition, subject.quantity):
+        return Watch(subject, life)
+    known.subject = subject
+    return known
 
 
 def _finding(beyond: float, inside: float, confidence: float) -> Finding:

@@ -109,6 +109,14 @@ class Watch:
         timer = self._life.off if event is Event.RETURNED else self._life.on
         return self._record(seen, before.state, since_ns, words(event, timer.elapsed_ns / NS))
 
+    def withdraw(self, reason: str) -> Alert | None:
+        """End the watch; return the record of it where something stands."""
+        previous, since_ns = self._life.state, self._since_ns
+        if previous is AlertState.NORMAL or since_ns is None:
+            return None
+        self._life = Life()
+        return self._record(Seen(Finding.RETURNED), previous, since_ns, reason)
+
     def _begin(self, before: AlertState, time_ns: int) -> int:
         """Return the begin of the occurrence, a new one where the alert has just left normal."""
         if before is AlertState.NORMAL and self._life.state is not AlertState.NORMAL:

@@ -120,8 +120,9 @@ class Board:
 
     @property
     def untold(self) -> list[Alert]:
-        """Alerts that do not stand as far as is known, and of which nobody can tell now."""
-        return [alert for alert in self._alerts() if alert.state in _ASIDE and not alert.determinate]
+        """Alerts that do not stand as far as is known, and of which nobody can tell now, highest priority first."""
+        found = [alert for alert in self._alerts() if alert.state in _ASIDE and not alert.determinate]
+        return sorted(found, key=lambda alert: (-_PRIORITIES.index(alert.priority), alert.alert))
 
     @property
     def faults(self) -> list[Health]:

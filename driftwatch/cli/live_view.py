@@ -81,6 +81,11 @@ class Pane:
         self._started().update(Group(*(_text(line, entry.colour) for entry in found for line in entry.lines)))
         self._started().refresh()
 
+    def print(self, found: Sequence[Entry]) -> None:
+        """Print entries once, for good, however many lines they take."""
+        for entry in found:
+            self._print("\n".join(entry.lines), entry.colour)
+
     def tell(self, lines: str, colour: str | None) -> None:
         """Print lines above, for good."""
         self._news.append((lines, colour))
@@ -140,6 +145,11 @@ class LiveView(RunView):
         self._clock = clock
         self._drawn_at = -REDRAW_S
         self._closed = False
+
+    @property
+    def is_drawn(self) -> bool:
+        """It is."""
+        return True
 
     def show(self, envelopes: Sequence[Envelope]) -> None:
         """Take a group of records: tell news, redraw what stands."""

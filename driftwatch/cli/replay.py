@@ -45,12 +45,17 @@ def command(
 ) -> None:
     """Send recordings through the same pipeline as `run`, as fast as it can.
 
-    Several recordings are one stream, in the order given, with gaps where their dates say so. Without --store the
-    rows go into a new database in the current folder, named after the run; the configuration's own store is never
-    touched. Ctrl-C ends it early: what was read by then is stored, and the exit status is 1.
+    Several recordings are one stream, in the order given, with gaps where their dates say so. What `run` recorded is
+    laid out exactly, by the side files of its segments: name the folder, or some of its segments; --start is refused
+    there. Without --store the rows go into a new database in the current folder, named after the run; the
+    configuration's own store is never touched. Ctrl-C ends it early: what was read by then is stored, and the exit
+    status is 1.
 
     \b
     Example: driftwatch replay config/post-mortem.toml before.wav during.wav --start 2026-03-01T06:00:00Z
+
+    \b
+    Example: driftwatch replay line3.toml recordings/
     """  # noqa: D301 - \b is click's mark for lines that stay as they are
     configuration = load_served(config, live=False)
     source = _opened(configuration, recordings, start)
@@ -109,9 +114,13 @@ def _replay(
             writer = opened.enter_context(Writer.open(store, header.station))
         stop = opened.enter_context(stopped_by_signal())
         output = Output(print_json if as_json else view.show, stop)
-        bar = opened.enter_context(progress(source.length, source.rate_hz, shown=not (as_json and sys.stdout.isatty())))
+        first = source.first_sample  # segments may hold the end of a long run
+        shown = not (as_json and sys.stdout.isatty())
+        bar = opened.enter_context(progress(source.length - first, source.rate_hz, shown=shown))
         with work_failed():
-            ended = replay(source, station, Keeper(writer, publisher, output), bar, stop.is_set)
+            ended = replay(
+                source, station, Keeper(writer, publisher, output), lambda sample: bar(sample - first), stop.is_set
+            )
     output.check()
     if not as_json:
         _close(view, store)

@@ -3,17 +3,18 @@
 from __future__ import annotations
 
 import time
-import uuid
-from collections.abc import Iterator
-from contextlib import ExitStack, contextmanager
+from contextlib import ExitStack
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 import click
 
+from driftwatch.cli.live_view import chosen_view
+from driftwatch.cli.log import Log
 from driftwatch.cli.shared import (
     CAUTION,
     Output,
+    hung_up,
     load_served,
     nothing_started,
     print_json,
@@ -26,6 +27,7 @@ from driftwatch.cli.view import RunView, folded
 
 if TYPE_CHECKING:
     from driftwatch.config import Configuration
+    from driftwatch.daemon.feed import Feed
     from driftwatch.daemon.stop import Stop
     from driftwatch.stream.source import Source
 
@@ -41,24 +43,32 @@ LINES_EVERY_S = 5.0
 def command(config: Path, store: str | None, publish: str | None, as_json: bool) -> None:
     """Watch live, in the foreground, until Ctrl-C, SIGTERM, or the end of the source.
 
-    Each record is committed to the store before it is published on the bus. This version reads simulated sources
-    and recordings, at their pace.
+    Each record is committed to the store before it is published on the bus. A sound card that is lost is opened again
+    by its name; what is missing is a gap of exact length. SIGHUP reads bands and alert settings again.
 
     Example: driftwatch run config/demo.toml
     """
+    from driftwatch.config import record_cautions, sensor_remarks
+    from driftwatch.daemon.service import feed_of
+
     configuration = load_served(config, live=True)
+    for caution in (*sensor_remarks(configuration), *record_cautions(configuration)):
+        click.echo(f"Note: {caution}", err=True)
     source, pace = _opened(configuration)
-    for warning in source.warnings:
+    for warning in source.warnings if source else ():
         click.echo(f"Warning: {warning}", err=True)
-    view = RunView(((mode.channel, mode.name) for mode in configuration.mode), LINES_EVERY_S)
-    with stopped_by_signal() as stop:
-        _run(configuration, source, pace, store, publish, None if as_json else view, stop)
-    if not as_json:
+    modes = [(mode.channel, mode.name) for mode in configuration.mode]
+    view = None if as_json else chosen_view(modes, LINES_EVERY_S)
+    with stopped_by_signal() as stop, ExitStack() as closing:
+        if view is not None:
+            closing.callback(view.close)
+        _run(configuration, feed_of(configuration, source, pace), (store, publish), view, stop)
+    if view is not None and view.run:
         _close(view, str(config), ["--config", str(config)] if store is None else ["--store", store])
 
 
-def _opened(configuration: Configuration) -> tuple[Source, float]:
-    """Return the checked source and its pace, or leave with what is wrong with it."""
+def _opened(configuration: Configuration) -> tuple[Source | None, float]:
+    """Return the checked source and its pace, or leave with what is wrong with it; None: a sound card."""
     from driftwatch.config import RecordingSourceConfig, SimulatedSourceConfig
     from driftwatch.records import TimeQuality
     from driftwatch.stream.recording import open_recordings
@@ -68,7 +78,7 @@ def _opened(configuration: Configuration) -> tuple[Source, float]:
     if isinstance(chosen, SimulatedSourceConfig):
         return SimulatedSource(chosen, time.time_ns(), TimeQuality.FREE), chosen.pace
     if not isinstance(chosen, RecordingSourceConfig):
-        raise TypeError(f"a source of kind {chosen.kind} was not refused")
+        return None, 1.0
     least = max(channel.input for channel in configuration.channel)
     with nothing_started():
         source = open_recordings([chosen.path], None, chosen.name, least_inputs=least)
@@ -78,66 +88,28 @@ def _opened(configuration: Configuration) -> tuple[Source, float]:
 
 def _run(
     configuration: Configuration,
-    source: Source,
-    pace: float,
-    store: str | None,
-    publish: str | None,
+    feed: Feed,
+    where: tuple[str | None, str | None],
     view: RunView | None,
     stop: Stop,
 ) -> None:
     """Run to the end; without a view print JSON."""
-    from driftwatch.bus.publisher import Publisher
-    from driftwatch.config import is_simulated
-    from driftwatch.daemon.keeper import Keeper
-    from driftwatch.daemon.live import LiveRun
-    from driftwatch.daemon.pruner import Pruner
-    from driftwatch.pipeline.station import RunHeader, Station
-    from driftwatch.records import Origin
-    from driftwatch.store.writer import Writer
+    from driftwatch.daemon.service import Outlets, Service
 
-    origin = Origin.SIMULATED if is_simulated(configuration) else Origin.REPLAY
-    header = RunHeader(configuration.station.name, str(uuid.uuid4()), origin, source.time_quality)
-    station = Station(configuration, header, [source])
-    with ExitStack() as opened:
-        with nothing_started():  # the port first: where it is taken, no database comes into being
-            publisher = opened.enter_context(Publisher(publish or configuration.bus.publish))
-            if store is None:
-                opened.enter_context(_folder_of(configuration.store.url))
-            writer = opened.enter_context(Writer.open(store or configuration.store.url, header.station))
-        _announce(configuration, writer.path, publisher.endpoint)
-        output = Output(view.show if view else print_json, stop)
-        keeper = Keeper(writer, publisher, output)
-        pruner = Pruner(writer, configuration.store.keep_days, time.time_ns)
-        live = LiveRun(source, station, keeper, pace=pace, publisher=publisher, chore=pruner.step)
+    output = Output(view.show if view else print_json, stop)
+    log = Log(configuration.daemon.log_level, view)
+
+    def opened(store: Path, endpoint: str) -> None:
+        _announce(configuration, store, endpoint)
+
+    outlets = Outlets(output, log.told, view.beat if view else lambda _: None, opened, log.level)
+    with Service(configuration, feed, outlets, *where) as service, hung_up() as hangup:
+        with nothing_started():
+            if not service.open(stop):
+                return
         with work_failed():
-            live.until(stop)
+            service.until(stop, hangup)
         output.check()
-
-
-@contextmanager
-def _folder_of(url: str) -> Iterator[None]:
-    """Make the folder of the configuration's own store; take it away again if nothing came into it.
-
-    Raises
-    ------
-    StoreUnreachableError
-        When it cannot be made.
-    """
-    from driftwatch.store.errors import unreachable
-
-    path = Path(url.removeprefix("sqlite:///"))
-    folder = path.parent
-    missing = not folder.exists() and folder.parent.is_dir()
-    if missing:
-        try:
-            folder.mkdir()
-        except OSError as error:
-            raise unreachable(path, error) from None
-    try:
-        yield
-    finally:
-        if missing and not any(folder.iterdir()):
-            folder.rmdir()
 
 
 def _announce(configuration: Configuration, store: Path, endpoint: str) -> None:

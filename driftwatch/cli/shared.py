@@ -8,7 +8,7 @@ import shutil
 import signal
 import sys
 from collections.abc import Callable, Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import AbstractContextManager, contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, NoReturn
 
@@ -88,13 +88,22 @@ def print_json(envelopes: Sequence[Envelope]) -> None:
     out.flush()
 
 
-@contextmanager
-def stopped_by_signal() -> Iterator[Stop]:
+def stopped_by_signal() -> AbstractContextManager[Stop]:
     """Give what SIGINT and SIGTERM set, so that the work ends in good order."""
+    return _set_by(signal.SIGINT, signal.SIGTERM)
+
+
+def hung_up() -> AbstractContextManager[Stop]:
+    """Give what SIGHUP sets: the wish that the configuration be read again."""
+    return _set_by(signal.SIGHUP)
+
+
+@contextmanager
+def _set_by(*signals: signal.Signals) -> Iterator[Stop]:
     from driftwatch.daemon.stop import Stop
 
     stop = Stop()
-    before = {number: signal.signal(number, lambda *_: stop.set()) for number in (signal.SIGINT, signal.SIGTERM)}
+    before = {number: signal.signal(number, lambda *_: stop.set()) for number in signals}
     try:
         yield stop
     finally:
@@ -158,6 +167,7 @@ def drop_output() -> None:
 def nothing_started() -> Iterator[None]:
     """Turn the known errors of opening things into exit status 2."""
     from driftwatch.bus.errors import BusError
+    from driftwatch.daemon.state import StateError
     from driftwatch.store.errors import StoreError
     from driftwatch.stream.source import SourceRefusedError
 
@@ -165,7 +175,7 @@ def nothing_started() -> Iterator[None]:
         yield
     except SourceRefusedError as error:
         refuse(error.problems)
-    except (BusError, StoreError) as error:
+    except (BusError, StateError, StoreError) as error:
         refuse([error])
 
 

@@ -24,6 +24,8 @@ SILENT_WINDOWS = 3.0
 
 SILENT_S = 10.0
 
+_NO_LIMIT = 1_000_000  # lines
+
 
 @click.command("status")
 @click.option(
@@ -150,10 +152,9 @@ def _print(look: Look, as_json: bool) -> None:
 
     if on_terminal():
         pane = Pane()
-        pane.draw(_screen(look, pane.size[0], 10**6))
-        pane.close(keep=True)
+        pane.print(_screen(look, pane.size[0], _NO_LIMIT))
         return
-    for entry in _screen(look, WIDTH, 10**6):
+    for entry in _screen(look, WIDTH, _NO_LIMIT):
         for line in entry.lines:
             click.echo(line)
     sys.stdout.flush()

@@ -128,6 +128,11 @@ class RunView:
         self.run = ""
 
     @property
+    def is_drawn(self) -> bool:
+        """Whether it is redrawn in place, so that nothing else may print there."""
+        return False
+
+    @property
     def seconds(self) -> float:
         """Stream time from the first record to the last."""
         return (self._last_ns - (self._last_ns if self._first_ns is None else self._first_ns)) / NS

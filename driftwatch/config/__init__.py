@@ -4,7 +4,7 @@
 what a recording's rate and inputs contradict, `check_rate`.
 """
 
-from driftwatch.config.cross import check_rate, is_simulated, rate_of
+from driftwatch.config.cross import check_rate, is_simulated, rate_of, record_cautions
 from driftwatch.config.endpoints import check_endpoint
 from driftwatch.config.errors import ConfigError, Problem
 from driftwatch.config.load import from_document, load, loads
@@ -22,6 +22,7 @@ from driftwatch.config.models import (
     StoreConfig,
 )
 from driftwatch.config.modes import BandConfig, ModeConfig
+from driftwatch.config.sensors import sensor_remarks
 from driftwatch.config.serve import unserved
 from driftwatch.config.sources import (
     FeedSourceConfig,
@@ -68,5 +69,7 @@ __all__ = [
     "load",
     "loads",
     "rate_of",
+    "record_cautions",
+    "sensor_remarks",
     "unserved",
 ]

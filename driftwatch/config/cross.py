@@ -30,6 +30,7 @@ def cross_problems(document: Document) -> Iterator[Problem]:
     yield from _channel_problems(document)
     yield from _mode_problems(document)
     yield from _regime_problems(document)
+    yield from _record_problems(document)
 
 
 def check_rate(config: Configuration, rate_hz: float, inputs: int) -> list[Problem]:
@@ -230,6 +231,61 @@ def _regime_problems(document: Document) -> Iterator[Problem]:
         if level is not None:
             key = place(document, ("regime", index, "when", "level"))
             yield from _unknown_name(key, level, _names(document, "channel"), "channel")
+
+
+# ---------------------------------------------------------------------------------------------- raw recording
+
+
+def _record_problems(document: Document) -> Iterator[Problem]:
+    """Yield that a microphone would be recorded raw without anybody's leave.
+
+    All inputs of a source are recorded. What is on those that no channel names nobody can know here; by default a
+    source opens no more inputs than the channels need.
+    """
+    record = document.get("record")
+    if not isinstance(record, Mapping):
+        return
+    hours, allowed = record.get("keep_hours", 0.0), _text(record, "pressure_allowed_by")
+    if not is_number(hours) or hours <= 0 or (allowed is not None and allowed.strip()):
+        return
+    for _, channel in _tables(document, "channel"):
+        if channel.get("quantity") == "pressure":
+            yield Problem(
+                place(document, ("record", "pressure_allowed_by")),
+                f'nothing, with keep_hours = {hours:g} and the pressure of channel "{_text(channel, "name") or ""}"',
+                "who allowed that it is recorded raw",
+                "a microphone may record speech: get consent, follow local law and name who allowed it, "
+                "or set keep_hours = 0",
+            )
+
+
+def record_cautions(config: Configuration) -> list[str]:
+    """Return what a person must be told before a run records raw samples; nothing where it does not.
+
+    All inputs of a source are recorded, also those that no channel names: what hangs on them the file does not say.
+    """
+    record = config.record
+    if record.keep_hours <= 0:
+        return []
+    cautions = []
+    microphones = [f'"{channel.name}"' for channel in config.channel if channel.quantity == "pressure"]
+    if microphones:
+        cautions.append(
+            f"The last {record.keep_hours:g} h of {', '.join(microphones)} are recorded raw, as "
+            f"{record.pressure_allowed_by} allowed. A microphone may record speech: get consent and follow local law."
+        )
+    for source in config.source:
+        used = {channel.input for channel in config.channel if channel.source == source.name}
+        unnamed = sorted(set(range(1, (getattr(source, "inputs", None) or max(used, default=0)) + 1)) - used)
+        if unnamed:
+            cautions.append(
+                f"All inputs of {source.name} are recorded raw for {record.keep_hours:g} h, so those that no channel "
+                f"names too: {', '.join(str(one) for one in unnamed)}. See that no microphone is on them."
+            )
+    return cautions
+
+
+# ---------------------------------------------------------------------------------------------- what a file says
 
 
 def rate_of(config: Configuration, channel: ChannelConfig) -> int | None:

@@ -14,7 +14,7 @@ NOT_SERVED = "not served by this version"
 
 _SERVED_METHODS = (Method.AMBIENT, Method.RINGDOWN)
 _SERVED_CONDITIONS = (Condition.NO_DATA, Condition.LOST)
-_SERVED_KINDS = ("simulated", "recording")
+_SERVED_KINDS = ("soundcard", "recording", "simulated")
 
 
 def unserved(config: Configuration, *, live: bool = True) -> list[Problem]:

@@ -5,10 +5,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+from driftwatch.records import Fault
+
 if TYPE_CHECKING:
     from driftwatch.config import Configuration, SoundcardSourceConfig
     from driftwatch.pipeline.reading import Reading
-    from driftwatch.records import Clock, Fault, TimeQuality
+    from driftwatch.records import Clock, TimeQuality
     from driftwatch.stream.source import Source
 
 # ---------------------------------------------------------------------------------------------- orders
@@ -20,7 +22,8 @@ class ReadCard:
 
     source: SoundcardSourceConfig
     inputs: int  # how many are opened
-    resumes: Fault | None  # why an earlier process ended that had read samples; None: there was none
+    start_ns: int | None = None  # stream time of sample 0, where an earlier process let it begin
+    resumes: Fault = Fault.DEVICE  # why that process ended
 
 
 @dataclass(frozen=True, slots=True)
@@ -29,7 +32,6 @@ class ReadSource:
 
     source: Source
     pace: float  # times real time; 0: as fast as it can
-    first_sample: int  # what lies before was read by an earlier process
 
 
 @dataclass(frozen=True, slots=True)
@@ -120,6 +122,13 @@ class ClockStepped:
 
     seconds: float  # forward, where positive
     time_quality: TimeQuality
+
+
+@dataclass(frozen=True, slots=True)
+class Recorded:
+    """Whether the recorder can keep what comes."""
+
+    error: str | None  # why not; None: it can, again
 
 
 @dataclass(frozen=True, slots=True)

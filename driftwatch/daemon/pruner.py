@@ -29,7 +29,7 @@ class Pruner:
 
     def __init__(self, writer: Writer, keep_days: float, utc_ns: Callable[[], int]) -> None:
         self._writer = writer
-        self._keep_days = keep_days
+        self.keep_days = keep_days
         self._utc_ns = utc_ns
         self._due = 0.0
 
@@ -41,5 +41,5 @@ class Pruner:
         CommitError
             When the store fails.
         """
-        if now_monotonic >= self._due and not prune(self._writer, self._keep_days, self._utc_ns()):
+        if now_monotonic >= self._due and not prune(self._writer, self.keep_days, self._utc_ns()):
             self._due = now_monotonic + LOOK_EVERY_S

@@ -22,6 +22,10 @@ class Stop:
         self._is_set = True
         self._bell.put(None)
 
+    def clear(self) -> None:
+        """Take the wish back, once it is being fulfilled."""
+        self._is_set = False
+
     def is_set(self) -> bool:
         """Say whether the end was asked for."""
         return self._is_set

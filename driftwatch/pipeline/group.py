@@ -80,8 +80,8 @@ class ChannelGroup:
         return [reading for line in self.lines for reading in line.finish()]
 
 
-def measured_channels(config: Configuration, source: SourceFacts, *, only: bool) -> list[ChannelConfig]:
-    """Return the channels that a source feeds and that have modes, in file order.
+def measured_channels(config: Configuration, source: str, *, only: bool) -> list[ChannelConfig]:
+    """Return the channels that a source, by its name, feeds and that have modes, in file order.
 
     With `only` the source is the only one and also feeds the channels that name none.
     """
@@ -89,5 +89,5 @@ def measured_channels(config: Configuration, source: SourceFacts, *, only: bool)
     return [
         channel
         for channel in config.channel
-        if channel.name in with_modes and (channel.source == source.name or (only and channel.source is None))
+        if channel.name in with_modes and (channel.source == source or (only and channel.source is None))
     ]

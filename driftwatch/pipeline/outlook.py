@@ -168,6 +168,7 @@ def assumed(config: Configuration) -> Iterator[str]:
 def remarks(config: Configuration) -> Iterator[str]:
     """Yield what is allowed and worth a second look."""
     from driftwatch.config import unserved
+    from driftwatch.config.sensors import sensor_remarks
 
     replayed = [str(problem) for problem in unserved(config, live=False)]
     yield from (f"run and replay refuse this: {problem}" for problem in replayed)
@@ -178,22 +179,11 @@ def remarks(config: Configuration) -> Iterator[str]:
             yield f'channel "{channel.name}": a microphone may record speech: get consent and follow local law'
         if all(mode.channel != channel.name for mode in config.mode):
             yield f'channel "{channel.name}": no mode is followed on it'
-        yield from _sensor_remarks(config, channel)
         yield from _overlaps(config, channel)
+    yield from sensor_remarks(config)
     for mode, outlook in zip(config.mode, outlooks(config), strict=True):
         yield from _late_remark(mode, outlook)
         yield from _band_remarks(mode)
-
-
-def _sensor_remarks(config: Configuration, channel: ChannelConfig) -> Iterator[str]:
-    usable = channel.sensor.usable_hz
-    for mode in config.mode:
-        search = mode.search_hz
-        if usable and mode.channel == channel.name and not usable.low <= search.low < search.high <= usable.high:
-            yield (
-                f'mode "{mode.name}": search_hz leaves what the sensor on "{channel.name}" is usable for, '
-                f"{usable.low:g} to {usable.high:g} Hz"
-            )
 
 
 def _overlaps(config: Configuration, channel: ChannelConfig) -> Iterator[str]:

@@ -85,7 +85,7 @@ class Station:
         self._marked_from = {source.name: source.first_sample for source in sources}  # where marks by seconds begin
         self._silent = False  # a tick has come since the last samples
         self._modes = dict(_modes(config, self._groups, sources))
-        self._alerts = _alerts(config, header.station)
+        self._alerts = AlertBook(header.station, _watched(config), _settings(config))
         self._sequence = 0
         self._last_of_topic: dict[str, int] = {}
         self._measured: dict[tuple[str, str], int] = {}  # sequence of each mode's last measurement
@@ -105,6 +105,14 @@ class Station:
     def samples(self) -> int:
         """Samples taken in so far, per input, of the source that is furthest."""
         return max(gaps.position for gaps in self._gaps.values())
+
+    def source(self, name: str) -> SourceFacts:
+        """Return what is known of a source."""
+        return self._sources[name]
+
+    def position(self, name: str) -> int:
+        """Return the stream index of a source's next sample."""
+        return self._gaps[name].position
 
     def begin(self) -> list[Envelope]:
         """Return the record that opens the run."""
@@ -154,6 +162,17 @@ class Station:
             if (health := gaps.finish(self.now_ns)) is not None
         ]
         return [*records, self._stamp(self._run_record(Phase.END, reason), self.now_ns)]
+
+    def reload(self, config: Configuration) -> list[Envelope]:
+        """Take over the bands and alert settings of another configuration of the same modes; return what that ends.
+
+        Raises
+        ------
+        ValueError
+            When it has other modes.
+        """
+        ends = self._alerts.reload(_watched(config), _settings(config))
+        return [self._stamp(alert, self.now_ns) for alert in ends]
 
     def note(self, body: Health | Clock) -> Envelope:
         """Return the record of what the daemon knows of itself or of a sample clock, at this point of the stream."""
@@ -263,7 +282,7 @@ class Station:
 
 
 def _group(config: Configuration, source: SourceFacts, only: bool) -> ChannelGroup:
-    return ChannelGroup(config, source, [channel.name for channel in measured_channels(config, source, only=only)])
+    return ChannelGroup(config, source, [channel.name for channel in measured_channels(config, source.name, only=only)])
 
 
 def _modes(
@@ -278,16 +297,17 @@ def _modes(
                 yield (mode.channel, mode.name), FollowedMode(mode, step_s, start_ns)
 
 
-def _alerts(config: Configuration, station: str) -> AlertBook:
-    """Return the alerts of a configuration: the bands, and the conditions that exist without being named."""
-    modes = [WatchedMode(mode.channel, mode.name, mode.band) for mode in config.mode]
+def _watched(config: Configuration) -> list[WatchedMode]:
+    return [WatchedMode(mode.channel, mode.name, mode.band) for mode in config.mode]
+
+
+def _settings(config: Configuration) -> AlertSettings:
+    """Return how the alerts behave that exist without being named."""
     named = {
         alert.condition: ConditionSettings(alert.name, alert.on_delay_s, priority=alert.priority)
         for alert in config.alert
     }
     usual = AlertSettings()
-    return AlertBook(
-        station,
-        modes,
-        AlertSettings(lost=named.get(Condition.LOST, usual.lost), no_data=named.get(Condition.NO_DATA, usual.no_data)),
+    return AlertSettings(
+        lost=named.get(Condition.LOST, usual.lost), no_data=named.get(Condition.NO_DATA, usual.no_data)
     )

@@ -111,14 +111,19 @@ def _last_words(connection: Connection, keys: dict[int, HeaderKey]) -> Iterator[
 def _different(connection: Connection, header: int, *columns: sa.Column[Any]) -> Iterator[tuple[Any, ...]]:
     """Yield the different values that columns have in a header, each one found by one step in their index.
 
-    A plain ``SELECT DISTINCT`` would read the index of the whole run.
+    A plain ``SELECT DISTINCT`` would read the index of the whole run, and so would a comparison of several columns at
+    once, of which SQLite takes only the first to the index.
     """
     first = sa.select(*columns).where(columns[0].table.c.header == header).order_by(*columns).limit(1)
     found = connection.execute(first).first()
     while found is not None:
         yield tuple(found)
-        beyond = sa.tuple_(*columns) > sa.tuple_(*found)
-        found = connection.execute(first.where(beyond)).first()
+        values = tuple(found)
+        found = None
+        for place in reversed(range(len(columns))):
+            alike = [column == value for column, value in zip(columns[:place], values, strict=False)]
+            if found := connection.execute(first.where(*alike, columns[place] > values[place])).first():
+                break
 
 
 def _open_incidents(connection: Connection, keys: dict[int, HeaderKey]) -> Iterator[Envelope]:

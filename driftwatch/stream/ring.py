@@ -56,6 +56,8 @@ class _Head(IntEnum):
     TIE_INDEX = 14  # a stream index ...
     TIE_NS = 15  # ... and the monotonic time at which its sample would arrive
     TIE_PPB = 16  # deviation of the true rate from the nominal, 1e-9
+    CALLED_NS = 18  # monotonic time of the last block, whether it was taken or dropped
+    ATTEMPTS = 17  # how often it was tried to open the device
     READERS = 32  # from here on the number of the next block of each reader
 
 
@@ -193,6 +195,7 @@ class Ring:
         flagged
             Whether the device says that it lost samples before these.
         """
+        self._head[_Head.CALLED_NS] = arrived_ns
         number = int(self._head[_Head.FILLED])
         if number - self._slowest(number) >= self.shape.most_waiting:
             self._head[_Head.DROPPED] += len(samples)
@@ -250,6 +253,20 @@ class Ring:
         """Let readers see the blocks before number `until`."""
         self._head[_Head.PUBLISHED] = until
 
+    def pass_undecided(self) -> None:
+        """Pass over the blocks that a writing process which died left without a place."""
+        for number in range(self.published, self.filled):
+            self.place(number, None)
+        self.publish(self.filled)
+
+    def last_block(self) -> Seen | None:
+        """Return the last published block that has a place in the stream; None: there is none any more."""
+        for number in range(self.published - 1, self.oldest() - 1, -1):
+            block = self.seen(number)
+            if block is not None and len(block.samples):
+                return block
+        return None
+
     def end(self) -> None:
         """Tell the readers that no block comes any more."""
         self._head[_Head.ENDED] = 1
@@ -264,6 +281,15 @@ class Ring:
         self._head[_Head.TIE_INDEX] = tie.index
         self._head[_Head.TIE_PPB] = round(tie.deviation * 1e9)
         self._head[_Head.TIE_NS] = tie.monotonic_ns
+
+    def attempt(self) -> None:
+        """Count one more attempt to open the device."""
+        self._head[_Head.ATTEMPTS] += 1
+
+    @property
+    def attempts(self) -> int:
+        """How often it was tried to open the device."""
+        return int(self._head[_Head.ATTEMPTS])
 
     @property
     def silent(self) -> Fault | None:
@@ -296,6 +322,11 @@ class Ring:
     def dropped(self) -> int:
         """Samples, per input, that were dropped because the ring was full."""
         return int(self._head[_Head.DROPPED])
+
+    @property
+    def called_ns(self) -> int:
+        """Monotonic time at which the last block came, whether it was taken or dropped."""
+        return int(self._head[_Head.CALLED_NS])
 
     @property
     def beat_ns(self) -> int:

@@ -132,11 +132,15 @@ def write_side_file(wav: Path, side: SideFile) -> int:
     """
     content = side.text().encode()
     unfinished = _unfinished(wav)
-    with unfinished.open("wb") as file:
-        file.write(content)
-        file.flush()
-        os.fsync(file.fileno())
-    unfinished.replace(side_of(wav))
+    try:
+        with unfinished.open("wb") as file:
+            file.write(content)
+            file.flush()
+            os.fsync(file.fileno())
+        unfinished.replace(side_of(wav))
+    except OSError:
+        unfinished.unlink(missing_ok=True)
+        raise
     return len(content)
 
 

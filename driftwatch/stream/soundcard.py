@@ -15,15 +15,13 @@ What PortAudio does that its interface does not tell (seen on a virtual sound ca
 from __future__ import annotations
 
 import errno
-import os
-import tempfile
 import threading
 import time
-from contextlib import contextmanager
-from typing import TYPE_CHECKING, Any, Literal, NoReturn, Protocol, TypeVar
+from typing import TYPE_CHECKING, Any, Literal, Protocol
 
 import numpy as np
 
+from driftwatch.stream.hanging import leave_hung, within, without_stderr
 from driftwatch.stream.sound_inputs import (
     DeviceUnavailableError,
     NoSoundLibraryError,
@@ -36,8 +34,6 @@ from driftwatch.stream.sound_inputs import (
 from driftwatch.stream.source import SourceRefusedError, StreamError
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator
-
     from numpy.typing import NDArray
 
 __all__ = [
@@ -60,8 +56,6 @@ SampleFormat = Literal["float32", "int16", "int32"]
 
 FULL_SCALE: dict[SampleFormat, float] = {"float32": 1.0, "int16": 2.0**15, "int32": 2.0**31}
 """What digital full scale is in each format."""
-
-_Result = TypeVar("_Result")
 
 # Numbers of PortAudio's errors (portaudio.h).
 _HOST_ERROR, _CHANNELS, _RATE, _DEVICE, _FORMAT, _COMBINATION, _UNAVAILABLE = (
@@ -250,61 +244,3 @@ def _reason(error: Exception) -> str:
     if _number(error) == _COMBINATION:  # PortAudio's word for an input that fails to open by any other reason than busy
         return "the system does not open it"
     return text.rstrip(".") or type(error).__name__
-
-
-# ---------------------------------------------------------------------------------------------- what may hang
-
-
-def within(deadline_s: float, work: Callable[[], _Result]) -> _Result:
-    """Return what `work` returns, waiting for it at most `deadline_s` seconds.
-
-    Raises
-    ------
-    TimeoutError
-        When it still runs; nothing can end it but the end of the process, by ``os._exit`` or a signal.
-    """
-    results: list[_Result] = []
-    errors: list[BaseException] = []
-
-    def run() -> None:
-        try:
-            results.append(work())
-        except BaseException as error:  # noqa: BLE001 - raised again below, in the caller's thread
-            errors.append(error)
-
-    thread = threading.Thread(target=run, name="portaudio", daemon=True)
-    thread.start()
-    thread.join(deadline_s)
-    if thread.is_alive():
-        raise TimeoutError(f"the sound system did not answer within {deadline_s:g} s")
-    if errors:
-        raise errors[0]
-    return results[0]
-
-
-def leave_hung(status: int) -> NoReturn:
-    """End the process past PortAudio's own ending, which would hang."""
-    import sys
-
-    sys.stdout.flush()
-    sys.stderr.flush()
-    os._exit(status)
-
-
-@contextmanager
-def without_stderr() -> Iterator[Callable[[], str]]:
-    """Keep file descriptor 2 of the whole process to oneself, for as short as PortAudio looks or opens.
-
-    Yields
-    ------
-    callable
-        Returns what was written there so far. Python's own messages go there too, meanwhile.
-    """
-    kept = os.dup(2)
-    with tempfile.TemporaryFile() as held:
-        os.dup2(held.fileno(), 2)
-        try:
-            yield lambda: os.pread(held.fileno(), 1 << 16, 0).decode(errors="replace")
-        finally:
-            os.dup2(kept, 2)
-            os.close(kept)

@@ -1,0 +1,71 @@
+"""Faults of the daemon itself, from begin to end: one incident each, however often it is said that it lasts."""
+
+from __future__ import annotations
+
+import dataclasses
+import uuid
+
+from driftwatch.records import NS, Fault, Health, Phase
+
+
+class Incidents:
+    """The faults that stand, by a key of the caller's."""
+
+    def __init__(self) -> None:
+        self._open: dict[str, Health] = {}
+
+    def begin(self, key: str, fault: Fault, now_ns: int, detail: str) -> Health | None:
+        """Return the begin of a fault at stream time `now_ns`; its going on, where the words are new; else None."""
+        known = self._open.get(key)
+        if known is not None and known.detail == detail:
+            return None
+        if known is None:
+            body = _health(fault, Phase.BEGIN, str(uuid.uuid4()), now_ns, detail)
+        else:
+            seconds = max(0.0, (now_ns - known.since_ns) / NS)
+            body = dataclasses.replace(known, phase=Phase.CONTINUE, seconds=seconds, detail=detail)
+        self._open[key] = body
+        return body
+
+    def end(self, key: str, now_ns: int) -> Health | None:
+        """Return the end of a fault; None where it does not stand."""
+        known = self._open.pop(key, None)
+        if known is None:
+            return None
+        return dataclasses.replace(known, phase=Phase.END, seconds=max(0.0, (now_ns - known.since_ns) / NS))
+
+    def end_all(self, now_ns: int) -> list[Health]:
+        """Return the ends of all faults that stand."""
+        return [body for key in list(self._open) if (body := self.end(key, now_ns)) is not None]
+
+
+def clock_step(now_ns: int, seconds: float, limit_s: float) -> list[Health]:
+    """Return begin and end of what is over at once: the computer's clock was set by so many seconds."""
+    detail = (
+        "the computer's clock was set; stream time counts samples and does not move, and the records of the sample "
+        "clock say how far the two are apart"
+    )
+    begin = dataclasses.replace(
+        _health(Fault.CLOCK_STEP, Phase.BEGIN, str(uuid.uuid4()), now_ns, detail),
+        value=seconds,
+        limit=limit_s,
+        unit="s",
+    )
+    return [begin, dataclasses.replace(begin, phase=Phase.END)]
+
+
+def _health(fault: Fault, phase: Phase, incident: str, since_ns: int, detail: str) -> Health:
+    return Health(
+        channel=None,
+        fault=fault,
+        phase=phase,
+        incident=incident,
+        since_ns=since_ns,
+        seconds=0.0,
+        first_sample=None,
+        lost_samples=0,
+        value=None,
+        limit=None,
+        unit=None,
+        detail=detail,
+    )

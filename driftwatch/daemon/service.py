@@ -1,0 +1,231 @@
+"""Everything that a live run needs, opened in the right order and closed in the reverse one."""
+
+from __future__ import annotations
+
+import time
+import uuid
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import ExitStack, contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Self
+
+from driftwatch.bus.publisher import Publisher
+from driftwatch.config import ConfigError, Configuration, SoundcardSourceConfig, is_simulated, load, unserved
+from driftwatch.daemon.feed import CardFeed, PacedFeed
+from driftwatch.daemon.keeper import Keeper
+from driftwatch.daemon.live import Company, LiveRun, Observer
+from driftwatch.daemon.notify import ServiceManager
+from driftwatch.daemon.pruner import Pruner
+from driftwatch.daemon.reload import reload_plan
+from driftwatch.daemon.state import StateLock
+from driftwatch.pipeline.station import RunHeader, Station
+from driftwatch.records import Command, Envelope, Heartbeat, Origin
+from driftwatch.store.errors import unreachable
+from driftwatch.store.writer import Writer
+
+if TYPE_CHECKING:
+    from driftwatch.daemon.feed import Feed
+    from driftwatch.daemon.stop import Stop
+    from driftwatch.stream.source import Source
+
+
+@dataclass(frozen=True, slots=True)
+class Outlets:
+    """Where a run tells of itself."""
+
+    show: Callable[[Sequence[Envelope]], None]  # every group of records, once it is stored and published
+    told: Callable[[str, bool], None]  # a line worth a log, and whether it is of a fault
+    beat: Callable[[Heartbeat], None] = lambda _: None
+    opened: Callable[[Path, str], None] = lambda _path, _endpoint: None  # the database and the endpoint
+    level: Callable[[str], None] = lambda _: None  # how much is to be logged, when that changes
+    observer: Observer | None = None
+
+
+def feed_of(config: Configuration, source: Source | None, pace: float) -> Feed:
+    """Return how the only source of a configuration is read; `source` where it is no sound card."""
+    (chosen,) = config.source  # more are refused as not served
+    queue_s = config.daemon.queue_s
+    if isinstance(chosen, SoundcardSourceConfig):
+        inputs = chosen.inputs or max(channel.input for channel in config.channel)
+        return CardFeed(chosen, inputs, queue_s)
+    if source is None:
+        raise ValueError(f"a source of kind {chosen.kind} must be opened before")
+    return PacedFeed(source, pace, queue_s)
+
+
+def origin_of(config: Configuration) -> Origin:
+    """Return where the samples of a configuration come from."""
+    if is_simulated(config):
+        return Origin.SIMULATED
+    return Origin.LIVE if isinstance(config.source[0], SoundcardSourceConfig) else Origin.REPLAY
+
+
+class Service:
+    """A live run with all that it needs.
+
+    Parameters
+    ----------
+    config
+        The configuration; it has one source.
+    feed
+        How that is read.
+    outlets
+        Where it tells of itself.
+    store, publish
+        Database and endpoint; None: the configuration's.
+    """
+
+    def __init__(
+        self,
+        config: Configuration,
+        feed: Feed,
+        outlets: Outlets,
+        store: str | None = None,
+        publish: str | None = None,
+    ) -> None:
+        self._config = config
+        self._feed = feed
+        self._outlets = outlets
+        self._store = store
+        self._publish = publish
+        self._run = str(uuid.uuid4())
+        self._opened = ExitStack()
+        self._hangup: Stop | None = None
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self._opened.close()
+
+    def open(self, stop: Stop) -> bool:
+        """Open everything, the source first and the database last; return False if `stop` came before it was done.
+
+        Raises
+        ------
+        StateError, BusError, SourceRefusedError, StoreError
+            When something cannot be had; nothing was stored then.
+        """
+        config, enter = self._config, self._opened.enter_context
+        if self._store is None:
+            enter(_folder_of(config.store.url))
+        enter(StateLock(self._state_folder(), config.station.name))
+        self._manager = enter(ServiceManager())
+        for warning in self._manager.warnings:
+            self._outlets.told(warning, True)
+        publisher = enter(Publisher(self._publish or config.bus.publish))
+        outlets = self._outlets
+        company = Company(publisher, self._chore, outlets.told, outlets.beat, outlets.observer)
+        self._live = enter(LiveRun(config, self._run, self._feed, company))
+        source = self._live.start(stop)
+        if source is None:
+            return False
+        writer = enter(Writer.open(self._store or config.store.url, config.station.name))
+        outlets.opened(writer.path, publisher.endpoint)
+        header = RunHeader(config.station.name, self._run, origin_of(config), source.time_quality)
+        self._station = Station(config, header, [source])
+        self._keeper = Keeper(writer, publisher, outlets.show)
+        self._pruner = Pruner(writer, config.store.keep_days, time.time_ns)
+        return True
+
+    def _state_folder(self) -> Path:
+        """Return the state folder: the configuration's, or that of a database named instead."""
+        if self._store is not None and self._config.daemon.state is None:
+            return Path(self._store.removeprefix("sqlite:///")).absolute().parent
+        return self._config.state
+
+    def until(self, stop: Stop, hangup: Stop) -> str:
+        """Run to the end and return why it ended; `hangup` asks for a reload of the configuration.
+
+        Raises
+        ------
+        SourceFailedError, CommitError
+            As `LiveRun.until`.
+        """
+        self._hangup = hangup
+        self._is_ready = False
+        try:
+            return self._live.until(stop, self._station, self._keeper)
+        finally:
+            self._manager.stopping()
+
+    # ------------------------------------------------------------------------------------------ once a second
+
+    def _chore(self, now: float) -> None:
+        self._pruner.step(now)
+        self._notify(now)
+        if self._hangup is not None and self._hangup.is_set():
+            self._hangup.clear()
+            self._reload()
+
+    def _notify(self, now: float) -> None:
+        live, manager = self._live, self._manager
+        status = self._status()
+        if not self._is_ready and (live.samples > 0 or live.is_silent):
+            self._is_ready = True
+            manager.ready(status)
+        manager.status(status)
+        manager.alive(now, live.samples)
+        if live.is_silent:
+            manager.waiting(now, live.attempts)
+
+    def _status(self) -> str:
+        if self._live.is_silent:
+            return f"Waiting for the samples of {self._feed.name}"
+        worst = self._station.worst_alert
+        return f"Measuring; {f'an alert of {worst} priority stands' if worst else 'no alert stands'}"
+
+    # ------------------------------------------------------------------------------------------ reload
+
+    def _reload(self) -> None:
+        """Take over a changed configuration, or tell why that needs a restart; either way it is a record."""
+        self._manager.reloading()
+        path = self._config.path
+        try:
+            new = load(path) if path is not None else self._config
+            problems = [*map(str, unserved(new)), *reload_plan(self._config, new)]
+        except ConfigError as error:
+            problems = [str(problem) for problem in error.problems]
+            new = self._config
+        if problems:
+            self._outlets.told("The configuration was not reloaded: " + "; ".join(problems), True)
+            reason = "refused: " + "; ".join(problems)
+        else:
+            self._take_over(new)
+            self._outlets.told(f"The configuration was reloaded from {path}", False)
+            reason = f"taken over, sha256 {new.sha256}"
+        command = Command(self._station.now_ns, str(uuid.uuid4()), "signal", "reload", str(path), reason)
+        self._keeper.take(self._station.feed(command))
+        self._manager.ready(self._status())
+
+    def _take_over(self, new: Configuration) -> None:
+        self._keeper.take(self._station.reload(new))
+        self._pruner.keep_days = new.store.keep_days
+        if new.daemon.log_level != self._config.daemon.log_level:
+            self._outlets.level(new.daemon.log_level)
+        self._config = new
+
+
+@contextmanager
+def _folder_of(url: str) -> Iterator[None]:
+    """Make the folder of the configuration's own store; take it away again if nothing came into it.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When it cannot be made.
+    """
+    path = Path(url.removeprefix("sqlite:///"))
+    folder = path.parent
+    missing = not folder.exists() and folder.parent.is_dir()
+    if missing:
+        try:
+            folder.mkdir()
+        except OSError as error:
+            raise unreachable(path, error) from None
+    try:
+        yield
+    finally:
+        if missing and not any(folder.iterdir()):
+            folder.rmdir()
