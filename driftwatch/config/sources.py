@@ -63,9 +63,9 @@ class SoundcardSourceConfig(Table):
     kind: Literal["soundcard"] = "soundcard"
     device: Text | None = None  # part of a name; None: the default input
     rate_hz: RateHz = 48_000
-    inputs: Count | None = None  # how many are opened; None: as many as the channels need
+    inputs: Count | None = None  # how many are opened; None: as many as the channels need, and two if there are
     sample_format: Literal["float32", "int16", "int32"] = "float32"  # as asked of the device
-    block_s: Annotated[Positive, Field(ge=0.002, le=0.5)] = 0.02  # samples that the device hands over at a time
+    block_s: Annotated[Positive, Field(ge=0.002, le=0.5)] = 0.01  # samples that the device hands over at a time
     wait_for_device: Flag = False  # where it is not there at the start: wait instead of refusing
 
 

@@ -142,12 +142,12 @@ class CardCapture:
 
     def _opened(self) -> CardStream:
         source, order = self._order.source, self._order
-        device = find_input(sound_inputs(), source.device, order.inputs)
+        device = find_input(sound_inputs(), source.device, order.least_inputs)
         self._device = device.full_name
         return CardStream(
             device,
             rate_hz=source.rate_hz,
-            inputs=order.inputs,
+            inputs=min(self._ring.shape.inputs, device.inputs),
             sample_format=source.sample_format,
             frames=self._ring.shape.frames,
             sink=self._ring,

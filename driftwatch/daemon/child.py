@@ -24,11 +24,11 @@ class Child:
         What it does.
     ring
         Descriptor of the ring.
-    order
-        What exactly.
+
+    It waits for its order, the first that it is told.
     """
 
-    def __init__(self, role: Role, ring: int, order: Any) -> None:
+    def __init__(self, role: Role, ring: int) -> None:
         self.role = role
         self.connection: Connection[Any, Any]
         self.connection, theirs = Pipe()
@@ -42,7 +42,6 @@ class Child:
                 stderr=self._words,
                 process_group=0,  # Ctrl-C in a terminal is for the parent: it ends its children in order
             )
-        self.tell(order)
 
     @property
     def pid(self) -> int:

@@ -61,13 +61,18 @@ class Feed(Protocol):
 
 
 class CardFeed:
-    """A sound card."""
+    """A sound card.
 
-    def __init__(self, source: SoundcardSourceConfig, inputs: int, queue_s: float) -> None:
+    Where the configuration does not say how many inputs are opened, it is two at least, if the device has them: of
+    one input alone many sound servers make a mixture of all.
+    """
+
+    def __init__(self, source: SoundcardSourceConfig, needed_inputs: int, queue_s: float) -> None:
         self.name = source.name
         self.known = None
         self._source = source
-        self._inputs = inputs
+        self._least = source.inputs or needed_inputs
+        self._inputs = source.inputs or max(2, needed_inputs)
         self._queue_s = queue_s
 
     def make_ring(self) -> Ring:
@@ -77,8 +82,8 @@ class CardFeed:
     def order(self, begun: LiveSource | None, cause: Fault) -> ReadCard:
         """Return what the capturing process is to do."""
         if begun is None:
-            return ReadCard(self._source, self._inputs)
-        return ReadCard(self._source, self._inputs, begun.start_ns, cause)
+            return ReadCard(self._source, self._least)
+        return ReadCard(self._source, self._least, begun.start_ns, cause)
 
 
 class PacedFeed:

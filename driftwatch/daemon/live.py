@@ -117,7 +117,7 @@ class LiveRun:
         self._merge = Merge(len(self._shares))
         self._incidents = Incidents()
         self._capture = Supervised("capture", self._ring.descriptor, self._capture_order, CAPTURE_PATIENCE_S)
-        self._trackers: list[Supervised] = []
+        self._trackers = [self._tracker(worker) for worker in range(len(self._shares))]
         self._recorder: Supervised | None = None
         self._source: LiveSource | None = None
         self._finished: dict[int, list[Any]] = {}
@@ -154,7 +154,7 @@ class LiveRun:
             raise ValueError("the source was not started; expected start() to have returned what is known of it")
         self.station, self._keeper = station, keeper
         self._take(station.begin())
-        self._start_measuring(self._source)
+        self._start_recording(self._source)
         while not self._is_over():
             self._step(stop)
         return self._close()
@@ -196,7 +196,8 @@ class LiveRun:
             self._ring.keep_for(worker, 0)
         while not stop.is_set():
             now = time.monotonic()
-            self._capture.start_if_due(now)
+            for one in (self._capture, *self._trackers):
+                one.start_if_due(now)
             if self._feed.known is not None:
                 self._source = self._feed.known
                 return self._source
@@ -215,21 +216,20 @@ class LiveRun:
         cause = self._ring.silent or Fault.PROCESS
         return self._feed.order(self._source, cause)
 
-    def _start_measuring(self, source: LiveSource) -> None:
-        for worker in range(len(self._shares)):
-            patience = max(LEAST_PATIENCE_S, self._config.daemon.queue_s / 2)
-            tracker = Supervised("tracker", self._ring.descriptor, self._order_for(worker, source), patience)
-            self._trackers.append(tracker)
+    def _tracker(self, worker: int) -> Supervised:
+        def order() -> Measure | None:
+            if self._source is None:
+                return None
+            number, position = self._merge.next_of(worker), self._merge.position_of(worker)
+            return Measure(self._config, self._source, self._shares[worker], worker, number, position)
+
+        patience = max(LEAST_PATIENCE_S, self._config.daemon.queue_s / 2)
+        return Supervised("tracker", self._ring.descriptor, order, patience)
+
+    def _start_recording(self, source: LiveSource) -> None:
         if self._config.record.keep_hours > 0:
             order = Record(self._config, source, self._run)
             self._recorder = Supervised("recorder", self._ring.descriptor, lambda: order, None)
-
-    def _order_for(self, worker: int, source: LiveSource) -> Callable[[], Measure]:
-        def order() -> Measure:
-            number, position = self._merge.next_of(worker), self._merge.position_of(worker)
-            return Measure(self._config, source, self._shares[worker], worker, number, position)
-
-        return order
 
     # ------------------------------------------------------------------------------------------ the children
 

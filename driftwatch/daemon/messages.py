@@ -21,7 +21,7 @@ class ReadCard:
     """Read a sound card."""
 
     source: SoundcardSourceConfig
-    inputs: int  # how many are opened
+    least_inputs: int  # how many the device must have; up to as many as the ring has are opened
     start_ns: int | None = None  # stream time of sample 0, where an earlier process let it begin
     resumes: Fault = Fault.DEVICE  # why that process ended
 

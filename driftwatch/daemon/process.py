@@ -23,8 +23,8 @@ def main(role: str, ring: int, pipe: int) -> None:
         signal.signal(number, signal.SIG_IGN)  # the parent has them too, and says what is to be done
     with Connection(pipe) as connection, Ring(ring) as opened:
         try:
-            order = connection.recv()
-            importlib.import_module(MODULES[role]).work(order, opened, connection)
+            module = importlib.import_module(MODULES[role])  # before there is an order: it takes a while
+            module.work(connection.recv(), opened, connection)
         except (EOFError, BrokenPipeError, ConnectionResetError):
             return  # the parent is gone: nobody wants any more
 

@@ -47,8 +47,7 @@ def feed_of(config: Configuration, source: Source | None, pace: float) -> Feed:
     (chosen,) = config.source  # more are refused as not served
     queue_s = config.daemon.queue_s
     if isinstance(chosen, SoundcardSourceConfig):
-        inputs = chosen.inputs or max(channel.input for channel in config.channel)
-        return CardFeed(chosen, inputs, queue_s)
+        return CardFeed(chosen, max(channel.input for channel in config.channel), queue_s)
     if source is None:
         raise ValueError(f"a source of kind {chosen.kind} must be opened before")
     return PacedFeed(source, pace, queue_s)

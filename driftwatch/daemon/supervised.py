@@ -22,12 +22,12 @@ class Supervised:
     ring
         Descriptor of the ring.
     order
-        Returns what it is to do, asked for at each start.
+        Returns what it is to do, asked for at each start; None: that is not known yet, and it is to wait for it.
     patience_s
         How long it may show no progress although there is work, seconds; None: for ever.
     """
 
-    def __init__(self, role: Role, ring: int, order: Callable[[], Any], patience_s: float | None) -> None:
+    def __init__(self, role: Role, ring: int, order: Callable[[], Any | None], patience_s: float | None) -> None:
         self.role = role
         self.restarts = Restarts()
         self.child: Child | None = None
@@ -39,14 +39,16 @@ class Supervised:
         self._progress: int | None = None
         self._moved = 0.0  # when that was seen to change
         self._has_moved = False  # since it was started
+        self._is_ordered = False
 
-    def start_if_due(self, now: float) -> bool:
-        """Start it if it does not run and should; return whether it was started."""
-        if self.child is not None or not self._is_wanted or now < self._due:
-            return False
-        self.child = Child(self.role, self._ring, self._order())
-        self._progress, self._moved, self._has_moved = None, now, False
-        return True
+    def start_if_due(self, now: float) -> None:
+        """Start it if it does not run and should, and give it its order once that is known."""
+        if self.child is None and self._is_wanted and now >= self._due:
+            self.child = Child(self.role, self._ring)
+            self._progress, self._moved, self._has_moved, self._is_ordered = None, now, False, False
+        if self.child is not None and not self._is_ordered:
+            order = self._order()
+            self._is_ordered = order is not None and self.child.tell(order)
 
     def heard(self, now: float) -> tuple[list[Any], str | None]:
         """Return what it said, and why it died, if it did: it is then started again in a while."""

@@ -205,7 +205,7 @@ class Ring:
         slot = self._slots[place]
         slot[_Slot.NUMBER] = -1  # whoever still reads the block that was here sees that it is gone
         scale = _SCALE.get(samples.dtype.char)
-        target = self._samples[place, : len(samples)]
+        target = self._samples[place, : len(samples), : samples.shape[1]]  # what a device does not have stays silent
         if scale is None:
             np.copyto(target, samples)
         else:
