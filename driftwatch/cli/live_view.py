@@ -47,7 +47,10 @@ def screen_of(board: Board, width: int, height: int, state: str = "") -> list[En
     top = [*head(board), *([Entry("state", (state,), "bold")] if state else [])]
     above = [wrapped(entry, width) for entry in top if entry.lines != ("",)]
     room = height - sum(len(entry.lines) for entry in above)
-    return [*above, *fitted(entries(board, width), max(room, 1))]
+    if room < height // 2:  # what stands is worth more than how the daemon does
+        above = above[:1]
+        room = height - len(above[0].lines)
+    return [*above, *fitted(entries(board, width), width, max(room, 1))]
 
 
 class Pane:

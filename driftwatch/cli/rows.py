@@ -173,7 +173,8 @@ def mode_entries(board: Board, width: int) -> list[Entry]:
     for (_, track), row in zip(modes, rows, strict=True):
         colour = "yellow" if track is None else _STATUS_COLOUR.get(track.status)
         what = "tracked mode" if row[0] == TrackStatus.TRACKING else "mode not tracked"
-        found.append(Entry(what, _placed(layout, row, _widths(rows)), colour))
+        entry = Entry(what, _placed(layout, row, _widths(rows)), colour)
+        found.append(entry if max(map(len, entry.lines)) <= width else wrapped(entry, width))
     return found
 
 
@@ -217,19 +218,26 @@ def _placed(layout: Sequence[Sequence[int]], cells: Sequence[str], widths: Seque
 # ---------------------------------------------------------------------------------------------- room
 
 
-def fitted(found: Sequence[Entry], height: int) -> list[Entry]:
-    """Return the first entries that fit into so many lines; the last line then says what is not shown."""
-    if sum(len(entry.lines) for entry in found) <= height:
+def fitted(found: Sequence[Entry], width: int, height: int) -> list[Entry]:
+    """Return the first entries that fit into so many lines; the last ones then say what is not shown."""
+    used = sum(len(entry.lines) for entry in found)
+    if used <= height:
         return list(found)
-    shown, used = 0, 0
-    while used + len(found[shown].lines) <= height - 1:
-        used += len(found[shown].lines)
-        shown += 1
-    hidden: dict[str, int] = {}
-    for entry in found[shown:]:
-        hidden[entry.what] = hidden.get(entry.what, 0) + 1
-    text = ", ".join(_count(count, what) for what, count in hidden.items())
-    return [*found[:shown], Entry("rest", (f"not shown, no room: {text}",), "bold")]
+    shown = len(found)
+    while True:
+        shown -= 1
+        used -= len(found[shown].lines)
+        rest = _rest(found[shown:], width)
+        if used + len(rest.lines) <= height or shown == 0:
+            return [*found[:shown], rest]
+
+
+def _rest(hidden: Sequence[Entry], width: int) -> Entry:
+    counts: dict[str, int] = {}
+    for entry in hidden:
+        counts[entry.what] = counts.get(entry.what, 0) + 1
+    text = ", ".join(_count(count, what) for what, count in counts.items())
+    return wrapped(Entry("rest", (f"not shown, no room: {text}",), "bold"), width)
 
 
 def _count(count: int, what: str) -> str:

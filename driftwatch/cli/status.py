@@ -138,7 +138,7 @@ def _screen(look: Look, width: int, height: int) -> list[Entry]:
     found = [Entry("verdict", (texts[0],), COLOURS[look.verdict]), Entry("state", (look.told,))]
     now_ns = look.last.time_ns if look.last else 0
     found += [Entry("alert that stands", (f"then: {alert_text(one, now_ns)}",)) for one in look.board.standing]
-    return fitted([wrapped(entry, width) for entry in found], height)
+    return fitted([wrapped(entry, width) for entry in found], width, height)
 
 
 def _print(look: Look, as_json: bool) -> None:

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from typing import Any
 
 import pytest
-from driftwatch.cli.view import LEGEND, WIDTH, RunView, folded, mode_line
+from driftwatch.cli.view import LEGEND, WIDTH, RunView, elided, folded, mode_line
 from driftwatch.records import (
     NS,
     AlertState,
@@ -129,3 +130,15 @@ def test_nothing_is_wider_than_the_width_whatever_the_names(alert: Make, capsys:
 def test_a_value_keeps_its_unit_on_its_line() -> None:
     text = "x" * (WIDTH - 6) + " 408 Hz"
     assert folded(text, "  ").splitlines() == ["x" * (WIDTH - 6), "  408 Hz"]
+
+
+def test_names_that_would_be_cut_to_the_same_stay_whole() -> None:
+    alike = [f"drive end / rib {number} of the long housing" for number in (10, 11)]
+    assert elided([*alike, "a" * 40, "b"]) == [*alike, "a" * 16 + "…" + "a" * 17, "b"]
+
+
+@pytest.mark.parametrize("fault", [Fault.GAP, Fault.OVERFLOW, Fault.SLOW_CONSUMER, Fault.DEVICE])
+def test_missing_time_is_counted_whatever_its_cause(fault: Fault) -> None:
+    view = RunView(MODES, None)
+    view.show([_wrapped(31, replace(_gap(Phase.END, 30.0), fault=fault))])
+    assert view.summary()[0].endswith(", 30 s of it missing.")
