@@ -53,9 +53,6 @@ def command(
 
     \b
     Example: driftwatch replay config/post-mortem.toml before.wav during.wav --start 2026-03-01T06:00:00Z
-
-    \b
-    Example: driftwatch replay line3.toml recordings/
     """  # noqa: D301 - \b is click's mark for lines that stay as they are
     configuration = load_served(config, live=False)
     source = _opened(configuration, recordings, start)
