@@ -12,14 +12,16 @@ good by the length of what is lost. A block close to the floor is kept at once. 
 
 What this can and cannot see, with blocks of `block` seconds:
 
-* A loss longer than ``max(THRESHOLD_BLOCKS block, THRESHOLD_NS)`` is found: a single block where it is longer than
-  15 ms, of shorter blocks as many as make 15 ms. What is shorter goes into the floor within `FLOOR_NS`: it stays
-  untold, and later samples are late by it.
-* A false gap needs every block of `SETTLE_NS`, 25 of 20 ms, late by more than the threshold without being lost. With
-  independent exponential delays of mean 3 ms that has a probability of exp(-25 * 15 / 3), and of 10 ms of exp(-37);
-  delays of single callbacks, however long, end in a burst that comes back to the floor. What would do it is a delay
-  that the device or its server adds for good.
-* A clock that is slow by 300 ppm lifts the floor by 3 ms in `FLOOR_NS`, a fifth of the threshold, before its rate is
+* A loss longer than ``max(THRESHOLD_BLOCKS block, THRESHOLD_NS)`` above the floor is found: two blocks of 20 ms, three
+  of 10 ms. What is shorter goes into the floor within `FLOOR_NS`: it stays untold, and later samples are late by it.
+* Its length is right within a block. Where the lag is steady it is right within a few ms; where blocks are cut from
+  periods of another length, the lag is a sawtooth as high as a block and seconds long (measured on a sound server:
+  20 ms in 2 to 4 s), and half a second shows only a part of it. What a gap was too long by is seen afterwards
+  (`_learn_ahead`) and left out of the next one, so that errors do not add up.
+* Where delays do not come in step with the blocks, a false gap needs all of `SETTLE_NS`, 25 blocks of 20 ms, late by
+  more than the threshold: for exponential delays of mean 10 ms a probability of exp(-75). Delays of single callbacks,
+  however long, end in a burst that comes back to the floor. What would do it is a delay that the device adds for good.
+* A clock that is slow by 300 ppm lifts the floor by 3 ms in `FLOOR_NS`, a tenth of the threshold, before its rate is
   known (half a minute) and the lag is reckoned with it.
 """
 
@@ -30,16 +32,19 @@ from typing import TYPE_CHECKING
 
 from driftwatch.records import NS, Fault
 from driftwatch.stream.clock import RateEstimate
-from driftwatch.stream.quarantine import TOLERANCE_NS, Arrival, Floor, Held
+from driftwatch.stream.quarantine import FLOOR_NS, TOLERANCE_NS, Arrival, Floor, Held
 
 if TYPE_CHECKING:
     from collections.abc import Iterable
 
-THRESHOLD_BLOCKS = 0.75
-"""Between the jitter, which is no multiple of a block, and one block, which is the least that most devices lose."""
+THRESHOLD_BLOCKS = 1.5
+"""Where blocks are cut from the device's own periods of another length, the lag is a sawtooth as high as a block."""
 
 THRESHOLD_NS = 15_000_000
-"""Lag above the floor at which a block is held, where blocks are short."""
+"""Lag above the floor at which a block is held, where blocks are shorter than 10 ms: more than usual jitter."""
+
+MOST_DRIFT_NS = FLOOR_NS * 300 // 1_000_000
+"""How far a clock off by 300 ppm moves the lag in that time."""
 
 START_NS = NS
 """In the first second of the first stream the device may still be filling its buffers ..."""
@@ -84,10 +89,14 @@ class ArrivalJudge:
         self.rate = RateEstimate(rate_hz)
         self._rate_hz = rate_hz
         self._most_held = int(HELD_S * rate_hz / block_frames) + 1 if most_held is None else most_held
+        self._measurable_ns = max(TOLERANCE_NS, block_ns)
         self._threshold_ns = max(THRESHOLD_NS, int(THRESHOLD_BLOCKS * block_ns))
         self._held = Held(block_ns)
         self._floor = Floor()
         self._deviation = 0.0  # relative, as the lag is reckoned with
+        self._ahead_ns = 0  # by so much indices are ahead of the clock since the last gap: a level measured too high
+        self._reference_ns: int | None = None  # where the lag would be if not, until this is known
+        self._reference_until_ns: int | None = None
         self._index = 0  # behind the last sample decided
         self._due_ns = 0  # when it was due to arrive, without the floor
         self._head_ns = 0  # the same for the last sample that came
@@ -106,7 +115,7 @@ class ArrivalJudge:
             raise ValueError("the stream has begun already; expected begin_at() before the first block")
         self._index = self._told = index
         self._due_ns = self._head_ns = monotonic_ns
-        self._floor.set(monotonic_ns, 0)
+        self._floor.level_ns = self._reference_ns = 0
 
     def opened(self, reason: Fault) -> list[Placed]:
         """Take in that a device's stream begins, the first or another; `reason` is why there is a gap before it.
@@ -171,14 +180,14 @@ class ArrivalJudge:
         self._last_ns = arrived_ns
         if self._floor.level_ns is None:  # the very first
             self._fresh_until_ns = arrived_ns + START_NS
-            self._floor.set(arrived_ns, arrival.lag_ns)
+            self._floor.level_ns = arrival.lag_ns
         placed = self._judge(arrival, silence_ns)
         if not self._held.arrivals:
             self._head_ns = self._due_ns
         return placed
 
     def _judge(self, arrival: Arrival, silence_ns: int) -> list[Placed]:
-        late = arrival.lag_ns > self._level_ns() + self._threshold_ns
+        late = arrival.lag_ns > self._floor_ns() + self._threshold_ns
         if not (self._held.arrivals or late or arrival.flagged or self._placing):
             return self._keep((arrival,))
         self._held.add(arrival, silence_ns)
@@ -197,14 +206,15 @@ class ArrivalJudge:
         """Decide what is held now that its lag stands at `level_ns`."""
         held = self._held
         arrivals = tuple(held.arrivals)
-        excess_ns = level_ns - self._level_ns()
+        excess_ns = level_ns - self._floor_ns()
         reached = held.doubtful(level_ns)
         if self._placing:  # the hole ended before the first block
             self._placing = False
-        elif held.flagged and excess_ns <= TOLERANCE_NS:
+        elif held.flagged and excess_ns <= self._measurable_ns:
             return self._keep_unflagged(arrivals)
         elif not held.flagged and excess_ns <= START_SLACK_NS and self._is_fresh(arrivals[0]):
-            self._floor.set(arrivals[0].arrived_ns, level_ns)
+            self._floor.level_ns = level_ns
+            self._floor.restart()
             self.rate.gap()
             return self._release()
         else:
@@ -214,7 +224,7 @@ class ArrivalJudge:
             reached = max(reached, held.last_flagged() + 1) if held.flagged else reached + 2
         held.clear()
         placed = self._throw(arrivals[:reached])
-        self._skip(max(0, excess_ns))
+        self._skip(level_ns)
         return placed + self._keep(arrivals[reached:])
 
     def _keep_unflagged(self, arrivals: tuple[Arrival, ...]) -> list[Placed]:
@@ -247,6 +257,7 @@ class ArrivalJudge:
             first = self._index
             self._advance(arrival.frames)
             self._floor.add(arrival.arrived_ns, arrival.arrived_ns - self._due_ns)
+            self._learn_ahead(arrival.arrived_ns)
             self.rate.count(self._index, arrival.arrived_ns)
             if arrival.number is None:
                 self._blame(Fault.SLOW_CONSUMER)
@@ -266,11 +277,27 @@ class ArrivalJudge:
                 placed.append(Placed(arrival.number, None, None))
         return placed
 
-    def _skip(self, lost_ns: int) -> None:
-        """Advance by what was lost in so much time."""
-        lost = self._frames_in(lost_ns)
+    def _skip(self, level_ns: int) -> None:
+        """Advance by what was lost, so that the lag falls from `level_ns` to where it was when the index was right."""
+        self._reference_ns = self._level_ns()
+        lost = self._frames_in(max(0, level_ns - self._reference_ns))
         self._advance(lost)
+        self._floor.level_ns = level_ns - self._length_ns(lost)
+        self._floor.restart()
+        self._reference_until_ns = None
         self.rate.gap()
+
+    def _learn_ahead(self, arrived_ns: int) -> None:
+        """See by how much the index is ahead since the last gap, once the floor is known again."""
+        if self._reference_ns is None:
+            return
+        if self._reference_until_ns is None:
+            self._reference_until_ns = arrived_ns + FLOOR_NS
+        if arrived_ns >= self._reference_until_ns:
+            ahead_ns = self._reference_ns - self._floor_ns()
+            drifted = not self._deviation and abs(ahead_ns) <= MOST_DRIFT_NS  # a rate not known yet explains it
+            self._ahead_ns = 0 if drifted else ahead_ns
+            self._reference_ns = self._reference_until_ns = None
 
     def _advance(self, frames: int) -> None:
         self._index += frames
@@ -317,6 +344,11 @@ class ArrivalJudge:
         return self._due_ns + self._level_ns() + self._length_ns(index - self._index)
 
     def _level_ns(self) -> int:
+        """Return the lag of an undelayed block whose index is right."""
+        floor_ns = self._floor_ns()
+        return floor_ns + self._ahead_ns if self._reference_ns is None else self._reference_ns
+
+    def _floor_ns(self) -> int:
         if self._floor.level_ns is None:
             raise ValueError("no instant is tied to an index yet; expected begin_at() or a first block before")
         return self._floor.level_ns

@@ -11,12 +11,9 @@ differences become floats.
 from __future__ import annotations
 
 import math
-from typing import TYPE_CHECKING, Protocol
+from typing import Protocol
 
 from driftwatch.records import NS, Clock, sample_time_ns
-
-if TYPE_CHECKING:
-    from collections.abc import Callable
 
 BIN_NS = 10 * NS
 """Of so much time the earliest arrival counts: one in hundreds is late by next to nothing, the mean by milliseconds."""
@@ -240,9 +237,8 @@ class Counted(Protocol):
         """Stream index behind the latest sample that was counted."""
         ...
 
-    @property
-    def instant_ns(self) -> Callable[[int], int]:
-        """The monotonic instant that belongs to a stream index."""
+    def instant_ns(self, index: int) -> int:
+        """Return the monotonic instant that belongs to a stream index."""
         ...
 
 

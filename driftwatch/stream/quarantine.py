@@ -12,7 +12,13 @@ if TYPE_CHECKING:
     from collections.abc import Iterable
 
 SETTLE_NS = NS // 2
-"""The smallest lag of the halves of this time must agree before a loss is believed; at least 4 blocks."""
+"""The smallest lag of the halves of this time must agree before a loss is believed ..."""
+
+SETTLE_BURSTS = 8
+"""... and so many bursts (single blocks, where they come singly) must have come in it; else it is longer.
+
+A delay of 0.2 s holds up two bursts 0.17 s apart, and two such delays in a row are no rarity in a day: of few bursts
+all may be late. Blocks of 20 ms that come singly or in pairs need no more than `SETTLE_NS`."""
 
 FORCED_NS = NS
 """A lag that neither comes back nor settles is decided after so much; where it falls, after `CATCH_UP_NS`."""
@@ -61,10 +67,9 @@ class Floor:
                 self._least.popleft()
         self.level_ns = min(lag for _, lag in self._least)
 
-    def set(self, arrived_ns: int, lag_ns: int) -> None:
-        """Forget all lags for this one."""
+    def restart(self) -> None:
+        """Learn the level anew from the lags to come; until then it stands."""
         self._least.clear()
-        self.add(arrived_ns, lag_ns)
 
 
 class Held:
@@ -77,8 +82,7 @@ class Held:
     """
 
     def __init__(self, block_ns: int) -> None:
-        self._settle_ns = max(SETTLE_NS, 4 * block_ns)
-        self._forced_ns = max(FORCED_NS, 2 * self._settle_ns)
+        self._apart_ns = block_ns // 2
         self._pause_ns = max(SETTLE_NS // 2, 3 * block_ns)
         self._device_ns = max(DEVICE_SILENCE_NS, 4 * block_ns)
         self.arrivals: deque[Arrival] = deque()
@@ -88,16 +92,19 @@ class Held:
         """Forget all."""
         self.arrivals.clear()
         self.flagged = False
-        self._began_ns: int | None = None  # since when the lag may have settled
+        self._bursts: deque[int] = deque(maxlen=SETTLE_BURSTS)  # when the last ones began
+        self._began_ns = 0  # since when the lag may have settled
         self._last_ns = 0
         self._busy_ns = 0  # time in which blocks came, pauses left out
         self._silence_ns = 0
 
     def add(self, arrival: Arrival, silence_ns: int) -> None:
         """Hold a block that came `silence_ns` after the one before it."""
-        paused = silence_ns > self._pause_ns
-        if self._began_ns is None or paused or arrival.flagged:
+        if not self.arrivals or silence_ns > self._pause_ns or arrival.flagged:
             self._began_ns = arrival.arrived_ns
+            self._bursts.clear()
+        if not self._bursts or silence_ns > self._apart_ns:
+            self._bursts.append(arrival.arrived_ns)
         self._busy_ns += min(silence_ns, self._pause_ns) if self.arrivals else 0
         self._silence_ns = max(self._silence_ns, silence_ns)
         self._last_ns = arrival.arrived_ns
@@ -115,16 +122,16 @@ class Held:
         """Return the level at which the smallest lag has settled, or at which it must be taken; None: not yet."""
         now = self._last_ns
         forced = self._busy_ns >= CATCH_UP_NS
-        if not forced and (self._began_ns is None or now - self._began_ns < self._settle_ns):
+        settled = len(self._bursts) == SETTLE_BURSTS and now - self._began_ns >= SETTLE_NS
+        if not (settled or forced):
             return None
-        early = min(self._lags(now - self._settle_ns, now - self._settle_ns // 2), default=None)
-        late = min(self._lags(now - self._settle_ns // 2, now))
-        if forced or early is None:
-            return late if forced else None
+        half_ns = max(SETTLE_NS, now - self._bursts[0] + 1) // 2
+        late = min(self._lags(now - half_ns, now))
+        early = min(self._lags(now - 2 * half_ns, now - half_ns), default=late)
         if abs(late - early) <= TOLERANCE_NS:
             return min(late, early)
-        falls = late < early
-        return late if self._busy_ns >= self._forced_ns and not falls else None
+        stuck = self._busy_ns >= max(FORCED_NS, 4 * half_ns) and late > early
+        return late if stuck or forced else None
 
     def doubtful(self, level_ns: int) -> int:
         """Return how many come before the first one that is at `level_ns` to stay (lower ones precede the hole)."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -42,13 +43,15 @@ def simulate(
     rare_s: float = 0.2,
     rare_per_s: float = 0.05,
     burst: int = 1,
+    period_s: float = 0.0,
     losses: tuple[tuple[float, float], ...] = (),
     stalls: tuple[tuple[float, float], ...] = (),
 ) -> Simulated:
     """Return a stream that begins `start_s` after T0, at the device sample of that instant.
 
     `losses` are (when, length) of samples that the device forgot, `stalls` (when, length) in which no callback ran;
-    both in seconds from the start. `burst` blocks arrive together. Delays are exponential, and `rare_s` at times.
+    both in seconds from the start. `burst` blocks arrive together, at multiples of `period_s`.
+    Delays are exponential, and `rare_s` at times.
     """
     rng = np.random.default_rng(seed)
     true_rate = RATE * (1.0 + 1e-6 * ppm)
@@ -63,6 +66,8 @@ def simulate(
         last += np.where(last >= at, length, 0)
     due_s = (last + 1) / true_rate
     due_s = np.repeat(due_s[burst - 1 :: burst], burst)
+    if period_s:
+        due_s = np.ceil(due_s / period_s) * period_s
     ready = due_s + rng.exponential(jitter_s, blocks) + rare_s * (rng.random(blocks) < rare_per_s * block / RATE)
     for at, length in stalls:
         ready = np.where((ready >= at) & (ready < at + length), at + length, ready)
@@ -117,15 +122,19 @@ def test_blocks_in_pairs_wait_only_for_their_partner() -> None:
         assert judge.held == 0 or k % 2 == 0
 
 
-@pytest.mark.parametrize("seed", range(3))
+@pytest.mark.parametrize("seed", range(2))
 @pytest.mark.parametrize(
-    ("block", "burst", "ppm"), [(480, 1, -300.0), (960, 1, 300.0), (960, 2, -300.0), (1024, 5, -300.0), (4800, 1, 80.0)]
+    ("block", "burst", "ppm"), [(480, 1, -300.0), (960, 1, 300.0), (960, 2, -300.0), (1024, 8, -300.0), (4800, 1, 80.0)]
 )
 def test_jitter_rare_delays_and_bursts_give_no_false_gap(block: int, burst: int, ppm: float, seed: int) -> None:
-    """20 minutes each; probability of a false gap by the module's analysis: under 1e-30."""
-    of = simulate(1200.0, seed, block=block, burst=burst, ppm=ppm)
+    """10 minutes each, in which some 30 callbacks are late by 0.2 s; days were run by hand.
+
+    False alarm by the module's analysis: with bursts 0.17 s apart, each late with probability 1 %, a false gap takes
+    four delays in a row, 1e-8 a burst; without bursts it is under 1e-30.
+    """
+    of = simulate(600.0, seed, block=block, burst=burst, ppm=ppm)
     placed = of.run(begun(block))
-    assert len(placed) >= len(of.first) - 2 * 50 * 5
+    assert len(placed) >= len(of.first) - 50, "but for what is held at the end all are decided"
     assert all(one.first_sample == of.first[one.number] and one.cause is None for one in placed)
 
 
@@ -161,10 +170,10 @@ def test_a_device_that_fills_its_buffers_at_first_gives_no_gap() -> None:
 
 @pytest.mark.parametrize("ppm", [-300.0, 0.0, 300.0])
 @pytest.mark.parametrize("seed", range(2))
-@pytest.mark.parametrize("length", [0.02, 0.03, 0.1, 0.5, 2.0, 10.0])
+@pytest.mark.parametrize("length", [0.035, 0.1, 0.5, 2.0, 10.0])
 def test_a_loss_without_a_flag_is_one_gap_of_its_length(length: float, ppm: float, seed: int) -> None:
     """The samples are not there and nobody says so; later samples keep their true time to a quarter of a block."""
-    for at in (5.0, 41.0037, 77.7131):
+    for at in (5.0, 41.0037):
         of = simulate(at + 20.0, seed, ppm=ppm, losses=((at, length),), rare_s=0.1)
         placed = of.run(begun())
         gaps = check(of, placed, within=BLOCK // 4)
@@ -188,10 +197,30 @@ def test_a_stall_that_loses_part_of_its_samples(oldest_kept: bool) -> None:
 
 
 def test_losses_in_a_row_are_all_found() -> None:
-    losses = tuple((10.0 + 4.0 * i, 0.03 + 0.02 * i) for i in range(10))
+    losses = tuple((10.0 + 4.0 * i, 0.04 + 0.02 * i) for i in range(10))
     of = simulate(70.0, 2, losses=losses, rare_s=0.0)
     gaps = check(of, of.run(begun()), within=BLOCK // 2)
     assert len(gaps) == 10
+
+
+@pytest.mark.parametrize("period_s", [0.0201, 0.0253, 0.0133])
+def test_blocks_cut_from_other_periods_give_no_false_gap(period_s: float) -> None:
+    """The lag is a sawtooth as high as the period, for 20.1 ms 4 s long; as on a sound server."""
+    of = simulate(300.0, period_s=period_s, ppm=-300.0, jitter_s=0.001, rare_per_s=0.1)
+    placed = of.run(begun())
+    assert all(one.first_sample == of.first[one.number] and one.cause is None for one in placed)
+
+
+@pytest.mark.parametrize("period_s", [0.0201, 0.0253])
+def test_errors_of_gaps_do_not_add_up(period_s: float) -> None:
+    """Each gap is too long by up to a period, 10 ms on average, 0.3 s for all thirty; they stay within one period.
+
+    On top comes 0.2 ms for each gap: so well does a floor of 10 s know the lag here.
+    """
+    losses = tuple((20.0 + 15.0 * i, 0.1 + 0.0317 * i) for i in range(30))
+    of = simulate(500.0, 2, period_s=period_s, losses=losses, jitter_s=0.001, rare_s=0.0)
+    gaps = check(of, of.run(begun()), within=int((max(period_s, 0.02) + 30 * 0.0002) * RATE))
+    assert len(gaps) == 30
 
 
 def test_what_is_shorter_than_the_threshold_is_not_told_and_delays_by_no_more_than_itself() -> None:
@@ -228,11 +257,12 @@ def test_what_is_held_is_bounded_by_number_too() -> None:
 # ---------------------------------------------------------------------------------------------- flags, drops
 
 
-@pytest.mark.parametrize("length", [0.0, 0.004, 0.012, 0.3, 1.7])
+@pytest.mark.parametrize("length", [0.0, 0.018, 0.024, 0.3, 1.7])
 def test_a_flagged_loss_is_measured_or_costs_its_block(length: float) -> None:
+    """A loss of less than a block is not measured, and the index is late by it afterwards."""
     of = simulate(40.0, 3, jitter_s=0.001, rare_s=0.0, losses=((20.0, length),) if length else ())
     place = 20 * RATE // BLOCK
-    gaps = check(of, of.run(begun(), flagged=frozenset({place})), within=240 if length else 0)
+    gaps = check(of, of.run(begun(), flagged=frozenset({place})), within=math.ceil(min(length, 0.02) * RATE))
     assert [(one.cause, one.number) for one in gaps] == [(Fault.OVERFLOW, place + 1)]
 
 

@@ -48,17 +48,20 @@ def errors(*, runs: int, seconds: float, wander: bool, jitter_s: float) -> np.nd
     return np.array(out)
 
 
-@pytest.mark.parametrize("jitter_s", [0.001, 0.02, 0.2])
-@pytest.mark.parametrize("seconds", [45, 300, 3000])
+@pytest.mark.parametrize("jitter_s", [0.003, 0.2, 1.0])
+@pytest.mark.parametrize("seconds", [45, 300, 1500])
 def test_stated_uncertainty_of_the_rate_covers_its_error(seconds: int, jitter_s: float) -> None:
-    """95 % intervals hold the truth in at least 95 % of 200 runs with a steady clock; false alarm 1e-6."""
+    """95 % intervals hold the truth in at least 95 % of 200 runs with a steady clock; false alarm 1e-6.
+
+    They hold it more often where arrivals are good: the noise is guessed at 2 ms until bins have shown less.
+    """
     outside = int(np.sum(np.abs(errors(runs=200, seconds=seconds, wander=False, jitter_s=jitter_s)) > 1.96))
-    assert outside <= 28  # P(X > 28) = 1e-6 for X binomial(200, 0.05)
+    assert outside <= 28  # P(X > 28) = 3e-7 for X binomial(200, 0.05)
 
 
 def test_stated_uncertainty_covers_a_clock_that_wanders() -> None:
     """The same with a rate in a random walk of the size that the estimate assumes; and it is not far too wide."""
-    z = errors(runs=200, seconds=4000, wander=True, jitter_s=0.01)
+    z = errors(runs=200, seconds=4000, wander=True, jitter_s=0.1)
     assert int(np.sum(np.abs(z) > 1.96)) <= 28
     assert 0.5 < math.sqrt(float(np.mean(z**2))) < 1.3
 
