@@ -148,6 +148,7 @@ class LiveView(RunView):
         self._clock = clock
         self._drawn_at = -REDRAW_S
         self._closed = False
+        self._gone: OSError | None = None  # what a sign of life met, for `show` to raise
 
     @property
     def is_drawn(self) -> bool:
@@ -155,7 +156,16 @@ class LiveView(RunView):
         return True
 
     def show(self, envelopes: Sequence[Envelope]) -> None:
-        """Take a group of records: tell news, redraw what stands."""
+        """Take a group of records: tell news, redraw what stands.
+
+        Raises
+        ------
+        OSError
+            When the terminal is gone, also where only a sign of life found that out.
+        """
+        if self._gone is not None:
+            gone, self._gone = self._gone, None
+            raise gone
         self.board.take(envelopes)
         super().show(envelopes)
         self._redraw()
@@ -163,17 +173,24 @@ class LiveView(RunView):
     def beat(self, heartbeat: Heartbeat) -> None:
         """Take a sign of life: ages go on while nothing is measured."""
         self.board.beat(heartbeat)
-        self._redraw(now=True)
+        self._redraw_now()
 
     def status(self, text: str) -> None:
         """Show what the run itself does, such as wait for its device, until it is told anew; empty: nothing."""
         self._state = text
-        self._redraw(now=True)
+        self._redraw_now()
 
     def close(self) -> None:
         """Give the terminal back; what stands is said by the summary."""
         self._closed = True
         self._pane.close(keep=False)
+
+    def _redraw_now(self) -> None:
+        """Redraw for a sign of life, whose giver must not suffer from a terminal that is gone: `show` tells of that."""
+        try:
+            self._redraw(now=True)
+        except OSError as error:
+            self._gone = error
 
     def _redraw(self, *, now: bool = False) -> None:
         if self._closed or not (now or self._clock() - self._drawn_at >= REDRAW_S):

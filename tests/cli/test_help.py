@@ -22,6 +22,9 @@ DAEMONS = {"run", "listen"}
 SOUND = {"devices"}
 """Commands that need a sound card: their own tests run their examples on a virtual one."""
 
+ASKING = {"status"}
+"""Commands that need a daemon to ask."""
+
 LOOKING = {"readings", "runs"}
 """Commands that need a run to look at."""
 
@@ -76,7 +79,7 @@ def test_without_a_command_the_program_says_where_to_begin() -> None:
 
 
 def test_the_examples_of_work_that_ends_work(bench: Any, layout: Path) -> None:
-    for name in ((), *((name,) for name in COMMANDS if name not in DAEMONS | LOOKING | SOUND)):
+    for name in ((), *((name,) for name in COMMANDS if name not in DAEMONS | ASKING | LOOKING | SOUND)):
         for words in examples(*name):
             done = bench.run(*words)
             assert done.returncode == 0, (words, done.stderr)
@@ -89,6 +92,10 @@ def test_the_examples_of_watching_and_looking_work(bench: Any, layout: Path) -> 
     ((_, *heard),) = examples("listen")
     listener = bench.start("listen", *(word.replace("5571", str(bench.port)) for word in heard))
     assert "track/drive_end/" in listener.stdout.readline()
+    for words in (words for name in sorted(ASKING) for words in examples(name) if "--watch" not in words):
+        asked = bench.run(*words)
+        assert asked.returncode in (0, 3, 4), (words, asked.stderr)
+        assert asked.stdout
     for process in (listener, daemon):
         process.send_signal(signal.SIGINT)
         assert process.wait(timeout=20) == 0

@@ -296,3 +296,42 @@ def test_a_board_forgets_the_incident_that_ended_and_keeps_the_others() -> None:
     board.take([wrapped(1, a_fault()), wrapped(2, a_fault(incident="two"))])
     board.take([wrapped(3, replace(a_fault(), phase=Phase.END))])
     assert [fault.incident for fault in board.faults] == ["two"]
+
+
+GONE = """
+import os, sys
+sys.path.insert(0, {folder!r})
+import test_live_view as t
+from driftwatch.cli.live_view import LiveView
+view = LiveView([("drive end", "rocking")])
+view.show([t.wrapped(1, t.a_track())])
+view.beat(t.a_beat())
+os.close(int(sys.argv[1]))  # nobody holds the other end any more
+view.beat(t.a_beat())
+view.status("still here")
+try:
+    view.show([t.wrapped(2, t.a_fault())])
+except OSError:
+    os.write(2, b"told\\n")  # not by sys.stderr, for which the view stands in
+    os._exit(0)
+"""
+
+
+def test_a_terminal_that_is_gone_stops_no_heartbeat_and_is_told_by_the_next_records() -> None:
+    terminal, inside = pty.openpty()
+    script = GONE.format(folder=os.path.dirname(__file__))  # noqa: PTH120 - text for a script
+    process = subprocess.Popen(
+        [sys.executable, "-c", script, str(terminal)],
+        stdout=inside,
+        stderr=subprocess.PIPE,
+        pass_fds=[terminal],
+        env={**os.environ, "TERM": "xterm-256color", "OMP_NUM_THREADS": "1"},
+    )
+    os.close(inside)
+    os.close(terminal)
+    try:
+        assert process.communicate(timeout=30)[1].decode().endswith("told\n")
+        assert process.returncode == 0
+    finally:
+        process.kill()
+        process.wait()
