@@ -81,7 +81,7 @@ class ArrivalJudge:
     block_frames : int
         Samples in a usual block.
     most_held : int, optional
-        Most blocks held; `HELD_S` seconds of them if left out. Give less where fewer can be stored.
+        Most blocks held; `HELD_S` seconds of them if left out. Give less where fewer can be stored, but two seconds.
     """
 
     def __init__(self, rate_hz: int, block_frames: int, most_held: int | None = None) -> None:
