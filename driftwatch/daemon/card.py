@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 import time
 from collections.abc import Callable, Iterable
 from multiprocessing.connection import Connection
@@ -73,7 +74,7 @@ class CardCapture:
         self._connection = connection
         self._utc_ns = utc_ns
         self._rate_hz = ring.shape.rate_hz
-        self._judge = ArrivalJudge(self._rate_hz, ring.shape.frames)
+        self._judge = ArrivalJudge(self._rate_hz, ring.shape.frames, ring.shape.most_waiting * 3 // 4)
         self._wall = WallClock()
         self._start_ns = order.start_ns  # stream time of sample 0; None: it does not run yet
         self._device = ""
@@ -189,6 +190,7 @@ class CardCapture:
 
     def _leave(self) -> None:
         """End this process past a sound library that hangs; the parent starts another one."""
+        sys.stderr.write("the sound system hangs; only a new process can try again\n")  # the parent tells it
         leave_hung(EXIT_HUNG)
 
     # ------------------------------------------------------------------------------------------ listening

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import dataclasses
+import time
 import uuid
 
-from driftwatch.records import NS, Fault, Health, Phase
+from driftwatch.records import Fault, Health, Phase
 
 
 class Incidents:
@@ -13,30 +14,37 @@ class Incidents:
 
     def __init__(self) -> None:
         self._open: dict[str, Health] = {}
+        self._since: dict[str, float] = {}  # monotonic time of the begin, seconds
 
     def begin(self, key: str, fault: Fault, now_ns: int, detail: str) -> Health | None:
-        """Return the begin of a fault at stream time `now_ns`; its going on, where the words are new; else None."""
+        """Return the begin of a fault at stream time `now_ns`; its going on, where the words are new; else None.
+
+        Stream time may stand still while a fault lasts, therefore its length is counted on the computer's clock.
+        """
         known = self._open.get(key)
         if known is not None and known.detail == detail:
             return None
         if known is None:
+            self._since[key] = time.monotonic()
             body = _health(fault, Phase.BEGIN, str(uuid.uuid4()), now_ns, detail)
         else:
-            seconds = max(0.0, (now_ns - known.since_ns) / NS)
-            body = dataclasses.replace(known, phase=Phase.CONTINUE, seconds=seconds, detail=detail)
+            body = dataclasses.replace(known, phase=Phase.CONTINUE, seconds=self._seconds(key), detail=detail)
         self._open[key] = body
         return body
 
-    def end(self, key: str, now_ns: int) -> Health | None:
+    def end(self, key: str) -> Health | None:
         """Return the end of a fault; None where it does not stand."""
         known = self._open.pop(key, None)
         if known is None:
             return None
-        return dataclasses.replace(known, phase=Phase.END, seconds=max(0.0, (now_ns - known.since_ns) / NS))
+        return dataclasses.replace(known, phase=Phase.END, seconds=self._seconds(key))
 
-    def end_all(self, now_ns: int) -> list[Health]:
+    def end_all(self) -> list[Health]:
         """Return the ends of all faults that stand."""
-        return [body for key in list(self._open) if (body := self.end(key, now_ns)) is not None]
+        return [body for key in list(self._open) if (body := self.end(key)) is not None]
+
+    def _seconds(self, key: str) -> float:
+        return time.monotonic() - self._since[key]
 
 
 def clock_step(now_ns: int, seconds: float, limit_s: float) -> list[Health]:

@@ -174,7 +174,7 @@ class LiveRun:
         if self._failure is not None:
             reason = f"failed: {self._failure}"
         readings = [one for worker in sorted(self._finished) for one in self._finished[worker]]
-        self._take([self.station.note(body) for body in self._incidents.end_all(self.station.now_ns)])
+        self._take([self.station.note(body) for body in self._incidents.end_all()])
         self._take(self.station.finish(reason, readings))
         self._end_children(10.0)
         self._keeper.flush()
@@ -327,7 +327,7 @@ class LiveRun:
             self._take([self.station.note(body)])
 
     def _fault_ends(self, key: str) -> None:
-        body = self._incidents.end(key, self.station.now_ns)
+        body = self._incidents.end(key)
         if body is not None:
             self._take([self.station.note(body)])
 

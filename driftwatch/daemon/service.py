@@ -8,7 +8,7 @@ from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING, Self
+from typing import TYPE_CHECKING, Self, TypeVar
 
 from driftwatch.bus.publisher import Publisher
 from driftwatch.config import ConfigError, Configuration, SoundcardSourceConfig, is_simulated, load, unserved
@@ -22,12 +22,17 @@ from driftwatch.daemon.state import StateLock
 from driftwatch.pipeline.station import RunHeader, Station
 from driftwatch.records import Command, Envelope, Heartbeat, Origin
 from driftwatch.store.errors import unreachable
+from driftwatch.store.location import database_path
+from driftwatch.store.lock import HolderLock, WriterLock
+from driftwatch.store.opening import refuse_foreign, refuse_read_only
 from driftwatch.store.writer import Writer
 
 if TYPE_CHECKING:
     from driftwatch.daemon.feed import Feed
     from driftwatch.daemon.stop import Stop
     from driftwatch.stream.source import Source
+
+_Lock = TypeVar("_Lock", bound=HolderLock)
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,6 +96,7 @@ class Service:
         self._run = str(uuid.uuid4())
         self._opened = ExitStack()
         self._hangup: Stop | None = None
+        self._is_open = False
 
     def __enter__(self) -> Self:
         return self
@@ -99,34 +105,45 @@ class Service:
         self._opened.close()
 
     def open(self, stop: Stop) -> bool:
-        """Open everything, the source first and the database last; return False if `stop` came before it was done.
+        """Open everything: ports and locks, then the source, the database last; return False if `stop` came first.
 
         Raises
         ------
         StateError, BusError, SourceRefusedError, StoreError
             When something cannot be had; nothing was stored then.
         """
-        config, enter = self._config, self._opened.enter_context
-        if self._store is None:
-            enter(_folder_of(config.store.url))
-        enter(StateLock(self._state_folder(), config.station.name))
+        config, outlets, enter = self._config, self._outlets, self._opened.enter_context
+        station = config.station.name
+        publisher = enter(Publisher(self._publish or config.bus.publish))
         self._manager = enter(ServiceManager())
         for warning in self._manager.warnings:
-            self._outlets.told(warning, True)
-        publisher = enter(Publisher(self._publish or config.bus.publish))
-        outlets = self._outlets
+            outlets.told(warning, True)
+        if self._store is None:
+            enter(_folder_of(config.store.url))
+        url = self._store or config.store.url
+        path = database_path(url, Path.cwd())
+        refuse_foreign(path)
+        refuse_read_only(path)
+        lock = self._locked(WriterLock(path, station))
+        self._locked(StateLock(self._state_folder(), station))
         company = Company(publisher, self._chore, outlets.told, outlets.beat, outlets.observer)
         self._live = enter(LiveRun(config, self._run, self._feed, company))
         source = self._live.start(stop)
         if source is None:
             return False
-        writer = enter(Writer.open(self._store or config.store.url, config.station.name))
+        writer = enter(Writer.open(url, station, lock=lock))
+        self._is_open = True
         outlets.opened(writer.path, publisher.endpoint)
-        header = RunHeader(config.station.name, self._run, origin_of(config), source.time_quality)
+        header = RunHeader(station, self._run, origin_of(config), source.time_quality)
         self._station = Station(config, header, [source])
         self._keeper = Keeper(writer, publisher, outlets.show)
         self._pruner = Pruner(writer, config.store.keep_days, time.time_ns)
         return True
+
+    def _locked(self, lock: _Lock) -> _Lock:
+        """See to it that a lock ends with this, and leaves no file if nothing came of it."""
+        self._opened.callback(lambda: lock.release() if self._is_open else lock.discard())
+        return lock
 
     def _state_folder(self) -> Path:
         """Return the state folder: the configuration's, or that of a database named instead."""

@@ -31,8 +31,9 @@ class HolderLock:
     """The right to something, held from construction until `release`.
 
     The lock is the operating system's (``flock``) on a file: it ends with the process however that ends, so a stale
-    file never locks anybody out. The file tells who holds it and stays behind on purpose, since removing it could hand
-    the same lock to two. Programs that the holder starts do not inherit it.
+    file never locks anybody out. The file tells who holds it and usually stays behind. Only its holder may take it
+    away (`discard`), and whoever gets the lock of a file that is no more at its place asks again, so that two never
+    have it. Programs that the holder starts do not inherit it.
 
     Raises
     ------
@@ -43,9 +44,15 @@ class HolderLock:
     """
 
     def __init__(self, path: Path, station: str) -> None:
+        self._path = path
+        self._is_new = not path.exists()
         self._file = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
         try:
             fcntl.flock(self._file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            while not self._is_at_its_place():
+                os.close(self._file)
+                self._file = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
+                fcntl.flock(self._file, fcntl.LOCK_EX | fcntl.LOCK_NB)
             os.ftruncate(self._file, 0)
             os.pwrite(self._file, f"{os.getpid()} {station}\n".encode(), 0)
         except BlockingIOError:
@@ -59,6 +66,18 @@ class HolderLock:
     def _holder(self) -> str:
         pid, _, station = os.pread(self._file, 200, 0).decode(errors="replace").strip().partition(" ")
         return f"process {pid or 'unknown'} (station {station or 'unknown'!r})"
+
+    def _is_at_its_place(self) -> bool:
+        try:
+            return os.path.samestat(os.fstat(self._file), self._path.stat())
+        except FileNotFoundError:
+            return False
+
+    def discard(self) -> None:
+        """Let the next one in, and leave no file where there was none before."""
+        if self._file >= 0 and self._is_new and self._is_at_its_place():
+            self._path.unlink()
+        self.release()
 
     def release(self) -> None:
         """Let the next one in."""

@@ -61,7 +61,13 @@ class Writer:
         self._file = file_at(path)
 
     @classmethod
-    def open(cls, url: str | Path, station: str, clock: Callable[[], int] = time.time_ns) -> Writer:
+    def open(
+        cls,
+        url: str | Path,
+        station: str,
+        clock: Callable[[], int] = time.time_ns,
+        lock: WriterLock | None = None,
+    ) -> Writer:
         """Open a database for writing; create it or bring it up to date where needed.
 
         Parameters
@@ -70,6 +76,10 @@ class Writer:
             A path or ``sqlite:///PATH``; relative to the current folder.
         station
             Who writes, told to whoever finds the database taken.
+        clock
+            Returns UTC in nanoseconds.
+        lock
+            The right to write to it, where the caller has it already; it then stays the caller's if this fails.
 
         Raises
         ------
@@ -79,11 +89,12 @@ class Writer:
         path = database_path(str(url), Path.cwd())
         refuse_foreign(path)
         refuse_read_only(path)
-        lock = WriterLock(path, station)
+        taken = lock or WriterLock(path, station)
         try:
-            return cls(_prepared(path), path, lock, clock)
+            return cls(_prepared(path), path, taken, clock)
         except BaseException:
-            lock.release()
+            if lock is None:
+                taken.release()
             raise
 
     def write(self, envelopes: Sequence[Envelope]) -> None:
