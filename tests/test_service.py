@@ -110,7 +110,7 @@ def test_every_promise_of_hardening_is_kept() -> None:
         "DeviceAllow": "char-alsa rw",
         "DevicePolicy": "closed",
         "StateDirectory": "driftwatch",
-        "SystemCallFilter": "@system-service",
+        "SystemCallFilter": "@system-service adjtimex clock_adjtime",
         "KillMode": "mixed",
         "Restart": "on-failure",
     }.items():

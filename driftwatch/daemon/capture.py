@@ -9,6 +9,7 @@ from typing import Any
 from driftwatch.daemon.card import CardCapture
 from driftwatch.daemon.messages import Failed, ReadCard, ReadSource
 from driftwatch.records import Block
+from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.ring import Ring
 from driftwatch.stream.source import StreamError
 
@@ -53,7 +54,7 @@ class _PacedCapture:
 
     def _give(self, block: Block) -> None:
         number = self._ring.filled
-        self._ring.take(block.samples, time.monotonic_ns(), False)
+        self._ring.take(block.samples, instant_ns(), False)
         self._ring.place(number, block.first_sample, block.cause)
         self._ring.publish(number + 1)
 
@@ -64,7 +65,7 @@ class _PacedCapture:
         if pace > 0:
             due += (block.first_sample + block.count - self._first) / source.rate_hz / pace
         while True:
-            self._ring.beat(time.monotonic_ns())
+            self._ring.beat(instant_ns())
             if self._connection.poll(0):
                 return False
             left = due - time.monotonic()

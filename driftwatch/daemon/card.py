@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import os
+import stat
 import sys
 import time
 from collections.abc import Callable, Iterable
@@ -21,6 +23,7 @@ from driftwatch.daemon.wall import time_quality
 from driftwatch.records import NS, Fault
 from driftwatch.stream.arrival import ArrivalJudge, Placed
 from driftwatch.stream.clock import WallClock, clock_record
+from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.ring import Ring, Tie
 from driftwatch.stream.soundcard import CardStream, DeviceUnavailableError, find_input, leave_hung, sound_inputs, within
 from driftwatch.stream.source import SourceRefusedError, StreamError
@@ -42,6 +45,9 @@ LOOK_S = 0.004
 CLOCK_FIRST_S = 60.0
 CLOCK_EVERY_S = 600.0
 """When the sample clock's figures are told for the first time, and how often then, seconds."""
+
+LONGEST_STDERR = 1 << 16
+"""Bytes of standard error that are kept before the next attempt to open the device."""
 
 EXIT_HUNG = 3
 """Exit status of a process that gave up a sound library that hangs."""
@@ -121,7 +127,7 @@ class CardCapture:
     def _pause(self, seconds: float) -> None:
         until = time.monotonic() + seconds
         while (left := until - time.monotonic()) > 0 and not self._is_enough():
-            self._ring.beat(time.monotonic_ns())
+            self._ring.beat(instant_ns())
             self._chores()
             time.sleep(min(left, 0.05))
 
@@ -129,8 +135,9 @@ class CardCapture:
 
     def _open(self) -> CardStream | None:
         """Try to open the device; None: it is not to be had now, which was told."""
-        self._ring.beat(time.monotonic_ns())
+        self._ring.beat(instant_ns())
         self._ring.attempt()
+        _shorten_stderr()
         try:
             return within(OPEN_S, self._opened)
         except TimeoutError as error:
@@ -168,7 +175,7 @@ class CardCapture:
 
     def _begin_waiting(self, text: str) -> None:
         """Let stream time begin now, without a sample."""
-        now = time.monotonic_ns()
+        now = instant_ns()
         self._start_ns = self._utc_ns()
         self._judge.begin_at(0, now)
         self._ring.tie(Tie(0, now, 0.0))
@@ -198,11 +205,11 @@ class CardCapture:
     def _listen(self, stream: CardStream) -> bool:
         """Decide on what comes until the stream is lost; False: the parent has had enough."""
         self._place(self._judge.opened(self._reason))
-        self._opened_ns = time.monotonic_ns()
+        self._opened_ns = instant_ns()
         pause = min(LOOK_S, self._ring.shape.frames / self._rate_hz / 4)
         while (lost := self._lost(stream)) is None:
             self._decide()
-            self._ring.beat(time.monotonic_ns())
+            self._ring.beat(instant_ns())
             self._chores()
             if self._is_enough():
                 self._close(stream)
@@ -218,7 +225,7 @@ class CardCapture:
         """Return in what way the stream is lost; None: it is not."""
         if stream.finished:
             return "the stream ended: the device or its server is gone"
-        if time.monotonic_ns() - max(self._opened_ns, self._ring.called_ns) > SILENCE_S * NS:
+        if instant_ns() - max(self._opened_ns, self._ring.called_ns) > SILENCE_S * NS:
             return f"no samples came for {SILENCE_S:g} s: the device or its server stands still"
         return None
 
@@ -250,7 +257,7 @@ class CardCapture:
 
     def _begin(self, arrived_ns: int, count: int) -> None:
         """Let stream time begin with the first sample."""
-        age_ns = time.monotonic_ns() - arrived_ns
+        age_ns = instant_ns() - arrived_ns
         self._start_ns = self._utc_ns() - age_ns - count * NS // self._rate_hz
         self._connection.send(Opened(self._source(self._start_ns), None))
 
@@ -272,7 +279,7 @@ class CardCapture:
         if now < self._chores_due:
             return
         self._chores_due = now + 1.0
-        monotonic_ns, utc_ns = time.monotonic_ns(), self._utc_ns()
+        monotonic_ns, utc_ns = instant_ns(), self._utc_ns()
         step = self._wall.saw(monotonic_ns, utc_ns)
         if step is not None:
             self._quality = time_quality()
@@ -285,3 +292,11 @@ class CardCapture:
             self._clock_due = now + CLOCK_EVERY_S
             record = clock_record(self._order.source.name, self._rate_hz, self._start_ns, self._judge, self._wall)
             self._connection.send(ClockSeen(record))
+
+
+def _shorten_stderr() -> None:
+    """Forget what the sound library wrote on standard error, at each attempt, where that is a file and long."""
+    status = os.fstat(2)
+    if stat.S_ISREG(status.st_mode) and status.st_size > LONGEST_STDERR:
+        os.ftruncate(2, 0)
+        os.lseek(2, 0, os.SEEK_SET)

@@ -32,6 +32,7 @@ from driftwatch.pipeline.group import measured_channels
 from driftwatch.pipeline.ticks import tick_times
 from driftwatch.records import NS, Fault, Heartbeat, Stretch, Tick, sample_time_ns
 from driftwatch.stream.clock import STEP_NS
+from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.source import SourceFailedError, SourceRefusedError
 
 if TYPE_CHECKING:
@@ -55,7 +56,7 @@ CAPTURE_PATIENCE_S = 5.0
 LEAST_PATIENCE_S = 5.0
 """Least time without progress after which a worker hangs, seconds; it is half of what the queue holds, if longer."""
 
-END_S = 60.0
+END_S = 30.0
 """How long everything may take to be measured after the last sample, seconds: a full queue takes a while."""
 
 GIVE_UP_AFTER = 3
@@ -371,7 +372,7 @@ class LiveRun:
         tied = self._ring.tied
         if cause is None or tied is None:
             return
-        index = tied.at(time.monotonic_ns(), self._ring.shape.rate_hz)
+        index = tied.at(instant_ns(), self._ring.shape.rate_hz)
         self._tick_until(self._time_ns(index), cause, is_open=False)
 
     def _tick_until(self, until_ns: int, cause: Fault, *, is_open: bool) -> None:
@@ -423,7 +424,7 @@ class LiveRun:
 
     def _heartbeat(self, now: float) -> Heartbeat:
         header = self.station.header
-        age = None if self._sample_came_ns is None else max(0.0, (time.monotonic_ns() - self._sample_came_ns) / NS)
+        age = None if self._sample_came_ns is None else max(0.0, (instant_ns() - self._sample_came_ns) / NS)
         return Heartbeat(
             station=header.station,
             run=header.run,

@@ -5,13 +5,13 @@ Digital full scale is 1.0 and 0 dB, so a sine that just reaches it has an rms of
 
 from __future__ import annotations
 
-import time
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from driftwatch.records import NS
+from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.soundcard import scale_into
 
 if TYPE_CHECKING:
@@ -60,12 +60,12 @@ class LatestSamples:
     def __init__(self, rate_hz: int, inputs: int, seconds: float = 4.0) -> None:
         self._kept = np.zeros((round(rate_hz * seconds), inputs), np.float32)
         self._total = self._read = 0
-        self._arrived_ns = time.monotonic_ns()
+        self._arrived_ns = instant_ns()
 
     @property
     def age_s(self) -> float:
         """Seconds since the last block came, or since there was none yet."""
-        return (time.monotonic_ns() - self._arrived_ns) / NS
+        return (instant_ns() - self._arrived_ns) / NS
 
     def take(self, samples: NDArray[Any], arrived_ns: int, flagged: bool) -> None:  # noqa: ARG002 - a sink's
         """Keep a block, of at most what is kept in all."""

@@ -16,12 +16,12 @@ from __future__ import annotations
 
 import errno
 import threading
-import time
 from typing import TYPE_CHECKING, Any, Literal, Protocol
 
 import numpy as np
 
 from driftwatch.stream.hanging import leave_hung, within, without_stderr
+from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.sound_inputs import (
     DeviceUnavailableError,
     NoSoundLibraryError,
@@ -74,7 +74,7 @@ class Sink(Protocol):
         samples : ndarray of shape (frames, inputs)
             PortAudio's own memory in the format asked for; it is gone when this returns.
         arrived_ns : int
-            ``time.monotonic_ns()`` as the block came. Blocks come in bursts: tell no rate from a few of them.
+            `instant_ns` as the block came. Blocks come in bursts: tell no rate from a few of them.
         flagged : bool
             PortAudio says that samples were lost before this block; it does not say how many, and not always.
         """
@@ -136,7 +136,7 @@ class CardStream:
     ) -> None:
         self._finished = threading.Event()
         library = load_portaudio()
-        take, now = sink.take, time.monotonic_ns
+        take, now = sink.take, instant_ns
 
         def callback(samples: NDArray[Any], _frames: int, _times: object, status: object) -> None:
             take(samples, now(), bool(status))
