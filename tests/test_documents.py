@@ -248,7 +248,6 @@ FOLLOWED = '[[channel]]\nname = "a"\n[[mode]]\nname = "m"\nchannel = "a"\nsearch
 SERVED = f"schema = 1\n{SOURCE}{FOLLOWED}"
 
 UNSERVED = {
-    "sound inputs": SERVED.replace("simulated", "soundcard"),
     "feeds": SERVED.replace("simulated", "feed"),
     "One source": SERVED.replace(
         "[[channel]]", '[[source]]\nname = "r"\nkind = "simulated"\nrate_hz = 8000\n[[channel]]\nsource = "s"'

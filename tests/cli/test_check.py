@@ -125,10 +125,10 @@ def test_what_is_valid_and_not_served_is_explained_with_who_will_refuse_it(tmp_p
     assert done.exit_code == 0
     assert "frequency over -2 % of baseline" in done.stdout
     assert done.stdout.count("run and replay refuse this:") == 2
-    done = check(written(tmp_path, SOUND + '[[source]]\nname = "card"\nkind = "soundcard"\n'))
+    done = check(written(tmp_path, SOUND + '[[source]]\nname = "card"\nkind = "feed"\n'))
     assert done.exit_code == 0
     assert "Worth a second look" in done.stdout
-    assert 'run refuses this: source[1] "card" . kind: got "soundcard", not served by this version' in done.stdout
+    assert 'run refuses this: source[1] "card" . kind: got "feed", not served by this version' in done.stdout
 
 
 @pytest.mark.parametrize("usable", ["[900, 9000]", "[10, 900]", "[900, 950]", "[10, 100]"])

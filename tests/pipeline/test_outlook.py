@@ -108,8 +108,8 @@ MORE_MODE = '[[mode]]\nname = "n"\nchannel = "a"\nsearch_hz = [970, 1200]\n[[mod
 REMARKS = [
     (
         'kind = "simulated"\nrate_hz = 8192',
-        'kind = "soundcard"',
-        'run refuses this: source[1] "s" . kind: got "soundcard"',
+        'kind = "feed"',
+        'run refuses this: source[1] "s" . kind: got "feed"',
     ),
     ('quantity = "acceleration"', 'quantity = "pressure"', "a microphone may record speech"),
     ("[[mode]]", '[[channel]]\nname = "b"\nunit = "V"\nscale = 1\n[[mode]]', 'channel "b": no mode is followed on it'),
