@@ -11,6 +11,9 @@ from typing import Any, Literal
 
 Role = Literal["capture", "tracker", "recorder"]
 
+AT_ONCE = 100
+"""Messages taken from one child before it is another one's turn."""
+
 LAST_WORDS = 2000
 """Bytes of the end of a process's standard error that are looked at for why it died."""
 
@@ -61,10 +64,10 @@ class Child:
         return self._process.poll() is None
 
     def heard(self) -> tuple[list[Any], bool]:
-        """Return what it said since the last time, and whether it can still say more."""
-        said = []
+        """Return what it said since the last time, or the first part of it, and whether it can still say more."""
+        said: list[Any] = []
         try:
-            while self.connection.poll(0):
+            while len(said) < AT_ONCE and self.connection.poll(0):
                 said.append(self.connection.recv())
         except (EOFError, OSError):
             return said, False
