@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from driftwatch.cli.check_live import live_lines, live_objects, source_object, source_words
 from driftwatch.cli.shared import CAUTION, refuse
 
 if TYPE_CHECKING:
@@ -16,7 +17,7 @@ if TYPE_CHECKING:
 
     from rich.table import Table
 
-    from driftwatch.config import BandConfig, Configuration, Problem, SourceConfig
+    from driftwatch.config import BandConfig, Configuration, Problem
     from driftwatch.pipeline.outlook import ModeOutlook
 
 WIDTH = 120
@@ -68,7 +69,7 @@ def explained(config: Configuration) -> dict[str, Any]:
         "station": config.station.name,
         "config": str(config.path),
         "config_sha256": config.sha256,
-        "sources": [{"name": source.name, "kind": source.kind} for source in config.source],
+        "sources": [source_object(config, source) for source in config.source],
         "channels": [
             {key: getattr(channel, key) for key in ("name", "source", "input", "quantity", "unit", "scale", "role")}
             for channel in config.channel
@@ -77,6 +78,7 @@ def explained(config: Configuration) -> dict[str, Any]:
         "store": config.store.url,
         "keep_days": config.store.keep_days,
         "publish": config.bus.publish,
+        **live_objects(config),
         "assumed": list(assumed(config)),
         "remarks": list(remarks(config)),
     }
@@ -129,6 +131,7 @@ def _print(config: Configuration) -> None:
         console.print(_bands(config))
     for heading, lines in (
         ("Where it goes", _places(config)),
+        ("While it runs", live_lines(config)),
         ("Taken for granted", assumed(config)),
         ("Worth a second look", remarks(config)),
     ):
@@ -162,23 +165,10 @@ def _row(table: Table, *cells: object) -> None:
 def _sources(config: Configuration) -> Table:
     table = _table("Sources", "source", "kind", "what")
     for source in config.source:
-        _row(table, source.name, source.kind, ", ".join(_source_words(source)))
+        _row(table, source.name, source.kind, ", ".join(source_words(config, source)))
     if not config.source:
         _row(table, "none", "", "this file serves replays")
     return table
-
-
-def _source_words(source: SourceConfig) -> Iterator[str]:
-    if source.kind == "recording":
-        yield source.path
-    elif source.rate_hz is not None:
-        yield f"{source.rate_hz} samples/s"
-    if source.kind == "simulated":
-        yield f"{source.inputs} input{'s' if source.inputs > 1 else ''}"
-        yield f"{len(source.resonator)} resonators"
-        yield "endless" if source.seconds is None else f"{source.seconds:g} s"
-    if source.kind in ("simulated", "recording"):
-        yield f"{source.pace:g} x real time" if source.pace else "as fast as it can"
 
 
 def _channels(config: Configuration) -> Table:

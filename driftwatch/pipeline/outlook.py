@@ -21,7 +21,7 @@ from driftwatch.pipeline.mode_line import ModeLine
 from driftwatch.records import Method
 
 if TYPE_CHECKING:
-    from driftwatch.config import BandConfig, ChannelConfig, Configuration, ModeConfig
+    from driftwatch.config import BandConfig, ChannelConfig, Configuration, ModeConfig, SourceConfig
 
 DECAY_OVER_NOISE = 100.0
 """Amplitude at which a decay is taken to begin, over the noise's rms in the search band: 40 dB."""
@@ -49,7 +49,9 @@ class ModeOutlook:
     rate_hz: int | None  # of the channel; None: only a recording knows it, and the next three
     window_samples: int | None  # as the zoom's grid allows it
     step_samples: int | None
-    latency_s: float | None  # longest wait from a window's end to its figures
+    latency_s: (
+        float | None
+    )  # longest wait for samples from a window's end to its figures, a sound card's block included
     q_range: tuple[float, float] | None  # Qs that an ambient window can tell; None: not followed by ambient
     resolutions: tuple[Resolution, ...]
 
@@ -74,7 +76,7 @@ def _outlook(
         number = siblings.index(mode)
         band = zoom.bands[number]
         window, step = band.window * band.decimation, band.step * band.decimation
-        latency_s = ModeLine(channel, mode, zoom, number, 0).late / rate_hz
+        latency_s = ModeLine(channel, mode, zoom, number, 0).late / rate_hz + _block_s(config, channel)
     return ModeOutlook(
         channel=channel.name,
         mode=mode.name,
@@ -85,6 +87,12 @@ def _outlook(
         q_range=q_range(mode) if Method.AMBIENT in mode.methods else None,
         resolutions=tuple(_resolutions(mode)),
     )
+
+
+def _block_s(config: Configuration, channel: ChannelConfig) -> float:
+    """Return how long a sample may wait in a sound card's block, seconds; 0 where there is none."""
+    source = config.source_of(channel)
+    return source.block_s if source is not None and source.kind == "soundcard" else 0.0
 
 
 def expected_frequency(mode: ModeConfig) -> float:
@@ -115,6 +123,53 @@ def expected_qs(mode: ModeConfig) -> list[float]:
 
 def _absolute(mode: ModeConfig, quantity: str) -> Iterator[BandConfig]:
     return (band for band in mode.band if band.quantity == quantity and band.limits == "absolute")
+
+
+# ---------------------------------------------------------------------------------------------- raw recording
+
+
+@dataclass(frozen=True, slots=True)
+class RecordingOutlook:
+    """What the raw recorder needs."""
+
+    inputs: int
+    gb_per_hour: float  # 1e9 bytes
+    hours: float  # what it keeps: keep_hours, or what most_gb holds if that is less
+
+
+def opened_inputs(config: Configuration, source: SourceConfig) -> int | None:
+    """Return how many inputs of a source are opened, if the device has them; None: only the recording knows."""
+    if source.kind == "recording":
+        return None
+    if source.kind == "soundcard" and source.inputs is None:
+        return max(2, *(channel.input for channel in config.channel if channel.source == source.name), 1)
+    return source.inputs
+
+
+def recording_outlook(config: Configuration) -> RecordingOutlook | None:
+    """Return what the raw recorder needs; None where nothing is recorded, or rate or inputs are not known."""
+    if config.record.keep_hours <= 0 or len(config.source) != 1:
+        return None
+    (source,) = config.source
+    inputs = opened_inputs(config, source)
+    if inputs is None or source.kind == "recording" or source.rate_hz is None:
+        return None
+    width = 2 if source.kind == "soundcard" and source.sample_format == "int16" else 4
+    gb_per_hour = inputs * source.rate_hz * width * 3600 / 1e9
+    return RecordingOutlook(inputs, gb_per_hour, min(config.record.keep_hours, config.record.most_gb / gb_per_hour))
+
+
+def _record_remarks(config: Configuration) -> Iterator[str]:
+    from driftwatch.config import record_cautions
+
+    yield from record_cautions(config)
+    outlook, record = recording_outlook(config), config.record
+    if outlook is not None and outlook.hours < record.keep_hours:
+        yield (
+            f"[record] most_gb = {record.most_gb:g} holds {outlook.hours:.3g} h of {outlook.inputs} inputs, less than "
+            f"keep_hours = {record.keep_hours:g}; for all of it, set most_gb to "
+            f"{math.ceil(record.keep_hours * outlook.gb_per_hour)}"
+        )
 
 
 # ---------------------------------------------------------------------------------------------- bounds
@@ -181,6 +236,7 @@ def remarks(config: Configuration) -> Iterator[str]:
             yield f'channel "{channel.name}": no mode is followed on it'
         yield from _overlaps(config, channel)
     yield from sensor_remarks(config)
+    yield from _record_remarks(config)
     for mode, outlook in zip(config.mode, outlooks(config), strict=True):
         yield from _late_remark(mode, outlook)
         yield from _band_remarks(mode)

@@ -9,6 +9,9 @@ from typing import Any
 import pytest
 from click.testing import CliRunner, Result
 from driftwatch.cli import main
+from driftwatch.cli.check_live import queue_bytes
+from driftwatch.config import SoundcardSourceConfig, loads
+from driftwatch.daemon.feed import CardFeed
 
 CONFIGS = Path(__file__).parents[2] / "config"
 
@@ -129,6 +132,81 @@ def test_what_is_valid_and_not_served_is_explained_with_who_will_refuse_it(tmp_p
     assert done.exit_code == 0
     assert "Worth a second look" in done.stdout
     assert 'run refuses this: source[1] "card" . kind: got "feed", not served by this version' in done.stdout
+
+
+# ---------------------------------------------------------------------------------------------- live
+
+
+CARD = '[[source]]\nname = "card"\nkind = "soundcard"\n'
+
+
+def test_a_sound_card_is_explained_as_it_will_be_opened(tmp_path: Path) -> None:
+    """Left out, two inputs are opened at least; the latency has the device's block in it."""
+    file = written(tmp_path, SOUND + CARD + "block_s = 0.05\n")
+    text = check(file).stdout
+    for part in ("the system's default input", "48000 samples/s", "inputs 1 to 2", "or 1 if it has no more",
+                 "float32", "blocks of 50 ms", "without its device nothing is started"):  # fmt: skip
+        assert part in text, part
+    said = json.loads(check("--json", file).stdout)
+    card = {"name": "card", "kind": "soundcard", "device": None, "rate_hz": 48000, "inputs": 2, "block_s": 0.05}
+    assert said["sources"] == [card | {"sample_format": "float32", "wait_for_device": False}]
+    quick = json.loads(check("--json", written(tmp_path, SOUND + CARD + "block_s = 0.01\n")).stdout)
+    assert said["modes"][0]["latency_s"] - quick["modes"][0]["latency_s"] == pytest.approx(0.04)
+    named = 'device = "usb audio"\ninputs = 1\nsample_format = "int16"\nwait_for_device = true\n'
+    text = check(written(tmp_path, SOUND + CARD + named)).stdout
+    for part in ('an input with "usb audio" in its', "input 1, int16", "at the start or later, is looked for"):
+        assert part in text.replace("\n", " "), part
+
+
+@pytest.mark.parametrize("settings", ["", "block_s = 0.5\n", "block_s = 0.002\nrate_hz = 96000\n", "inputs = 8\n"])
+@pytest.mark.parametrize("queue_s", [2.0, 20.0, 60.0])
+def test_the_memory_of_the_queue_is_what_the_run_takes(settings: str, queue_s: float) -> None:
+    config = loads(SOUND + CARD + settings + f"[daemon]\nqueue_s = {queue_s}\n")
+    (source,) = config.source
+    assert isinstance(source, SoundcardSourceConfig)
+    with CardFeed(source, 1, queue_s).make_ring() as ring:
+        assert queue_bytes(config, source) == ring.shape.size
+
+
+def test_the_disk_that_the_recorder_needs_is_told_and_what_the_budget_does_not_hold(tmp_path: Path) -> None:
+    """Two inputs of 48000 values a second, of 4 bytes each, make 1.3824e9 bytes an hour."""
+    record = "[record]\nkeep_hours = 24\nmost_gb = "
+    file = written(tmp_path, SOUND + CARD + "inputs = 2\n" + record + "20\n")
+    said = json.loads(check("--json", file).stdout)
+    assert said["recording"] == {
+        "folder": str(tmp_path / "recordings"),
+        "keep_hours": 24.0,
+        "most_gb": 20.0,
+        "gb_per_hour": pytest.approx(1.3824),
+        "hours": pytest.approx(20 / 1.3824),
+    }
+    text = check(file).stdout
+    assert "2 inputs make 1.4 GB an hour; the last 14.5 h are kept: 20 GB of at most 20" in text
+    assert "most_gb = 20 holds 14.5 h of 2 inputs, less than keep_hours = 24" in text
+    assert "set most_gb to 34" in text
+    assert "All inputs of card are recorded raw" in text
+    enough = check(written(tmp_path, SOUND + CARD + "inputs = 2\n" + record + "34\n")).stdout
+    assert "the last 24 h are kept: 33.2 GB of at most 34" in enough
+    assert "less than keep_hours" not in enough
+
+
+def test_a_recorder_of_a_recording_or_of_nothing_is_explained_without_figures(tmp_path: Path) -> None:
+    source = '[[source]]\nname = "tape"\nkind = "recording"\npath = "a.wav"\n'
+    text = check(written(tmp_path, SOUND + source + "[record]\nkeep_hours = 2\n")).stdout
+    assert "the last 2 h, and at most 20 GB" in text
+    text = check(written(tmp_path, SOUND + source)).stdout
+    assert "raw samples are not kept" in text
+    assert "the source waits when they are 20 s behind" in text
+    assert "While it runs" not in check(written(tmp_path, SOUND)).stdout
+
+
+def test_a_recorded_microphone_is_said_with_who_allowed_it(tmp_path: Path) -> None:
+    microphone = SOUND.replace('name = "a.b"', 'name = "a.b"\nquantity = "pressure"')
+    allowed = '[record]\nkeep_hours = 2\npressure_allowed_by = "the works council"\n'
+    assert "recorded raw, as the works council allowed" in check(written(tmp_path, microphone + CARD + allowed)).stdout
+
+
+# ---------------------------------------------------------------------------------------------- the rest
 
 
 @pytest.mark.parametrize("usable", ["[900, 9000]", "[10, 900]", "[900, 950]", "[10, 100]"])
