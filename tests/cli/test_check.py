@@ -36,7 +36,7 @@ search_hz = [820, 980]
 """
 
 
-@pytest.mark.parametrize("name", ["demo", "bearing-housing", "resonator-in-chamber", "post-mortem"])
+@pytest.mark.parametrize("name", ["demo", "bearing-housing", "first-try", "resonator-in-chamber", "post-mortem"])
 def test_a_ready_configuration_is_explained(name: str) -> None:
     done = check(CONFIGS / f"{name}.toml")
     assert done.exit_code == 0
@@ -47,7 +47,7 @@ def test_a_ready_configuration_is_explained(name: str) -> None:
         "Channels",
         "Modes",
         "tells at best",
-        "Bands",
+        *(["Bands"] if name != "first-try" else []),
         "Where it goes",
         "no protective",
     ):

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+import re
 from pathlib import Path
 
 import pytest
-from driftwatch.config import SimulatedSourceConfig, load, unserved
+from driftwatch.config import SimulatedSourceConfig, SoundcardSourceConfig, load, loads, unserved
 
 FOLDER = Path(__file__).parents[2] / "config"
-READY = ["bearing-housing", "demo", "post-mortem", "resonator-in-chamber"]
+READY = ["bearing-housing", "demo", "first-try", "post-mortem", "resonator-in-chamber"]
 
 
 def test_these_are_all_of_them() -> None:
@@ -27,6 +28,30 @@ def test_a_ready_configuration_explains_itself(name: str) -> None:
     assert lines[0].startswith("# ")
     assert any(f"config/{name}.toml" in line for line in lines[:12])
     assert max(map(len, lines)) <= 120
+
+
+def with_the_card(text: str) -> str:
+    """Return a configuration as its comment says: without its source tables, and with the one of a sound card."""
+    (shown,) = re.findall(r'(?:^#     .*\n)*^#     kind = "soundcard".*\n(?:^#     .*\n)*', text, re.MULTILINE)
+    card = "".join(line.removeprefix("#     ") for line in shown.splitlines(keepends=True))
+    rest = re.sub(r"^\[\[source(?:\.\w+)?\]\].*\n(?:^(?!\[).*\n)*", "", text, flags=re.MULTILINE)
+    return f"{rest}\n{card}"
+
+
+@pytest.mark.parametrize("name", ["bearing-housing", "resonator-in-chamber"])
+def test_the_sound_card_that_a_ready_configuration_shows_fits_in_for_its_source(name: str) -> None:
+    config = loads(with_the_card((FOLDER / f"{name}.toml").read_text(encoding="utf-8")), FOLDER)
+    (card,) = config.source
+    assert isinstance(card, SoundcardSourceConfig)
+    assert card.name == load(FOLDER / f"{name}.toml").source[0].name
+    assert card.wait_for_device
+    assert unserved(config) == []
+
+
+def test_the_first_try_needs_no_more_than_a_default_input() -> None:
+    (card,) = load(FOLDER / "first-try.toml").source
+    assert isinstance(card, SoundcardSourceConfig)
+    assert (card.device, card.inputs) == (None, None)
 
 
 def test_the_demo_shows_a_drift_a_fall_of_q_and_a_mode_that_stays_within_a_minute() -> None:
