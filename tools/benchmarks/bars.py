@@ -34,6 +34,7 @@ class Size:
     trials: int = 2000  # independent trials a cell
     family: float = FAMILY_BENCH  # false-alarm probability over all cells of the bench
     full: bool = True  # False: in small, for the regular run
+    seconds: float | None = None  # how long what runs in real time is watched; None: as long as the bench wants
 
 
 Bench = Callable[[Size], Iterator[Row]]
