@@ -8,6 +8,7 @@ from typing import Any
 
 from driftwatch.daemon.messages import Finished, Measure, MeasuredBlock, MeasuredBlocks
 from driftwatch.pipeline.group import ChannelGroup
+from driftwatch.pipeline.reading import Reading
 from driftwatch.records import Block, sample_time_ns
 from driftwatch.stream.ring import Ring, Seen
 
@@ -87,11 +88,11 @@ class _Tracker:
         return [measured for block in self._reader.fresh(AT_ONCE) if (measured := self._measured(block)) is not None]
 
     def _measured(self, block: Seen) -> MeasuredBlock | None:
-        readings = []
+        readings: list[Reading] = []
         if len(block.samples):
             time_ns = sample_time_ns(self._source.start_ns, block.first_sample, self._source.rate_hz)
             pushed = Block(self._source.name, block.first_sample, time_ns, block.samples, block.cause)
-            readings = [one for one in self._group.push(pushed) if one.ready > self._order.position]
+            readings = self._group.push(pushed)
         if block.number < self._order.number:
             return None
         return MeasuredBlock(
