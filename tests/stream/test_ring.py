@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import os
 import signal
 import subprocess
@@ -279,8 +280,6 @@ print(reader.next, digest.hexdigest())
 
 @pytest.mark.parametrize("most", [1, 64])
 def test_another_process_reads_over_the_descriptor_what_is_written_meanwhile(ring: Ring, most: int) -> None:
-    import hashlib
-
     rng = np.random.default_rng(most)
     expected = hashlib.sha256()
     ring.keep_for(0, 0)
