@@ -24,7 +24,6 @@ from benchmarks.processes import daemon_processes, machine_busy_s, processor_s
 from benchmarks.scene import RATE_HZ
 from soundrig import Rig
 
-WARM_UP_S = 5.0
 STARTING_S = 60.0
 """Longest wait for the first reading, and for the end."""
 
@@ -69,7 +68,7 @@ class Listener:
         return instant_ns(), topic, message
 
 
-def listened(folder: Path, scene: LiveScene, more: str, seconds: float) -> Heard:
+def listened(folder: Path, scene: LiveScene, more: str, seconds: float, warm_up_s: float) -> Heard:
     """Run the daemon on what is played, with further tables in its configuration, and listen for so long.
 
     Raises
@@ -86,7 +85,7 @@ def listened(folder: Path, scene: LiveScene, more: str, seconds: float) -> Heard
         listener = stack.enter_context(Listener(endpoint))
         daemon = start(stack, ["benchmarks.live_daemon", "live.toml", "notes"], folder, rig.env)
         _until_measured(heard, listener, daemon)
-        _listen(heard, listener, WARM_UP_S)
+        _listen(heard, listener, warm_up_s)
         _measure(heard, listener, seconds, daemon.pid, {"sound server": (rig.pid,), "player": player.pids})
         heard.ran_dry = player.ran_dry
         daemon.send_signal(signal.SIGINT)

@@ -1,10 +1,10 @@
 """Memory of the running daemon: that no process of it grows, live on a sound card and over hours of simulated signal.
 
-The resident memory of every process is read at each heartbeat, once a second, after a warm-up. A slope over stream
-time is fitted to the means of consecutive batches, not to the readings: those follow each other closely, and as many
-independent ones would promise too narrow a limit. What dependence is left between the batches' residuals widens the
-standard error by that of an autoregressive series of first order, sqrt((1 + r)/(1 - r)), with r taken from them and
-never below 0; the limits are those of Student's t. (Batch means: Law & Kelton, Simulation Modeling and Analysis.)
+The resident memory of every process is read a few times a second, after a warm-up. A slope over stream time is fitted
+to the means of consecutive batches, not to the readings: those follow each other closely, and as many independent ones
+would promise too narrow a limit. What dependence is left between the batches' residuals widens the standard error by
+that of an autoregressive series of first order, sqrt((1 + r)/(1 - r)), with r taken from them and never below 0; the
+limits are those of Student's t. (Batch means: Law & Kelton, Simulation Modeling and Analysis; from memory.)
 """
 
 from __future__ import annotations
@@ -33,7 +33,7 @@ from soundrig import Rig
 
 SCENE = LiveScene(channels=2, modes=2, impacts=True)
 SECONDS = 1200.0
-SECONDS_SMALL = 10.0
+SECONDS_SMALL = 4.0
 SIMULATED_OVER_LIVE = 6.0
 """The simulated source runs so many times as long in stream time: 2 h for 20 minutes."""
 
@@ -44,6 +44,9 @@ LEAST_WARM_UP_S = 60.0
 PER_S = 7200.0
 LIMIT_MB = 5.0
 """Most growth in `PER_S`, 1e6 bytes."""
+
+READ_EVERY_S = 0.25
+"""Time between two readings of the memory, seconds: a simulation is over soon."""
 
 CONFIDENCE = 0.95
 BATCHES = 20
@@ -108,29 +111,26 @@ def followed(folder: Path, seconds: float, warm_up_s: float, *, simulated: bool)
 def _follow(
     course: Course, listener: Listener, daemon: subprocess.Popen[bytes], seconds: float, warm_up_s: float
 ) -> None:
-    """Read memory at every heartbeat from the warm-up's end to the end."""
+    """Read memory, now and then upon a message, from the warm-up's end to the end."""
     began_s: float | None = None
+    since_s = 0.0
     processes: dict[str, int] = {}
-    patience = time.monotonic() + STARTING_S
-    while daemon.poll() is None and time.monotonic() < patience:
-        came = listener.next(0.2)
-        if came is None or came[1] != b"heartbeat":
+    now = time.monotonic()
+    due, patience = now, now + STARTING_S
+    while daemon.poll() is None and since_s < warm_up_s + seconds and now < patience:
+        came, now = listener.next(0.2), time.monotonic()
+        if came is None or now < due or (began_s is None and not came[1].startswith(b"measurement/")):
             continue
-        heartbeat = json.loads(came[2])
-        if heartbeat["sample_age_s"] is None:
-            continue  # nothing was measured yet
-        patience = time.monotonic() + STARTING_S
-        stream_s = parse_time(heartbeat["time"]) / NS
+        due, patience = now + READ_EVERY_S, now + STARTING_S
+        stream_s = parse_time(json.loads(came[2])["time"]) / NS
         began_s = stream_s if began_s is None else began_s
-        since_s = stream_s - began_s - warm_up_s
-        if since_s >= 0:
+        since_s = stream_s - began_s
+        if since_s >= warm_up_s:
             processes = processes or daemon_processes(daemon.pid)
             _read(course, processes, since_s)
-        if since_s >= seconds:
-            break
-    now = daemon_processes(daemon.pid)
-    if now != processes and now.keys() != {"main"}:  # after the end of a simulation its main process is alone
-        raise RuntimeError(f"the processes were {processes} and are {now}; expected the same ones to the end")
+    left = daemon_processes(daemon.pid)
+    if left != processes and left.keys() != {"main"}:  # after the end of a simulation its main process is alone
+        raise RuntimeError(f"the processes were {processes} and are {left}; expected the same ones to the end")
 
 
 def _read(course: Course, processes: Mapping[str, int], since_s: float) -> None:
@@ -155,13 +155,15 @@ def slope(stream_s: ArrayLike, megabytes: ArrayLike) -> Slope:
     batches = min(BATCHES, len(times))
     x = np.array([np.mean(part) for part in np.array_split(times, batches)])
     y = np.array([np.mean(part) for part in np.array_split(values, batches)])
-    fit = stats.linregress(x, y)
-    residuals = y - fit.intercept - fit.slope * x
+    from_mean = x - np.mean(x)
+    spread = float(np.sum(from_mean**2))
+    rate = float(np.sum(from_mean * y)) / spread
+    residuals = y - np.mean(y) - rate * from_mean
     power = float(np.sum(residuals**2))
     r = max(0.0, float(np.sum(residuals[1:] * residuals[:-1])) / power) if power > 0 else 0.0
-    std = float(fit.stderr) * np.sqrt((1 + r) / (1 - r))
+    std = np.sqrt(power / (batches - 2) / spread * (1 + r) / (1 - r))
     half = float(stats.t.ppf((1 + CONFIDENCE) / 2, batches - 2)) * std
-    return Slope(*(PER_S * float(value) for value in (fit.slope, fit.slope - half, fit.slope + half)))
+    return Slope(*(PER_S * float(value) for value in (rate, rate - half, rate + half)))
 
 
 def _rows(case: str, course: Course, full: bool) -> Iterator[Row]:
