@@ -1,4 +1,4 @@
-"""What tests of the live daemon share: a folder on the path for their helper, and the recording that they play."""
+"""What tests of the live daemon share: a folder on the path for their helpers, and the recording that they play."""
 
 from __future__ import annotations
 
@@ -12,7 +12,7 @@ import pytest
 
 sys.path.insert(0, str(Path(__file__).parent))  # import-mode=importlib puts no folder of tests there
 
-from live_card import Floats, two_modes, write_wav
+from card_files import Floats, two_modes, write_wav
 
 from soundrig import missing_packages
 

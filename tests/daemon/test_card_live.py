@@ -2,10 +2,8 @@
 
 from __future__ import annotations
 
-import json
 import os
 import signal
-import subprocess
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
@@ -13,20 +11,8 @@ from typing import Any
 
 import numpy as np
 import pytest
-from live_card import (
-    LIMIT_S,
-    PROGRAM,
-    RATE,
-    Daemon,
-    Floats,
-    Row,
-    configuration,
-    health,
-    ns_of,
-    place_in,
-    recorded,
-    write_wav,
-)
+from card_files import RATE, Floats, Row, configuration, health, ns_of, place_in, recorded, replay, write_wav
+from live_card import Daemon
 
 from soundrig import Rig
 
@@ -85,15 +71,6 @@ def run_of_a_file(folder: Path, played: Floats, workers: int) -> Run:
             daemon.until(lambda: daemon.reached > MEASURED_S * RATE)
             status = daemon.stop()
             return Run(config, daemon.rows, recorded(config), status)
-
-
-def replay(run: Run, folder: Path, *words: object) -> list[Row]:
-    done = subprocess.run(
-        [*PROGRAM, "replay", str(run.config), *map(str, words), "--store", str(folder / "replay.db"), "--json"],
-        capture_output=True, cwd=folder, timeout=2 * LIMIT_S,
-    )  # fmt: skip
-    assert done.returncode == 0, done.stderr.decode()
-    return [json.loads(line) for line in done.stdout.splitlines()]
 
 
 def of_the_stream(rows: list[Row]) -> list[dict[str, Any]]:
@@ -160,7 +137,7 @@ def test_rows_are_those_of_a_replay_of_the_same_samples(
     """The recording holds what was played, as a file of its own, and the time of its start."""
     run = runs.of_a_file[workers].result()
     wav = write_wav(tmp_path / "same.wav", played[: run.samples])
-    live, again = of_the_stream(run.rows), of_the_stream(replay(run, tmp_path, wav, "--start", run.start))
+    live, again = of_the_stream(run.rows), of_the_stream(replay(run.config, tmp_path, wav, "--start", run.start))
     assert kinds_of(live) == {"measurement", "track", "alert"}
     assert first_difference(live, again) is None
 
@@ -168,7 +145,7 @@ def test_rows_are_those_of_a_replay_of_the_same_samples(
 def test_rows_are_those_of_a_replay_of_the_segments_gap_and_all(runs: Runs, tmp_path: Path) -> None:
     run = runs.with_a_gap.result()
     segments = run.config.parent / "state" / "recordings"
-    live, again = of_the_stream(run.rows), of_the_stream(replay(run, tmp_path, segments))
+    live, again = of_the_stream(run.rows), of_the_stream(replay(run.config, tmp_path, segments))
     assert kinds_of(live) == set(OF_THE_STREAM)
     assert first_difference(live, again) is None
 

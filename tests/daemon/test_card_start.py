@@ -13,14 +13,13 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from live_card import (
+from card_files import (
     LIMIT_S,
     NS,
     PROGRAM,
     RATE,
     STEP_S,
     WINDOW_S,
-    Daemon,
     Floats,
     Row,
     configuration,
@@ -29,6 +28,7 @@ from live_card import (
     recorded,
     stored,
 )
+from live_card import Daemon
 
 from soundrig import Rig
 
