@@ -105,7 +105,7 @@ def _queue_words(config: Configuration) -> str:
 
 
 def _recording_lines(config: Configuration) -> Iterator[str]:
-    from driftwatch.daemon.recorder import recordings_folder
+    from driftwatch.daemon.state import recordings_folder
     from driftwatch.pipeline.outlook import recording_outlook
 
     record = config.record
@@ -127,7 +127,7 @@ def _recording_lines(config: Configuration) -> Iterator[str]:
 
 def live_objects(config: Configuration) -> dict[str, Any]:
     """Return the same for programs."""
-    from driftwatch.daemon.recorder import recordings_folder
+    from driftwatch.daemon.state import recordings_folder
     from driftwatch.pipeline.outlook import recording_outlook
 
     daemon, record = config.daemon, config.record

@@ -33,9 +33,9 @@ class Log:
 
     def told(self, text: str, fault: bool) -> None:
         """Take a line; one of a fault is a warning, any other is for information."""
-        if LEVELS.index("warning" if fault else "info") < self._least:
-            return
+        is_said = LEVELS.index("warning" if fault else "info") >= self._least
         if self._view is not None and self._view.is_drawn:
-            self._view.status(text if fault else "")
-        else:
+            if is_said or not fault:  # what was over is taken off whether or not that is said
+                self._view.status(text if fault else "")
+        elif is_said:
             click.echo(text, err=True)

@@ -9,11 +9,11 @@ from typing import TYPE_CHECKING
 
 import click
 
+from driftwatch.cli.live_output import LiveOutput
 from driftwatch.cli.live_view import chosen_view
 from driftwatch.cli.log import Log
 from driftwatch.cli.shared import (
     CAUTION,
-    Output,
     hung_up,
     load_served,
     nothing_started,
@@ -96,20 +96,20 @@ def _run(
     """Run to the end; without a view print JSON."""
     from driftwatch.daemon.service import Outlets, Service
 
-    output = Output(view.show if view else print_json, stop)
     log = Log(configuration.daemon.log_level, view)
 
     def opened(store: Path, endpoint: str) -> None:
         _announce(configuration, store, endpoint)
 
-    outlets = Outlets(output, log.told, view.beat if view else lambda _: None, opened, log.level)
-    with Service(configuration, feed, outlets, *where) as service, hung_up() as hangup:
-        with nothing_started():
-            if not service.open(stop):
-                return
-        with work_failed():
-            service.until(stop, hangup)
-        output.check()
+    with LiveOutput(view.show if view else print_json, stop) as output, hung_up() as hangup:
+        beat = output.posted(view.beat) if view else lambda _: None
+        outlets = Outlets(output, output.posted(log.told), beat, output.posted(opened), log.level)
+        with Service(configuration, feed, outlets, *where) as service:
+            with nothing_started():
+                if not service.open(stop):
+                    return
+            with work_failed():
+                service.until(stop, hangup)
 
 
 def _announce(configuration: Configuration, store: Path, endpoint: str) -> None:

@@ -44,6 +44,8 @@ class _PacedCapture:
         try:
             for block in self._order.source.blocks(self._ring.shape.frames):
                 if block.first_sample < self._first:
+                    if self._is_enough():
+                        break
                     continue
                 if not self._is_wanted(block):
                     break
@@ -51,6 +53,11 @@ class _PacedCapture:
         except StreamError as error:
             self._connection.send(Failed(str(error)))
         self._ring.end()
+
+    def _is_enough(self) -> bool:
+        """Show that this process lives, and say whether the parent has had enough."""
+        self._ring.beat(instant_ns())
+        return bool(self._connection.poll(0))
 
     def _give(self, block: Block) -> None:
         number = self._ring.filled
@@ -65,8 +72,7 @@ class _PacedCapture:
         if pace > 0:
             due += (block.first_sample + block.count - self._first) / source.rate_hz / pace
         while True:
-            self._ring.beat(instant_ns())
-            if self._connection.poll(0):
+            if self._is_enough():
                 return False
             left = due - time.monotonic()
             if left <= 0 and self._ring.has_room():

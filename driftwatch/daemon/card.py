@@ -97,24 +97,22 @@ class CardCapture:
 
     def run(self) -> None:
         """Read until the parent has had enough."""
-        if self._start_ns is not None:
-            self._resume()
+        self._resume()
         while not self._is_enough():
             stream = self._open()
-            if stream is None:
-                self._pause(self._retry_s)
-                self._retry_s = min(LONGEST_RETRY_S, 2.0 * self._retry_s)
-                continue
-            if not self._listen(stream):
+            if stream is not None and not self._listen(stream):
                 break
+            self._pause(self._retry_s)
+            self._retry_s = min(LONGEST_RETRY_S, 2.0 * self._retry_s)
         self._ring.end()
 
     def _resume(self) -> None:
         """Go on after a process that died: its undecided blocks have no place in time."""
         self._ring.pass_undecided()
         tied = self._ring.tied or self._last_tie()
-        if tied is not None:
-            self._judge.begin_at(tied.index, tied.monotonic_ns)
+        if tied is not None and self._start_ns is not None:
+            self._ring.silent = self._reason
+            self._judge.begin_at(tied.index, tied.monotonic_ns, tied.deviation)
 
     def _last_tie(self) -> Tie | None:
         last = self._ring.last_block()
@@ -141,7 +139,11 @@ class CardCapture:
         try:
             return within(OPEN_S, self._opened)
         except TimeoutError as error:
-            self._unavailable(f"{error}; expected the device to open; the sound server may be stopped")
+            text = f"{error}; expected the device to open; the sound server may be stopped"
+            if self._start_ns is None:
+                self._connection.send(Told(text, fault=True))  # at the start the parent tries a few times
+            else:
+                self._unavailable(text)
             self._leave()
         except StreamError as error:
             lasting = isinstance(error, SourceRefusedError) and not isinstance(error, DeviceUnavailableError)
@@ -235,7 +237,6 @@ class CardCapture:
         self._ring.silent = self._reason
         self._told = how
         self._connection.send(Told(f"{self._device}: {how}; it is opened again", fault=True))
-        self._retry_s = FIRST_RETRY_S
         self._close(stream)
 
     def _close(self, stream: CardStream) -> None:
@@ -281,13 +282,12 @@ class CardCapture:
         self._chores_due = now + 1.0
         monotonic_ns, utc_ns = instant_ns(), self._utc_ns()
         step = self._wall.saw(monotonic_ns, utc_ns)
-        if step is not None:
+        if step is not None and self._start_ns is not None:
             self._quality = time_quality()
             self._connection.send(ClockStepped(step, self._quality))
         if self._start_ns is None:
             return
-        deviation = (self._judge.rate.deviation_ppm or 0.0) * 1e-6
-        self._ring.tie(Tie(self._judge.expected_index(monotonic_ns), monotonic_ns, deviation))
+        self._ring.tie(Tie(self._judge.expected_index(monotonic_ns), monotonic_ns, self._judge.deviation))
         if now >= self._clock_due and self._judge.rate.deviation_ppm is not None:
             self._clock_due = now + CLOCK_EVERY_S
             record = clock_record(self._order.source.name, self._rate_hz, self._start_ns, self._judge, self._wall)

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import select
 import signal
 import subprocess
 import sys
 import tempfile
+from contextlib import ExitStack
 from multiprocessing.connection import Connection, Pipe
 from typing import Any, Literal
 
@@ -13,6 +15,9 @@ Role = Literal["capture", "tracker", "recorder"]
 
 AT_ONCE = 100
 """Messages taken from one child before it is another one's turn."""
+
+KILL_S = 1.0
+"""How long it is waited for the end of a process that was killed, seconds."""
 
 LAST_WORDS = 2000
 """Bytes of the end of a process's standard error that are looked at for why it died."""
@@ -29,22 +34,30 @@ class Child:
         Descriptor of the ring.
 
     It waits for its order, the first that it is told.
+
+    Raises
+    ------
+    OSError
+        When the system has no process, memory or descriptor for it.
     """
 
     def __init__(self, role: Role, ring: int) -> None:
         self.role = role
         self.connection: Connection[Any, Any]
-        self.connection, theirs = Pipe()
-        self._words = tempfile.TemporaryFile()  # noqa: SIM115 - closed with the child
-        with theirs:
-            self._process = subprocess.Popen(  # noqa: S603 - ourselves
-                [sys.executable, "-m", "driftwatch.daemon.process", role, str(ring), str(theirs.fileno())],
-                pass_fds=(ring, theirs.fileno()),
-                stdin=subprocess.DEVNULL,
-                stdout=subprocess.DEVNULL,
-                stderr=self._words,
-                process_group=0,  # Ctrl-C in a terminal is for the parent: it ends its children in order
-            )
+        with ExitStack() as undo:
+            self.connection, theirs = Pipe()
+            undo.callback(self.connection.close)
+            with theirs:
+                self._words = undo.enter_context(tempfile.TemporaryFile())
+                self._process = subprocess.Popen(  # noqa: S603 - ourselves
+                    [sys.executable, "-m", "driftwatch.daemon.process", role, str(ring), str(theirs.fileno())],
+                    pass_fds=(ring, theirs.fileno()),
+                    stdin=subprocess.DEVNULL,
+                    stdout=subprocess.DEVNULL,
+                    stderr=self._words,
+                    process_group=0,  # Ctrl-C in a terminal is for the parent: it ends its children in order
+                )
+            undo.pop_all()
 
     @property
     def pid(self) -> int:
@@ -52,8 +65,10 @@ class Child:
         return self._process.pid
 
     def tell(self, order: Any) -> bool:
-        """Send an order; return whether it could be sent."""
+        """Send an order; return whether it could be sent: never to one whose pipe is full, which reads no more."""
         try:
+            if not select.select([], [self.connection], [], 0)[1]:
+                return False
             self.connection.send(order)
         except OSError:
             return False
@@ -74,9 +89,12 @@ class Child:
         return said, True
 
     def kill(self) -> None:
-        """End it whatever it is at, and let go of all that it needed."""
+        """End it whatever it is at, and let go of all that it needed.
+
+        One that the system holds on to, since its device or disk hangs, ends when the system lets go of it.
+        """
         self._process.kill()
-        self._process.wait()
+        self.wait(KILL_S)
         self.connection.close()
         self._words.close()
 

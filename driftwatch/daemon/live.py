@@ -36,6 +36,8 @@ from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.source import SourceFailedError, SourceRefusedError
 
 if TYPE_CHECKING:
+    from pathlib import Path
+
     from driftwatch.bus.publisher import Publisher
     from driftwatch.config import Configuration
     from driftwatch.daemon.feed import Feed
@@ -59,6 +61,18 @@ LEAST_PATIENCE_S = 5.0
 END_S = 30.0
 """How long everything may take to be measured after the last sample, seconds: a full queue takes a while."""
 
+RECORDER_END_S = 5.0
+"""How long the recorder may take to close its last segment, seconds."""
+
+STUMBLES = 3
+"""So many deaths at the same block, and the worker begins behind it."""
+
+STALL_S = 30.0
+"""Time without progress of the workers, although there is work, after which time goes on without them, seconds."""
+
+TICK_LAG_NS = NS // 2
+"""So far ticks stay behind: samples that come again were taken a moment before they arrive."""
+
 GIVE_UP_AFTER = 3
 """A source that died so often before its first sample is refused."""
 
@@ -79,6 +93,7 @@ class Company:
     chore: Callable[[float], None] = lambda _: None  # once a second, with the monotonic time: work that can wait
     told: Callable[[str, bool], None] = lambda _text, _fault: None  # what is worth a line in the log
     beat: Callable[[Heartbeat], None] = lambda _: None  # each heartbeat, published or not
+    ending: Callable[[], object] = lambda: None  # called when the end begins
     observer: Observer | None = None
 
 
@@ -95,6 +110,8 @@ class LiveRun:
         What the source is and how it is read.
     company
         Whom else it works with.
+    recordings
+        Where raw samples are kept, if they are.
 
     Raises
     ------
@@ -108,11 +125,13 @@ class LiveRun:
         run: str,
         feed: Feed,
         company: Company,
+        recordings: Path,
     ) -> None:
         self._config = config
         self._run = run
         self._feed = feed
         self._company = company
+        self._recordings = recordings
         self._ring = feed.make_ring()
         self._shares = _shares(config, feed.name, config.daemon.workers)
         self._merge = Merge(len(self._shares))
@@ -122,6 +141,9 @@ class LiveRun:
         self._recorder: Supervised | None = None
         self._source: LiveSource | None = None
         self._finished: dict[int, list[Any]] = {}
+        self._trips: dict[int, tuple[int, int]] = {}  # of each worker: the block at which it died, and how often
+        self._oldest: dict[int, int] = {}  # of each worker: the block before which it must not look back
+        self._merged = (0, time.monotonic())  # the number of blocks merged, and when that last grew
         self._ticks: Iterator[int] | None = None  # times of those to come in this silence
         self._next_tick = 0
         self._reason: str | None = None  # why the run ends; None: it goes on
@@ -176,12 +198,19 @@ class LiveRun:
             reason = f"failed: {self._failure}"
         readings = [one for worker in sorted(self._finished) for one in self._finished[worker]]
         self._take([self.station.note(body) for body in self._incidents.end_all()])
-        self._take(self.station.finish(reason, readings))
-        self._end_children(10.0)
+        self._take(self.station.finish(reason, readings, self._end_of_silence_ns()))
         self._keeper.flush()
+        self._end_children(RECORDER_END_S)
         if self._failure is not None:
             raise SourceFailedError(self._failure)
         return reason
+
+    def _end_of_silence_ns(self) -> int | None:
+        """Return the stream time of now where no samples come; else None: the last sample says it."""
+        tied = self._ring.tied
+        if self._ring.silent is None or tied is None:
+            return None
+        return self._time_ns(tied.at(instant_ns(), self._ring.shape.rate_hz))
 
     # ------------------------------------------------------------------------------------------ the start
 
@@ -222,14 +251,15 @@ class LiveRun:
             if self._source is None:
                 return None
             number, position = self._merge.next_of(worker), self._merge.position_of(worker)
-            return Measure(self._config, self._source, self._shares[worker], worker, number, position)
+            oldest = self._oldest.get(worker, 0)
+            return Measure(self._config, self._source, self._shares[worker], worker, number, position, oldest)
 
         patience = max(LEAST_PATIENCE_S, self._config.daemon.queue_s / 2)
         return Supervised("tracker", self._ring.descriptor, order, patience)
 
     def _start_recording(self, source: LiveSource) -> None:
         if self._config.record.keep_hours > 0:
-            order = Record(self._config, source, self._run)
+            order = Record(self._config, source, self._run, str(self._recordings))
             self._recorder = Supervised("recorder", self._ring.descriptor, lambda: order, None)
 
     # ------------------------------------------------------------------------------------------ the children
@@ -246,8 +276,25 @@ class LiveRun:
             why = why or tracker.hangs(now, self._ring.place_of(worker), is_idle=idle)
             if why is not None and worker not in self._finished:
                 self._begin_process_fault(worker, why, tracker.is_looping(now))
+                self._pass_stumbling_block(worker)
         if self._recorder is not None:
             self._supervise_recorder(self._recorder, now)
+
+    def _pass_stumbling_block(self, worker: int) -> None:
+        """Let a worker that dies at the same block again and again begin behind it: the others wait for it."""
+        number = self._merge.next_of(worker)
+        before, times = self._trips.get(worker, (number, 0))
+        self._trips[worker] = (number, times + 1 if before == number else 1)
+        if self._trips[worker][1] < STUMBLES:
+            return
+        seen = self._ring.seen(number) if number < self._ring.published else None
+        if seen is None:
+            return
+        passed = MeasuredBlock(number, seen.first_sample, len(seen.samples), seen.cause, seen.arrived_ns, [])
+        self._merge.add(worker, [passed])
+        self._ring.keep_for(worker, number + 1)
+        self._oldest[worker] = number + 1
+        self._company.told(f"Block {number} was passed over: {STUMBLES} times a worker died at it", True)
 
     def _supervise_capture(self, now: float) -> None:
         if self._ring.ended:
@@ -279,6 +326,10 @@ class LiveRun:
             self._fault("recorder", Fault.PROCESS, f"the process that records died: {why}; it is started again")
         elif recorder.child is not None and not recorder.is_looping(now):
             self._fault_ends("recorder")
+        if self._ring.published - self._ring.recorded > self._ring.shape.most_waiting:
+            self._fault("late recorder", Fault.DISK, "the recorder is late by more than the queue: see the disk")
+        else:
+            self._fault_ends("late recorder")
 
     def _record_state(self, error: str | None) -> None:
         if error is None:
@@ -364,16 +415,23 @@ class LiveRun:
 
     def _tick_while_silent(self) -> None:
         """Give a tick for each second in which, as is known, nothing comes and nothing waits to be measured."""
-        if self._reason is not None or self._merge.merged < self._ring.published:
-            return
-        cause = self._ring.silent
-        if cause is None and self._feed.known is None and self._capture.child is None:
-            cause = Fault.PROCESS
-        tied = self._ring.tied
-        if cause is None or tied is None:
+        cause, tied = self._why_silent(), self._ring.tied
+        if self._reason is not None or cause is None or tied is None:
             return
         index = tied.at(instant_ns(), self._ring.shape.rate_hz)
-        self._tick_until(self._time_ns(index), cause, is_open=False)
+        self._tick_until(self._time_ns(index) - TICK_LAG_NS, cause, is_open=False)
+
+    def _why_silent(self) -> Fault | None:
+        """Return why nothing comes that could be measured; None: something does, or may."""
+        if self._merge.merged != self._merged[0]:
+            self._merged = (self._merge.merged, time.monotonic())
+        if self._merge.merged < self._ring.published:  # the workers are late, or at their end
+            return Fault.PROCESS if time.monotonic() - self._merged[1] > STALL_S else None
+        if self._ring.filled > self._ring.published:  # samples are there, only their place is not known yet
+            return None
+        if self._ring.silent is None and self._feed.known is None and self._capture.child is None:
+            return Fault.PROCESS
+        return self._ring.silent
 
     def _tick_until(self, until_ns: int, cause: Fault, *, is_open: bool) -> None:
         """Give the ticks up to a stream time; with `is_open` not the one just then."""
@@ -441,6 +499,7 @@ class LiveRun:
     # ------------------------------------------------------------------------------------------ the end
 
     def _begin_end(self, reason: str, now: float) -> None:
+        self._company.ending()
         self._reason = reason
         self._end_by = now + END_S
         self._capture.dismiss()

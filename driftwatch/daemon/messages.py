@@ -44,6 +44,7 @@ class Measure:
     place: int  # of the reader in the ring
     number: int  # of the next block whose readings are wanted
     position: int  # up to which stream index readings were told before
+    oldest: int = 0  # number of the first block that may be looked back to
 
 
 @dataclass(frozen=True, slots=True)
@@ -53,6 +54,7 @@ class Record:
     config: Configuration
     source: LiveSource
     run: str
+    folder: str  # where segments lie
 
 
 @dataclass(frozen=True, slots=True)

@@ -7,7 +7,7 @@ from multiprocessing.connection import Connection
 from pathlib import Path
 from typing import Any
 
-from driftwatch.config import Configuration, SoundcardSourceConfig
+from driftwatch.config import SoundcardSourceConfig
 from driftwatch.daemon.messages import ClockSeen, Enough, Record, Recorded
 from driftwatch.records import Block, sample_time_ns
 from driftwatch.stream.recorder import NotRecordedError, Recorder
@@ -32,11 +32,6 @@ def work(order: Record, ring: Ring, connection: Connection[Any, Any]) -> None:
     _Driver(order, ring, connection).run()
 
 
-def recordings_folder(config: Configuration) -> Path:
-    """Return where segments lie."""
-    return Path(config.record.folder or config.state / "recordings")
-
-
 class _Driver:
     def __init__(self, order: Record, ring: Ring, connection: Connection[Any, Any]) -> None:
         source = order.source
@@ -54,7 +49,7 @@ class _Driver:
             time_quality=source.time_quality,
             sample_format=configured.sample_format if isinstance(configured, SoundcardSourceConfig) else "float32",
         )
-        self._recorder = Recorder(recordings_folder(order.config), order.config.record, identity)
+        self._recorder = Recorder(Path(order.folder), order.config.record, identity)
         self._reader = ring.reader(PLACE, ring.oldest())
         self._failed = False
 
@@ -95,7 +90,9 @@ class _Driver:
             return True
         except OverrunError:
             self._reader.next = self._ring.oldest()
+            self._say("samples were not recorded: the disk is too slow for them; lower the load on it or use another")
             return True
+        self._ring.recorded = self._reader.next
         if self._reader.next > before:
             self._say(None)
         return self._reader.next > before

@@ -18,7 +18,7 @@ from driftwatch.daemon.live import Company, LiveRun, Observer
 from driftwatch.daemon.notify import ServiceManager
 from driftwatch.daemon.pruner import Pruner
 from driftwatch.daemon.reload import reload_plan
-from driftwatch.daemon.state import StateLock
+from driftwatch.daemon.state import StateLock, recordings_folder, state_folder
 from driftwatch.pipeline.station import RunHeader, Station
 from driftwatch.records import Command, Envelope, Heartbeat, Origin
 from driftwatch.store.errors import unreachable
@@ -125,9 +125,12 @@ class Service:
         refuse_foreign(path)
         refuse_read_only(path)
         lock = self._locked(WriterLock(path, station))
-        self._locked(StateLock(self._state_folder(), station))
-        company = Company(publisher, self._chore, outlets.told, outlets.beat, outlets.observer)
-        self._live = enter(LiveRun(config, self._run, self._feed, company))
+        folder, recordings = state_folder(config, self._store), recordings_folder(config, self._store)
+        self._locked(StateLock(folder, station))
+        if config.record.keep_hours > 0 and recordings != folder:
+            self._locked(StateLock(recordings, station))  # another state folder may have the same one for these
+        company = Company(publisher, self._chore, outlets.told, outlets.beat, self._manager.stopping, outlets.observer)
+        self._live = enter(LiveRun(config, self._run, self._feed, company, recordings))
         source = self._live.start(stop)
         if source is None:
             return False
@@ -145,12 +148,6 @@ class Service:
         self._opened.callback(lambda: lock.release() if self._is_open else lock.discard())
         return lock
 
-    def _state_folder(self) -> Path:
-        """Return the state folder: the configuration's, or that of a database named instead."""
-        if self._store is not None and self._config.daemon.state is None:
-            return Path(self._store.removeprefix("sqlite:///")).absolute().parent
-        return self._config.state
-
     def until(self, stop: Stop, hangup: Stop) -> str:
         """Run to the end and return why it ended; `hangup` asks for a reload of the configuration.
 
@@ -161,10 +158,7 @@ class Service:
         """
         self._hangup = hangup
         self._is_ready = False
-        try:
-            return self._live.until(stop, self._station, self._keeper)
-        finally:
-            self._manager.stopping()
+        return self._live.until(stop, self._station, self._keeper)
 
     # ------------------------------------------------------------------------------------------ once a second
 

@@ -9,17 +9,30 @@
 
 from __future__ import annotations
 
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from driftwatch.store.lock import HeldError, HolderLock
 
 if TYPE_CHECKING:
-    from pathlib import Path
+    from driftwatch.config import Configuration
 
 LOCK_NAME = "daemon.lock"
 
 FOLDER_MODE = 0o700
 """A state folder made here is for its owner: raw recordings lie in it, and a microphone may have recorded speech."""
+
+
+def state_folder(config: Configuration, store: str | None = None) -> Path:
+    """Return the state folder of a run: the configuration's, or that of the database that is named instead."""
+    if store is not None and config.daemon.state is None:
+        return Path(store.removeprefix("sqlite:///")).absolute().parent
+    return config.state
+
+
+def recordings_folder(config: Configuration, store: str | None = None) -> Path:
+    """Return where the raw samples of a run lie."""
+    return Path(config.record.folder or state_folder(config, store) / "recordings")
 
 
 class StateError(Exception):

@@ -40,11 +40,17 @@ class Supervised:
         self._moved = 0.0  # when that was seen to change
         self._has_moved = False  # since it was started
         self._is_ordered = False
+        self._not_started: str | None = None  # why not, until it is told
 
     def start_if_due(self, now: float) -> None:
         """Start it if it does not run and should, and give it its order once that is known."""
         if self.child is None and self._is_wanted and now >= self._due:
-            self.child = Child(self.role, self._ring)
+            try:
+                self.child = Child(self.role, self._ring)
+            except OSError as error:  # no memory, no descriptor, no process left: that may pass
+                self._due = now + self.restarts.died(now)
+                self._not_started = f"it could not be started: {error.strerror or error}"
+                return
             self._progress, self._moved, self._has_moved, self._is_ordered = None, now, False, False
         if self.child is not None and not self._is_ordered:
             order = self._order()
@@ -53,12 +59,16 @@ class Supervised:
     def heard(self, now: float) -> tuple[list[Any], str | None]:
         """Return what it said, and why it died, if it did: it is then started again in a while."""
         if self.child is None:
-            return [], None
+            why, self._not_started = self._not_started, None
+            return [], why
         said, can_say_more = self.child.heard()
         if can_say_more and self.child.is_running():
             return said, None
         self.child.wait(1.0)  # the pipe closes a moment before the process has ended
-        said += self.child.heard()[0]
+        while can_say_more:  # what it said before it died counts
+            more, can_say_more = self.child.heard()
+            said += more
+            can_say_more = can_say_more and bool(more)
         return said, self._bury(now, self.child.why_it_died())
 
     def hangs(self, now: float, progress: int, *, is_idle: bool) -> str | None:

@@ -70,7 +70,8 @@ class _Tracker:
             return 0, self._source.first_sample
         wanted = order.position - ChannelGroup(order.config, order.source, order.channels).memory
         begin, first_sample = order.number, order.position
-        for number in range(order.number - 1, self._ring.oldest() - 1, -1):
+        oldest = max(order.oldest, self._ring.oldest())
+        for number in range(order.number - 1, oldest - 1, -1):
             block = self._ring.seen(number)
             if block is None or first_sample <= max(wanted, self._source.first_sample):
                 break

@@ -5,7 +5,7 @@ from __future__ import annotations
 import uuid
 from typing import TYPE_CHECKING
 
-from driftwatch.records import Fault, Health, Phase, sample_time_ns
+from driftwatch.records import NS, Fault, Health, Phase, sample_time_ns
 
 if TYPE_CHECKING:
     from driftwatch.stream.source import SourceFacts
@@ -55,7 +55,7 @@ class Gaps:
         """Return the end of a gap in which the stream ends; `now_ns` is its stream time."""
         if self._open is None:
             return None
-        return self._end(max(0, (now_ns - self._open.since_ns) * self._source.rate_hz // 1_000_000_000))
+        return self._end(max(0, (now_ns - self._open.since_ns) * self._source.rate_hz // NS))
 
     def _time_ns(self, sample: int) -> int:
         return sample_time_ns(self._source.start_ns, sample, self._source.rate_hz)

@@ -149,11 +149,21 @@ class Station:
         self._refuse_unknown(block.source)
         return list(self._block(block, readings))
 
-    def finish(self, reason: str | None = None, readings: Sequence[Reading] | None = None) -> list[Envelope]:
+    def finish(
+        self, reason: str | None = None, readings: Sequence[Reading] | None = None, until_ns: int | None = None
+    ) -> list[Envelope]:
         """Return what the last samples still make known, and the record that closes the run.
 
-        `readings` are those that were measured elsewhere; None: here.
+        Parameters
+        ----------
+        reason
+            Why it ends.
+        readings
+            What was measured elsewhere; None: here.
+        until_ns
+            Stream time of the end, where that is later than the last sample and the last tick.
         """
+        self.now_ns = max(self.now_ns, until_ns or self.now_ns)
         last = [one for group in self._groups.values() for one in group.finish()] if readings is None else readings
         records = list(self._readings(last))
         records += [

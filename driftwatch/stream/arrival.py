@@ -109,11 +109,15 @@ class ArrivalJudge:
 
     # ------------------------------------------------------------------------------------------ the stream's life
 
-    def begin_at(self, index: int, monotonic_ns: int) -> None:
-        """Tie an instant to a stream index before the first stream: its samples come behind a gap since then."""
+    def begin_at(self, index: int, monotonic_ns: int, deviation: float = 0.0) -> None:
+        """Tie an instant to a stream index before the first stream: its samples come behind a gap since then.
+
+        `deviation` is the true rate's from the nominal one, relative, as far as somebody knew it before.
+        """
         if self._floor.level_ns is not None:
             raise ValueError("the stream has begun already; expected begin_at() before the first block")
         self._index = self._told = index
+        self._deviation = deviation
         self._due_ns = self._head_ns = monotonic_ns
         self._floor.level_ns = self._reference_ns = 0
 
@@ -321,6 +325,11 @@ class ArrivalJudge:
     def next_index(self) -> int:
         """Stream index behind the last sample that was decided."""
         return self._index
+
+    @property
+    def deviation(self) -> float:
+        """Deviation of the true rate from the nominal one, relative, as gaps are reckoned with."""
+        return self._deviation
 
     @property
     def held(self) -> int:

@@ -57,6 +57,7 @@ class _Head(IntEnum):
     TIE_NS = 15  # ... and the monotonic time at which its sample would arrive
     TIE_PPB = 16  # deviation of the true rate from the nominal, 1e-9
     CALLED_NS = 18  # monotonic time of the last block, whether it was taken or dropped
+    RECORDED = 19  # number of the next block that the recorder will take
     ATTEMPTS = 17  # how often it was tried to open the device
     READERS = 32  # from here on the number of the next block of each reader
 
@@ -281,6 +282,15 @@ class Ring:
         self._head[_Head.TIE_INDEX] = tie.index
         self._head[_Head.TIE_PPB] = round(tie.deviation * 1e9)
         self._head[_Head.TIE_NS] = tie.monotonic_ns
+
+    @property
+    def recorded(self) -> int:
+        """Number of the next block that the recorder, for which nobody waits, will take."""
+        return int(self._head[_Head.RECORDED])
+
+    @recorded.setter
+    def recorded(self, number: int) -> None:
+        self._head[_Head.RECORDED] = number
 
     def attempt(self) -> None:
         """Count one more attempt to open the device."""
