@@ -69,6 +69,8 @@ class StateLock(HolderLock):
     """
 
     def __init__(self, folder: Path, station: str) -> None:
+        self._folder = folder
+        self._is_new_folder = not folder.exists()
         try:
             folder.mkdir(FOLDER_MODE, exist_ok=True)
             super().__init__(folder / LOCK_NAME, station)
@@ -82,3 +84,9 @@ class StateLock(HolderLock):
                 f"{folder}: got {error.strerror or error}; expected a folder that may be written to, or to be made in "
                 "one that is there; make it, change its permissions, or name another with [daemon] state"
             ) from None
+
+    def discard(self) -> None:
+        """Let the next one in, and leave neither file nor folder where there was none before."""
+        super().discard()
+        if self._is_new_folder and self._folder.is_dir() and not any(self._folder.iterdir()):
+            self._folder.rmdir()
