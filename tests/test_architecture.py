@@ -90,6 +90,15 @@ def test_the_vocabulary_and_the_pole_load_no_room() -> None:
     assert "scipy" not in modules_after("import driftwatch.resonance")
 
 
+@pytest.mark.parametrize(
+    ("role", "kept_out"),
+    [("capture", "scipy"), ("recorder", "scipy"), ("tracker", "sounddevice"), ("live", "sounddevice")],
+)
+def test_each_process_of_a_live_run_loads_no_more_than_the_guide_says(role: str, kept_out: str) -> None:
+    """`live` is the main process; the others are the modules whose `work` a child carries out."""
+    assert kept_out not in modules_after(f"import driftwatch.daemon.{role}")
+
+
 # ---------------------------------------------------------------------------------------------- what lies where
 
 

@@ -23,12 +23,15 @@ from driftwatch.config import (
     Configuration,
     ModeConfig,
     RecordingSourceConfig,
+    SoundcardSourceConfig,
     StationConfig,
     StoreConfig,
     load,
     loads,
     unserved,
 )
+from driftwatch.config.models import DaemonConfig, RecordConfig
+from driftwatch.pipeline.gaps import WORDS
 from driftwatch.records import REASONS, AlertState, Method, TrackStatus
 from pydantic import BaseModel
 
@@ -214,6 +217,31 @@ def test_the_readme_explains_the_states_that_an_alert_can_reach_and_no_other() -
     assert set(first_column(section(README, "Alerts"))) == reached
 
 
+def test_the_readme_explains_every_cause_of_a_gap_and_no_other() -> None:
+    assert sorted(first_column(section(README, "When samples go missing"))) == sorted(WORDS)
+
+
+def test_the_readme_names_what_can_be_set_of_a_sound_card_and_the_defaults() -> None:
+    (row,) = [line for line in README.splitlines() if line.startswith("| `[[source]]` |")]
+    (named,) = re.findall(r"of a sound card \(([^)]*)\)", row)
+    assert set(re.findall(r"`(\w+)`", named)) == set(SoundcardSourceConfig.model_fields) - {"name", "kind"}
+    card = SoundcardSourceConfig(name="card")
+    assert f"`{card.sample_format}`, {card.block_s:g} s" in row
+    assert f"(`block_s`,\n{card.block_s * 1000:g} ms" in README
+
+
+def test_the_tables_of_a_sensor_in_the_readme_fit_into_the_file_for_a_first_try() -> None:
+    """What the README shows in place of source and channel leaves a configuration that runs and checks its sensor."""
+    (shown,) = [
+        block.body for block in blocks(README) if 'device = "measurement"' in block.body and "toml" in block.language
+    ]
+    text = (ROOT / "config" / "first-try.toml").read_text(encoding="utf-8")
+    config = loads(text[: text.index("[[source]]")] + shown + text[text.index("[[mode]]") :])
+    (source,) = config.source
+    assert isinstance(source, SoundcardSourceConfig)
+    assert (source.device, config.channel[0].input, unserved(config)) == ("measurement", 2, [])
+
+
 TABLES: dict[str, tuple[type[BaseModel], set[str]]] = {
     "[station]": (StationConfig, set()),
     "[[source]]": (RecordingSourceConfig, set()),
@@ -223,6 +251,8 @@ TABLES: dict[str, tuple[type[BaseModel], set[str]]] = {
     "[[alert]]": (AlertConfig, set()),
     "[store]": (StoreConfig, set()),
     "[bus]": (BusConfig, set()),
+    "[daemon]": (DaemonConfig, set()),
+    "[record]": (RecordConfig, set()),
 }
 """Each table of the README with its model, and the keys that stand for what is not served or for the next table."""
 
