@@ -1,0 +1,263 @@
+"""A real ``driftwatch run`` on a simulated source: what a reload takes over, and that no process outlives it."""
+
+from __future__ import annotations
+
+import json
+import os
+import signal
+import socket
+import subprocess
+import sys
+import threading
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Any, Self
+
+import pytest
+from ordered import LONG_S, children, is_running, killed_at_the_end, until
+
+Row = dict[str, Any]
+
+BAND = """
+[[mode.band]]
+name = "{name}"
+low = {low}
+on_delay_s = 1.0
+off_delay_s = 1.0
+"""
+
+TEXT = """
+schema = 1
+[station]
+name = "bench"
+[[source]]
+name = "model"
+kind = "simulated"
+rate_hz = 2000
+seed = 5
+noise = 0.002
+pace = 2.0
+[[source.resonator]]
+frequency_hz = 380.0
+q = 30.0
+level = 0.05
+[[channel]]
+name = "drive end"
+[[mode]]
+name = "rocking"
+channel = "drive end"
+search_hz = [{search_low}, 460.0]
+window_s = 1.0
+step_s = 0.25
+{bands}
+[store]
+url = "sqlite:///state/rows.db"
+keep_days = {keep_days}
+[bus]
+publish = "tcp://127.0.0.1:{port}"
+control = "tcp://127.0.0.1:{control}"
+[daemon]
+log_level = "{log_level}"
+[record]
+keep_hours = 1.0
+"""
+"""A mode at 380 Hz."""
+
+
+class Daemon:
+    """``driftwatch run --json`` as a process, with what it prints."""
+
+    def __init__(self, folder: Path) -> None:
+        self.path = folder / "bench.toml"
+        with socket.socket() as one, socket.socket() as other:
+            for each in (one, other):
+                each.bind(("127.0.0.1", 0))
+            self._ports = {"port": one.getsockname()[1], "control": other.getsockname()[1]}
+        self.rows: list[Row] = []
+        self.lines: list[str] = []
+
+    def write(
+        self,
+        *bands: tuple[str, float],
+        keep_days: int = 90,
+        log_level: str = "info",
+        search_low: float = 340.0,
+    ) -> None:
+        """Write the configuration, with bands by name and low limit."""
+        told = "".join(BAND.format(name=name, low=low) for name, low in bands)
+        values = {"keep_days": keep_days, "log_level": log_level, "search_low": search_low, **self._ports}
+        self.path.write_text(TEXT.format(bands=told, **values), encoding="utf-8")
+
+    def __enter__(self) -> Self:
+        self.process = subprocess.Popen(
+            [sys.executable, "-m", "driftwatch", "run", str(self.path), "--json"],
+            cwd=self.path.parent,
+            env={**os.environ, "OMP_NUM_THREADS": "1"},
+            stdout=subprocess.PIPE,
+            stderr=subprocess.PIPE,
+            text=True,
+        )
+        self._threads = [
+            threading.Thread(
+                target=self._read, args=(self.process.stdout, lambda line: self.rows.append(json.loads(line)))
+            ),
+            threading.Thread(target=self._read, args=(self.process.stderr, self.lines.append)),
+        ]
+        for thread in self._threads:
+            thread.start()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.process.kill()
+        self.process.wait()
+        for thread in self._threads:
+            thread.join()
+
+    @staticmethod
+    def _read(stream: Any, take: Callable[[str], None]) -> None:
+        with stream:
+            for line in stream:
+                take(line)
+
+    def of(self, kind: str, **wanted: Any) -> list[Row]:
+        """Return what was printed of a kind, with these values."""
+        rows = [row for row in list(self.rows) if row["kind"] == kind]
+        return [row for row in rows if all(row[name] == value for name, value in wanted.items())]
+
+    def reload(self) -> Row:
+        """Ask for a reload and return the record of it."""
+        before = len(self.of("command"))
+        self.process.send_signal(signal.SIGHUP)
+        until(lambda: len(self.of("command")) > before, "the reload is a record")
+        return self.of("command")[before]
+
+    def told(self, words: str) -> str:
+        """Return the line of standard error that holds the words, once it is there."""
+        return str(until(lambda: [line for line in list(self.lines) if words in line], f"it says {words!r}")[0])
+
+    def end(self) -> None:
+        """End it in good order, and hold all that it printed to be whole."""
+        self.process.send_signal(signal.SIGTERM)
+        assert self.process.wait(LONG_S) == 0
+        for thread in self._threads:
+            thread.join()
+        assert [row["sequence"] for row in self.rows] == list(range(1, len(self.rows) + 1))
+
+
+@pytest.fixture
+def daemon(tmp_path: Path) -> Iterator[Daemon]:
+    yield Daemon(tmp_path)
+
+
+def stands(daemon: Daemon, name: str) -> Row:
+    """Wait until an alert stands; return its record."""
+    alert = f"drive end/rocking/{name}"
+    return dict(until(lambda: daemon.of("alert", alert=alert, state="unacknowledged"), f"{name} stands")[0])
+
+
+def moves(daemon: Daemon, name: str) -> list[tuple[str, str]]:
+    """Return the changes of state of an alert so far."""
+    rows = daemon.of("alert", alert=f"drive end/rocking/{name}")
+    return [(row["previous_state"], row["state"]) for row in rows if row["state"] != row["previous_state"]]
+
+
+def measured_without_a_hole(daemon: Daemon) -> None:
+    """Hold the windows that were measured to the grid of every quarter of a second, from the first to the last."""
+    firsts = [row["first_sample"] for row in daemon.of("measurement")]
+    assert firsts == list(range(0, 500 * len(firsts), 500))
+    assert daemon.of("health") == []
+
+
+GONE = {"alert": "drive end/rocking/goes", "previous_state": "unacknowledged", "state": "normal"}
+
+
+def test_a_reload_moves_limits_ends_what_is_gone_and_lets_go_on_what_stands(daemon: Daemon) -> None:
+    """Three bands that are all left: one gets another limit, one goes, one stays; a fourth comes. No sample is lost."""
+    daemon.write(("stays", 400.0), ("goes", 401.0), ("moves", 402.0))
+    with daemon:
+        before = {name: stands(daemon, name) for name in ("stays", "goes", "moves")}
+        daemon.write(("moves", 350.0), ("comes", 403.0), ("stays", 400.0), log_level="warning")
+        command = daemon.reload()
+        assert (command["by"], command["action"], command["target"]) == ("signal", "reload", str(daemon.path))
+        assert command["reason"].startswith("taken over, sha256 ")
+        gone = until(lambda: daemon.of("alert", **GONE), "its end")[0]
+        assert gone["occurrence"] == before["goes"]["occurrence"]
+        assert gone["reason"] == "no longer watched: the configuration was reloaded"
+        moved = until(
+            lambda: daemon.of("alert", alert="drive end/rocking/moves", previous_state="unacknowledged"), "it returns"
+        )[0]
+        assert moved["occurrence"] == before["moves"]["occurrence"]  # the same life, by the new limit
+        assert (moved["low"], moved["state"]) == (350.0, "returned_unacknowledged")
+        came = stands(daemon, "comes")
+        assert came["sequence"] > command["sequence"]
+        daemon.end()
+        assert moves(daemon, "stays") == [("normal", "unacknowledged")]
+        assert moves(daemon, "goes") == [("normal", "unacknowledged"), ("unacknowledged", "normal")]
+        assert len(daemon.of("run")) == 2
+        assert daemon.of("alert", condition="no_data") == []
+        measured_without_a_hole(daemon)
+
+
+def test_refused_reloads_name_each_key_leave_all_as_it_was_and_the_daemon_goes_on(daemon: Daemon) -> None:
+    """First a key that needs a restart, beside one that does not; then a file that is none; then one that is gone."""
+    daemon.write(("stays", 400.0))
+    with daemon:
+        stands(daemon, "stays")
+        daemon.write(("stays", 350.0), search_low=330.0)
+        command = daemon.reload()
+        assert command["reason"].startswith("refused: ")
+        assert "search_hz" in command["reason"]
+        assert "330" in command["reason"]
+        assert "340" in command["reason"]
+        assert "low" not in command["reason"].replace("allow", "")
+        daemon.told("The configuration was not reloaded: ")
+
+        daemon.path.write_text("schema = 1\n[station\n", encoding="utf-8")
+        assert daemon.reload()["reason"].startswith("refused: ")
+        daemon.path.unlink()
+        reason = daemon.reload()["reason"]
+        assert reason.startswith("refused: ")
+        assert str(daemon.path) in reason
+
+        measured = len(daemon.of("measurement"))
+        until(lambda: len(daemon.of("measurement")) > measured + 8, "it goes on")
+        assert moves(daemon, "stays") == [("normal", "unacknowledged")]  # by the limit of 400 Hz
+        daemon.write(("stays", 350.0))
+        assert daemon.reload()["reason"].startswith("taken over")
+        until(lambda: len(moves(daemon, "stays")) == 2, "the alert returns by the new limit")
+        daemon.end()
+        measured_without_a_hole(daemon)
+
+
+def test_a_reload_changes_how_much_is_logged_and_takes_how_long_rows_are_kept(daemon: Daemon) -> None:
+    daemon.write()
+    with daemon:
+        until(lambda: daemon.of("measurement"), "it measures")
+        daemon.write(keep_days=10, log_level="error")
+        assert daemon.reload()["reason"].startswith("taken over")
+        daemon.write(keep_days=10, log_level="error", search_low=330.0)
+        refused = daemon.reload()["reason"]
+        assert refused.startswith("refused: ")
+        assert "keep_days" not in refused  # ten days is what it runs on by now
+        daemon.write(keep_days=10, log_level="info")
+        assert daemon.reload()["reason"].startswith("taken over")
+        daemon.told("The configuration was reloaded from ")
+        daemon.end()
+        assert not [line for line in daemon.lines if "was not reloaded" in line]  # the level "error" hid it
+
+
+def test_when_the_daemon_is_killed_its_children_end_by_themselves_and_the_next_one_takes_over(daemon: Daemon) -> None:
+    daemon.write(("stays", 400.0))
+    with daemon:
+        until(lambda: len(daemon.of("measurement")) > 2, "it measures")
+        pids = [pid for role in ("capture", "tracker", "recorder") for pid in children(daemon.process.pid, role)]
+        with killed_at_the_end(pids):
+            assert len(pids) == 3
+            daemon.process.kill()
+            until(lambda: not any(is_running(pid) for pid in pids), "the children have ended")
+        daemon.process.wait()
+    with daemon:  # neither lock nor port is left taken
+        count = len(daemon.of("run"))
+        until(lambda: len(daemon.of("run")) > count, "it runs again")
+        daemon.process.send_signal(signal.SIGTERM)
+        assert daemon.process.wait(LONG_S) == 0
