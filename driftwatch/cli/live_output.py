@@ -6,6 +6,7 @@ import os
 import queue
 import threading
 from collections.abc import Callable, Sequence
+from contextlib import suppress
 from typing import TYPE_CHECKING, Any, Self
 
 import click
@@ -61,7 +62,8 @@ class LiveOutput:
 
     def _print(self) -> None:
         while (work := self._waiting.get()) is not None:
-            work()
+            with suppress(OSError):  # standard error is gone, too: nobody is left to be told
+                work()
 
     def __enter__(self) -> Self:
         return self

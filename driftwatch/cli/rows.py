@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from driftwatch.alert.words import track_words, with_std
 from driftwatch.cli.board import SAMPLES_LATE_S, Board, Verdict
 from driftwatch.cli.figures import NONE, duration, known_with_std, moment, with_interval
-from driftwatch.cli.view import elided, folded, is_back, key_of
+from driftwatch.cli.view import elided, folded, health_place, is_back, key_of
 from driftwatch.records import NS, Alert, Health, Track, TrackStatus
 
 LARGE_PER_DAY = 0.01
@@ -153,7 +153,7 @@ def fault_text(health: Health, now_ns: int) -> str:
     lost = f", {health.lost_samples} samples lost" if health.lost_samples else ""
     since = f"since {moment(health.since_ns)} ({_span(health.since_ns, now_ns)}){lost}"
     fault = str(health.fault).replace("_", " ")
-    return f"FAULT{_GAP}{health.channel or 'the input'}: {fault}: {health.detail or 'no more is known'}; {since}"
+    return f"FAULT{_GAP}{health_place(health)}: {fault}: {health.detail or 'no more is known'}; {since}"
 
 
 # ---------------------------------------------------------------------------------------------- modes

@@ -69,9 +69,18 @@ def alert_line(alert: Alert) -> str:
     return f"{'back inside' if is_back(alert) else f'ALERT {alert.priority}'}  {words}"
 
 
+INPUT_FAULTS = frozenset({Fault.GAP, Fault.OVERFLOW, Fault.SLOW_CONSUMER, Fault.DEVICE})
+"""Faults of no channel that are of the input; all others without a channel are of the daemon itself."""
+
+
+def health_place(health: Health) -> str:
+    """Return what a fault is of: a channel, the input, or the daemon."""
+    return health.channel or ("the input" if health.fault in INPUT_FAULTS else "the daemon")
+
+
 def health_line(health: Health) -> str:
     """Return one line about a fault that begins or ends."""
-    where = health.channel or "the input"
+    where = health_place(health)
     fault = str(health.fault).replace("_", " ")
     if health.phase is Phase.END:
         return f"fault over  {where}: {fault}, after {duration(health.seconds)}"

@@ -239,8 +239,8 @@ def _regime_problems(document: Document) -> Iterator[Problem]:
 def _record_problems(document: Document) -> Iterator[Problem]:
     """Yield that a microphone would be recorded raw without anybody's leave.
 
-    All inputs of a source are recorded. What is on those that no channel names nobody can know here; by default a
-    source opens no more inputs than the channels need.
+    All inputs that are opened are recorded. What is on those that no channel names nobody can know here;
+    `record_cautions` tells of them.
     """
     record = document.get("record")
     if not isinstance(record, Mapping):
@@ -276,7 +276,10 @@ def record_cautions(config: Configuration) -> list[str]:
         )
     for source in config.source:
         used = {channel.input for channel in config.channel if channel.source == source.name}
-        unnamed = sorted(set(range(1, (getattr(source, "inputs", None) or max(used, default=0)) + 1)) - used)
+        needed = max(used, default=0)
+        is_card = isinstance(source, SoundcardSourceConfig)
+        opened = source.opened_inputs(needed) if is_card else getattr(source, "inputs", needed)
+        unnamed = sorted(set(range(1, opened + 1)) - used)
         if unnamed:
             cautions.append(
                 f"All inputs of {source.name} are recorded raw for {record.keep_hours:g} h, so those that no channel "

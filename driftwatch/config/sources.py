@@ -68,6 +68,13 @@ class SoundcardSourceConfig(Table):
     block_s: Annotated[Positive, Field(ge=0.002, le=0.5)] = 0.01  # samples that the device hands over at a time
     wait_for_device: Flag = False  # where it is not there at the start: wait instead of refusing
 
+    def opened_inputs(self, needed: int) -> int:
+        """Return how many inputs are opened, if the device has them, where channels use the first `needed` ones.
+
+        Where the file does not say it, two at least: of one input alone many sound servers make a mixture of all.
+        """
+        return self.inputs or max(2, needed)
+
 
 class RecordingSourceConfig(Table):
     """Samples from a recording, at a pace."""

@@ -169,6 +169,7 @@ class CardCapture:
             if lasting or not self._order.source.wait_for_device:
                 self._connection.send(Refused(lasting or (text,)))
                 self._connection.recv()  # the parent ends this process: raises then
+            self._told = text  # the parent tells it as what is waited for
             self._begin_waiting(text)
         self._ring.silent = self._reason
         if text != self._told:

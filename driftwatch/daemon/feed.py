@@ -61,18 +61,14 @@ class Feed(Protocol):
 
 
 class CardFeed:
-    """A sound card.
-
-    Where the configuration does not say how many inputs are opened, it is two at least, if the device has them: of
-    one input alone many sound servers make a mixture of all.
-    """
+    """A sound card."""
 
     def __init__(self, source: SoundcardSourceConfig, needed_inputs: int, queue_s: float) -> None:
         self.name = source.name
         self.known = None
         self._source = source
         self._least = source.inputs or needed_inputs
-        self._inputs = source.inputs or max(2, needed_inputs)
+        self._inputs = source.opened_inputs(needed_inputs)
         self._queue_s = queue_s
 
     def make_ring(self) -> Ring:

@@ -141,8 +141,9 @@ def opened_inputs(config: Configuration, source: SourceConfig) -> int | None:
     """Return how many inputs of a source are opened, if the device has them; None: only the recording knows."""
     if source.kind == "recording":
         return None
-    if source.kind == "soundcard" and source.inputs is None:
-        return max(2, *(channel.input for channel in config.channel if channel.source == source.name), 1)
+    if source.kind == "soundcard":
+        used = (channel.input for channel in config.channel if channel.source == source.name)
+        return source.opened_inputs(max(used, default=1))
     return source.inputs
 
 
