@@ -277,8 +277,10 @@ def record_cautions(config: Configuration) -> list[str]:
     for source in config.source:
         used = {channel.input for channel in config.channel if channel.source == source.name}
         needed = max(used, default=0)
-        is_card = isinstance(source, SoundcardSourceConfig)
-        opened = source.opened_inputs(needed) if is_card else getattr(source, "inputs", needed)
+        if isinstance(source, SoundcardSourceConfig):
+            opened = source.opened_inputs(needed)
+        else:
+            opened = getattr(source, "inputs", needed)
         unnamed = sorted(set(range(1, opened + 1)) - used)
         if unnamed:
             cautions.append(

@@ -62,11 +62,11 @@ def test_an_unusable_number_of_hours_is_one_problem_and_no_second_one() -> None:
 
 def test_nothing_is_cautioned_where_nothing_is_recorded_or_it_is_no_microphone() -> None:
     assert record_cautions(loaded("")) == []
-    assert record_cautions(loaded("keep_hours = 2", "acceleration")) == []
+    assert record_cautions(loaded("keep_hours = 2", "acceleration", "inputs = 1")) == []
 
 
 def test_an_allowed_microphone_is_cautioned_with_who_allowed_it() -> None:
-    (caution,) = record_cautions(loaded('keep_hours = 2\npressure_allowed_by = "shift lead"'))
+    (caution,) = record_cautions(loaded('keep_hours = 2\npressure_allowed_by = "shift lead"', "pressure", "inputs = 1"))
     for words in ('2 h of "mic"', "as shift lead allowed", "may record speech", "consent", "local law"):
         assert words in caution
 
@@ -76,3 +76,5 @@ def test_inputs_that_no_channel_names_are_cautioned_for_they_are_recorded_too() 
     assert "names too: 1, 3, 4." in caution
     (caution,) = record_cautions(loaded("keep_hours = 2", "force", "", 2))  # as many are opened as the channels need
     assert "names too: 1." in caution
+    (caution,) = record_cautions(loaded("keep_hours = 2", "force", "", 1))  # and two at least
+    assert "names too: 2." in caution
