@@ -333,3 +333,122 @@ def test_a_truth_four_deviations_inside_gives_no_false_alert(band, track):
         for second, error in enumerate(errors):
             line.track(second, track(890.0 + 0.3 * (4.0 + error)))
         assert line.moves() == []
+
+
+# ------------------------------------------------------------------------------------------------ reload
+
+
+def reloaded(line, *bands, settings=None):
+    """Let a line's book take over other bands; return the records of it."""
+    return line.book.reload([WatchedMode("drive end", "rocking", bands)], settings or AlertSettings())
+
+
+@pytest.fixture
+def below(station, track):
+    """Return a maker of a line whose frequency has been 888 Hz for 12 s, below the usual limit of 890 Hz."""
+
+    def of(*bands):
+        line = station(*bands)
+        line.track(0, track())
+        for second in range(1, 13):
+            line.track(second, track(888.0, 0.3))
+        return line
+
+    return of
+
+
+def test_a_reload_of_the_same_settings_changes_nothing(station, band, track, below):
+    line, other = below(), below()
+    assert reloaded(line, band()) == []
+    for second in range(13, 80):
+        point = track(900.0 if second < 60 else 888.0, 0.3)
+        assert line.track(second, point) == other.track(second, point)
+    assert len(line.moves()) == 3
+
+
+def test_an_alert_goes_on_where_it_stood_by_the_new_limits(below, band, track):
+    """It returns without a new measurement being any different, and it is the same occurrence."""
+    line = below()
+    stood = line.band_records()[-1]
+    assert reloaded(line, band(low=880.0, off_delay_s=5.0, priority=Priority.URGENT)) == []
+    (standing,) = line.book.standing().alerts
+    assert (standing.state, standing.priority) == (ACTIVE, Priority.URGENT)
+    assert seconds(standing) == seconds(stood)
+    for second in range(13, 20):
+        line.track(second, track(888.0, 0.3))
+    last = line.band_records()[-1]
+    assert (last.previous_state, last.state, last.occurrence) == (ACTIVE, RETURNED, stood.occurrence)
+    assert (last.low, last.priority) == (880.0, Priority.URGENT)
+
+
+def test_a_timer_goes_on_through_a_reload_and_is_held_to_the_new_delay(station, band, track):
+    """Six seconds below the limit; then 8 s are asked for instead of 10: it fires two seconds later, not eight."""
+    line = station()
+    line.track(0, track())
+    for second in range(1, 8):
+        line.track(second, track(888.0, 0.3))
+    assert reloaded(line, band(on_delay_s=8.0)) == []
+    line.track(8, track(888.0, 0.3))
+    assert line.moves() == []
+    line.track(9, track(888.0, 0.3))
+    record = line.band_records()[-1]
+    assert record.state is ACTIVE
+    assert "for 8 s" in record.reason
+
+
+def test_a_band_that_is_taken_out_while_it_stands_ends_with_a_record(below, band, track):
+    line = below()
+    stood = line.band_records()[-1]
+    (end,) = reloaded(line)
+    assert (end.alert, end.occurrence, end.since_ns) == (stood.alert, stood.occurrence, stood.since_ns)
+    assert (end.previous_state, end.state, end.determinate) == (ACTIVE, NORMAL, True)
+    assert end.reason == "no longer watched: the configuration was reloaded"
+    assert line.book.standing().worst is None
+    assert line.track(13, track(888.0, 0.3)) == []
+    assert reloaded(line, band()) == []  # it comes back as a new one, which must wait anew
+    for second in range(14, 24):
+        line.track(second, track(888.0, 0.3))
+    assert len(line.moves()) == 1
+    (again,) = line.track(24, track(888.0, 0.3))
+    assert again.occurrence != stood.occurrence
+
+
+def test_a_band_that_is_taken_out_while_nothing_stands_ends_without_a_word(station, band, track):
+    line = station(band(), band(name="quiet", low=700.0))
+    line.track(0, track())
+    assert reloaded(line, band()) == []
+
+
+def test_a_band_of_the_same_name_for_another_quantity_is_another_alert(below, band):
+    line = below()
+    (end,) = reloaded(line, band(quantity="q", low=10.0, high=100.0))
+    assert (end.quantity, end.state) == ("frequency", NORMAL)
+    assert line.book.standing().alerts == ()
+
+
+def test_bands_that_change_places_keep_each_its_own_life(below, band):
+    first, second = band(name="first"), band(name="second", low=700.0)
+    line = below(first, second)
+    assert reloaded(line, second, first) == []
+    assert [one.alert for one in line.book.standing().alerts] == ["drive end/rocking/first"]
+
+
+def test_no_data_that_is_told_goes_on_through_a_reload_and_ends_where_its_name_does(station, band):
+    line = station()
+    line.book.on_samples(START_NS)
+    ticks(line.book, 1, 40)
+    (standing,) = line.book.standing().alerts[:1]
+    assert standing.condition is Condition.NO_DATA
+    same = AlertSettings(no_data=ConditionSettings("no data", on_delay_s=10.0, priority=Priority.URGENT))
+    assert [one for one in reloaded(line, band(), settings=same) if one.condition is Condition.NO_DATA] == []
+    assert line.book.standing().worst is Priority.URGENT
+    renamed = AlertSettings(no_data=ConditionSettings("silence", on_delay_s=10.0))
+    (end,) = (one for one in reloaded(line, band(), settings=renamed) if one.condition is Condition.NO_DATA)
+    assert (end.alert, end.state, end.since_ns) == ("no data", NORMAL, standing.since_ns)
+
+
+def test_a_reload_with_other_modes_is_an_error_and_changes_nothing(below):
+    line = below()
+    with pytest.raises(ValueError, match="other modes"):
+        line.book.reload([WatchedMode("drive end", "bending")], AlertSettings())
+    assert len(line.book.standing().alerts) == 1
