@@ -37,13 +37,17 @@ SECONDS_SMALL = 4.0
 SIMULATED_OVER_LIVE = 6.0
 """The simulated source runs so many times as long in stream time: 2 h for 20 minutes."""
 
-WARM_UP = 0.25
+WARM_UP = 0.5
 LEAST_WARM_UP_S = 60.0
-"""Before the measured time, as a part of it and at least: the ring of samples and the caches of the database fill."""
+"""Before the measured time, as a part of it and at least: the ring of samples fills in half a minute, the page cache of
+the database, 2 MB, in about 500 s of these modes' records."""
 
 PER_S = 7200.0
 LIMIT_MB = 5.0
 """Most growth in `PER_S`, 1e6 bytes."""
+
+BEYOND = 1.5
+"""The simulation is so many times as long as what is wanted of it: no process is read while it ends."""
 
 READ_EVERY_S = 0.25
 """Time between two readings of the memory, seconds: a simulation is over soon."""
@@ -91,7 +95,7 @@ def followed(folder: Path, seconds: float, warm_up_s: float, *, simulated: bool)
         When it does not come up, ends before its time or with a fault, or starts a process again.
     """
     endpoint = free_endpoint()
-    source = _simulated(warm_up_s + seconds) if simulated else card(SCENE.channels)
+    source = _simulated(BEYOND * (warm_up_s + seconds)) if simulated else card(SCENE.channels)
     (folder / "live.toml").write_text(SCENE.config(source, endpoint), encoding="utf-8")
     course = Course()
     with ExitStack() as stack:
@@ -129,18 +133,14 @@ def _follow(
             processes = processes or daemon_processes(daemon.pid)
             _read(course, processes, since_s)
     left = daemon_processes(daemon.pid)
-    if left != processes and left.keys() != {"main"}:  # after the end of a simulation its main process is alone
+    if left != processes:
         raise RuntimeError(f"the processes were {processes} and are {left}; expected the same ones to the end")
 
 
 def _read(course: Course, processes: Mapping[str, int], since_s: float) -> None:
-    try:
-        read = {name: resident_mb(pid) for name, pid in processes.items()}
-    except (FileNotFoundError, ProcessLookupError):
-        return  # the simulation is at its end
     course.stream_s.append(since_s)
-    for name, megabytes in read.items():
-        course.resident_mb.setdefault(name, []).append(megabytes)
+    for name, pid in processes.items():
+        course.resident_mb.setdefault(name, []).append(resident_mb(pid))
 
 
 def slope(stream_s: ArrayLike, megabytes: ArrayLike) -> Slope:
