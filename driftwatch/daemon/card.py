@@ -42,6 +42,9 @@ LONGEST_RETRY_S = 2.0
 LOOK_S = 0.004
 """Longest sleep between two looks at what the callback brought, seconds: part of the latency."""
 
+PARENT_EVERY_S = 0.05
+"""Time between two looks whether the parent wants no more, seconds."""
+
 CLOCK_FIRST_S = 60.0
 CLOCK_EVERY_S = 600.0
 """When the sample clock's figures are told for the first time, and how often then, seconds."""
@@ -90,6 +93,8 @@ class CardCapture:
         self._retry_s = FIRST_RETRY_S
         self._told = ""
         self._chores_due = 0.0
+        self._parent_due = 0.0
+        self._enough = False
         self._clock_due = time.monotonic() + CLOCK_FIRST_S
         self._quality = time_quality()
 
@@ -119,8 +124,12 @@ class CardCapture:
         return None if last is None else Tie(last.first_sample + len(last.samples), last.arrived_ns, 0.0)
 
     def _is_enough(self) -> bool:
-        """Say whether the parent wants no more."""
-        return bool(self._connection.poll(0))
+        """Say whether the parent wants no more; it is looked now and then, since to look costs more than to listen."""
+        now = time.monotonic()
+        if now >= self._parent_due and not self._enough:
+            self._parent_due = now + PARENT_EVERY_S
+            self._enough = bool(self._connection.poll(0))
+        return self._enough
 
     def _pause(self, seconds: float) -> None:
         until = time.monotonic() + seconds

@@ -130,13 +130,16 @@ class ChannelLine:
 
     def _advance(self) -> list[Reading]:
         """Zoom every block that is complete, then let the modes measure."""
-        zoom = self._zoom
+        zoom, before = self._zoom, self._block
         while (count := self._complete_blocks()) > 0:
             first = self._block * zoom.hop - zoom.edge
             samples = self._raw.view(first, first + zoom.fft_length + (count - 1) * zoom.hop)
             for line, stream in zip(self._lines, zoom.blocks(samples, self._block, count), strict=True):
                 line.extend(stream)
             self._block += count
+        if self._block == before:  # all that becomes known does so with a block of the grid
+            self._raw.give_back()
+            return []
         readings = [
             reading for line in self._lines for reading in line.measure(self._raw, self._missing, self._position)
         ]

@@ -29,6 +29,10 @@ if TYPE_CHECKING:
     from driftwatch.records import Envelope
 
 
+CACHE_KB = 512
+"""Pages kept in memory, kilobytes: rows are only appended, and memory that fills over hours looks like a leak."""
+
+
 @cache
 def _insert(kind: str) -> str:
     """Return the text of a kind's insert, prepared: rows go to the driver as they are."""
@@ -213,6 +217,7 @@ def _prepared(path: Path) -> Connection:
         with connection.begin():
             migrate(connection, path)
         connection.connection.cursor().execute("PRAGMA journal_mode = WAL")
+        connection.connection.cursor().execute(f"PRAGMA cache_size = -{CACHE_KB}")
     except (sa.exc.DBAPIError, sqlite3.Error) as error:
         engine.dispose()
         raise unreachable(path, error) from error
