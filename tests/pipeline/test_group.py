@@ -188,7 +188,7 @@ def test_a_channel_without_modes_is_measured_by_nobody() -> None:
 
 
 @given(st.sampled_from(SHARES), HOLES, st.integers(700, 20_000))
-@settings(max_examples=5, deadline=None)
+@settings(max_examples=3, deadline=None)
 def test_the_records_do_not_depend_on_how_many_measure(shares: list[list[str]], holes: Holes, size: int) -> None:
     """One, two or three groups against a station that measures by itself: bit for bit, gaps and all."""
     blocks = blocks_of(holes, size)
@@ -213,7 +213,7 @@ def again(blocks: list[Block], channels: list[str], dead: int) -> list[list[Read
 
 
 @given(st.data(), HOLES, st.integers(200, 3_000), st.sampled_from([["near"], ["far"], ["top"]]))
-@settings(max_examples=15, deadline=None)
+@settings(max_examples=8, deadline=None)
 def test_a_group_that_begins_again_within_its_memory_goes_on_as_if_it_had_not_died(
     data: st.DataObject, holes: Holes, size: int, channels: list[str]
 ) -> None:
@@ -243,7 +243,7 @@ def test_the_memory_is_no_longer_than_is_needed_to_say_so() -> None:
 
 
 @given(st.integers(1, len(SAMPLES) - RATE_HZ), st.integers(0, 4_000), st.integers(300, 3_000))
-@settings(max_examples=8, deadline=None)
+@settings(max_examples=4, deadline=None)
 def test_where_the_history_is_gone_windows_are_lost_and_nothing_wrong_is_told(
     position: int, history: int, size: int
 ) -> None:
