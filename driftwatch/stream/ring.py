@@ -171,7 +171,11 @@ class Ring:
             When there is not that much memory.
         """
         descriptor = _memory()
-        os.posix_fallocate(descriptor, 0, shape.size)
+        try:
+            os.posix_fallocate(descriptor, 0, shape.size)
+        except OSError:
+            os.close(descriptor)
+            raise
         head = np.zeros(_HEADER_WORDS, _WORD)
         head[: _Head.MOST_WAITING + 1] = (shape.slots, shape.frames, shape.inputs, shape.rate_hz, shape.most_waiting)
         head[_Head.READERS :] = _ABSENT

@@ -16,8 +16,8 @@ from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
+from driftwatch.daemon.crew import LOOK_S
 from driftwatch.daemon.keeper import COMMIT_EVERY_S
-from driftwatch.daemon.live import LOOK_S
 from driftwatch.stream.recording import open_recordings
 from numpy.typing import NDArray
 
