@@ -25,7 +25,7 @@ from driftwatch.stream.arrival import ArrivalJudge, Placed
 from driftwatch.stream.clock import WallClock, clock_record
 from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.ring import Ring, Tie
-from driftwatch.stream.soundcard import CardStream, DeviceUnavailableError, find_input, leave_hung, sound_inputs, within
+from driftwatch.stream.soundcard import CardStream, find_input, leave_hung, sound_inputs, within
 from driftwatch.stream.source import SourceRefusedError, StreamError
 
 SILENCE_S = 4.0
@@ -149,14 +149,13 @@ class CardCapture:
             return within(OPEN_S, self._opened)
         except TimeoutError as error:
             text = f"{error}; expected the device to open; the sound server may be stopped"
-            if self._start_ns is None:
-                self._connection.send(Told(text, fault=True))  # at the start the parent tries a few times
+            if self._start_ns is None and not self._order.source.wait_for_device:
+                self._connection.send(Told(text, fault=True))  # the parent tries a few times before it refuses
             else:
                 self._unavailable(text)
             self._leave()
         except StreamError as error:
-            lasting = isinstance(error, SourceRefusedError) and not isinstance(error, DeviceUnavailableError)
-            self._unavailable(str(error), error.problems if lasting and isinstance(error, SourceRefusedError) else None)
+            self._unavailable(str(error), error.problems if isinstance(error, SourceRefusedError) else None)
         return None
 
     def _opened(self) -> CardStream:
