@@ -41,7 +41,7 @@ THRESHOLD_BLOCKS = 1.5
 """Where blocks are cut from the device's own periods of another length, the lag is a sawtooth as high as a block."""
 
 THRESHOLD_NS = 25_000_000
-"""Lag above the floor at which a block is held, where blocks are shorter than 10 ms: more than usual jitter."""
+"""Lag above the floor at which a block is held, where blocks are shorter than 17 ms: more than usual jitter."""
 
 MOST_DRIFT_NS = FLOOR_NS * 300 // 1_000_000
 """How far a clock off by 300 ppm moves the lag in that time."""
