@@ -1,10 +1,10 @@
 """Zoom: one forward FFT per overlap-save block of a channel, one short inverse FFT per mode.
 
-Block k of a stream covers the samples ``[k hop - edge, k hop + hop + edge)``. Its real FFT is taken once; each
-band takes its own slice of bins, weights it with a smooth band edge, turns it into a quantity whose resonance
-peaks at fn (velocity), and goes back by a short inverse FFT. The outer ``edge`` samples, which the block's ends
-disturb, are dropped; what remains of successive blocks joins without a seam. The blocks lie on a fixed grid
-anchored at sample 0, so the result does not depend on how the samples arrived.
+Block k of a stream is about the samples ``[k hop - lead, k hop - lead + hop)`` and takes ``edge`` more on either
+side. Its real FFT is taken once; each band takes its own slice of bins, weights it with a smooth band edge, turns it
+into a quantity whose resonance peaks at fn (velocity), and goes back by a short inverse FFT. The outer ``edge``
+samples, which the block's ends disturb, are dropped; what remains of successive blocks joins without a seam. The
+blocks lie on a fixed grid, so the result does not depend on how the samples arrived.
 
 A band's baseband stream is
 
@@ -81,11 +81,16 @@ class Zoom:
         Sample rate of the channel.
     requests
         The bands, one for each mode.
+    phase
+        Where sample 0 lies in block 0, as a share of the hop, 0 to below 1: zooms of different phases have their work
+        at different times.
 
     Attributes
     ----------
     fft_length, hop, edge
         Samples in a block, samples by which blocks advance, samples dropped at either end.
+    lead
+        Samples from the begin of block 0 to sample 0.
     bands
         The bands, in the order of the requests.
 
@@ -95,7 +100,7 @@ class Zoom:
         When a search band is not inside 0 .. rate/2, or no band is asked for.
     """
 
-    def __init__(self, rate_hz: int, requests: Sequence[BandRequest]) -> None:
+    def __init__(self, rate_hz: int, requests: Sequence[BandRequest], phase: float = 0.0) -> None:
         if not requests:
             raise ValueError("a zoom needs at least one band")
         for request in requests:
@@ -108,6 +113,7 @@ class Zoom:
         unit = math.lcm(*decimations)
         self.edge = _ceil_to(_EDGE_PRODUCT / min(min(pair) for pair in widths) * rate_hz, unit)
         self.hop, self.edge = _block_shape(rate_hz, self.edge, unit)
+        self.lead: int = int(phase * self.hop) // unit * unit
         self.fft_length = self.hop + 2 * self.edge
         slices = [
             _Slice(rate_hz, self.fft_length, request, width, decimation)
@@ -115,6 +121,18 @@ class Zoom:
         ]
         self._slices = slices
         self.bands = tuple(part.band for part in slices)
+
+    def first_of(self, index: int) -> int:
+        """Return the stream index of the first sample that a block is about."""
+        return index * self.hop - self.lead
+
+    def block_of(self, sample: int) -> int:
+        """Return the number of the block that is about a sample."""
+        return (sample + self.lead) // self.hop
+
+    def known_at(self, sample: int) -> int:
+        """Return the stream index at which all baseband before a sample is known: a block's end and its edge."""
+        return self.first_of(-(-(sample + self.lead) // self.hop)) + self.edge
 
     def blocks(self, samples: NDArray[np.float32], index: int, count: int = 1) -> list[NDArray[np.complex64]]:
         """Return each band's baseband samples of `count` blocks from block `index` on.
@@ -125,7 +143,7 @@ class Zoom:
         Parameters
         ----------
         samples
-            Shape (fft_length + (count - 1) * hop,), the stream's samples from ``index * hop - edge`` on.
+            Shape (fft_length + (count - 1) * hop,), the stream's samples from ``first_of(index) - edge`` on.
         index
             Number of the first block, from 0.
         count
@@ -134,22 +152,25 @@ class Zoom:
         Returns
         -------
         list of complex64 arrays
-            Shape (count * hop / decimation,), for the stream's samples from ``index * hop`` on.
+            Shape (count * hop / decimation,), for the stream's samples from ``first_of(index)`` on.
         """
         rows = np.lib.stride_tricks.sliding_window_view(samples, self.fft_length)[:: self.hop]
         if len(rows) != count:
             raise ValueError(f"{len(samples)} samples hold {len(rows)} blocks; expected {count}")
         spectra = fft.rfft(rows, axis=1)
-        starts = [number * self.hop - self.edge for number in range(index, index + count)]
+        starts = [self.first_of(number) - self.edge for number in range(index, index + count)]
         return [part.take(spectra, starts, self.edge, self.hop) for part in self._slices]
 
     def stream(self, samples: NDArray[np.float32]) -> list[NDArray[np.complex64]]:
         """Return each band's baseband stream of a whole recording, taken as zero before and after it."""
-        count = -(-len(samples) // self.hop)
+        count = -(-(self.lead + len(samples)) // self.hop)
         padded = np.zeros(count * self.hop + 2 * self.edge, dtype=np.float32)
-        padded[self.edge : self.edge + len(samples)] = samples
-        streams = self.blocks(padded, 0, count)
-        return [stream[: len(samples) // band.decimation] for stream, band in zip(streams, self.bands, strict=True)]
+        begin = self.edge + self.lead
+        padded[begin : begin + len(samples)] = samples
+        cuts = [
+            slice(self.lead // band.decimation, (self.lead + len(samples)) // band.decimation) for band in self.bands
+        ]
+        return [stream[cut] for stream, cut in zip(self.blocks(padded, 0, count), cuts, strict=True)]
 
 
 class _Slice:

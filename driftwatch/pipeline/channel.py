@@ -1,12 +1,13 @@
 """One channel: samples in, measurements out.
 
 The channel owns the raw samples and the zoom; each of its modes owns its baseband (`ModeLine`). Blocks of the zoom
-lie on a fixed grid anchored at sample 0. Missing samples are zeros that no usable window may touch; after a gap longer
-than a block the channel begins again at the grid's block that holds the first new sample.
+lie on a fixed grid, another one for each input. Missing samples are zeros that no usable window may touch; after a gap
+longer than a block the channel begins again at the grid's block that holds the first new sample.
 """
 
 from __future__ import annotations
 
+import math
 import uuid
 from collections.abc import Iterator, Sequence
 from typing import TYPE_CHECKING
@@ -23,6 +24,10 @@ from driftwatch.records import Fault, Health, Phase, sample_time_ns
 
 if TYPE_CHECKING:
     from driftwatch.config import ChannelConfig, ModeConfig
+
+PHASE_STEP = (math.sqrt(5.0) - 1.0) / 2.0
+"""From the grid of one input to that of the next, in hops: the golden ratio spreads any number of inputs evenly over
+time, so that they are measured in turn and none waits for all the others."""
 
 MOST_BLOCKS = 16
 """Blocks transformed at a time: side by side they cost less, and memory grows with them."""
@@ -120,8 +125,8 @@ class ChannelLine:
 
     def _begin_at(self, sample: int) -> None:
         """Begin anew with the block of the grid that holds `sample`; what came before counts as zero."""
-        self._block = sample // self._zoom.hop
-        first = self._block * self._zoom.hop
+        self._block = self._zoom.block_of(sample)
+        first = self._zoom.first_of(self._block)
         self._raw: SampleBuffer[np.float32] = SampleBuffer(np.float32, first - self._zoom.edge)
         self._raw.append_zeros(sample - self._raw.end)
         self._position = sample
@@ -132,7 +137,7 @@ class ChannelLine:
         """Zoom every block that is complete, then let the modes measure."""
         zoom, before = self._zoom, self._block
         while (count := self._complete_blocks()) > 0:
-            first = self._block * zoom.hop - zoom.edge
+            first = zoom.first_of(self._block) - zoom.edge
             samples = self._raw.view(first, first + zoom.fft_length + (count - 1) * zoom.hop)
             for line, stream in zip(self._lines, zoom.blocks(samples, self._block, count), strict=True):
                 line.extend(stream)
@@ -143,7 +148,7 @@ class ChannelLine:
         readings = [
             reading for line in self._lines for reading in line.measure(self._raw, self._missing, self._position)
         ]
-        keep = min(self._block * zoom.hop - zoom.edge, *(line.keeps_from for line in self._lines))
+        keep = min(zoom.first_of(self._block) - zoom.edge, *(line.keeps_from for line in self._lines))
         self._raw.forget(keep)
         self._raw.give_back()  # so that a block and the next one are never held at a time
         self._missing.forget(keep - self._look_back)  # impacts look further back for what is quiet
@@ -152,8 +157,9 @@ class ChannelLine:
     def _complete_blocks(self) -> int:
         """Return how many blocks can be zoomed now, at most `MOST_BLOCKS`, and few that lie across the raw's seam."""
         zoom = self._zoom
-        beyond = self._raw.end - zoom.edge - self._block * zoom.hop
-        before_seam = self._raw.seam + zoom.edge - self._block * zoom.hop
+        first = zoom.first_of(self._block)
+        beyond = self._raw.end - zoom.edge - first
+        before_seam = self._raw.seam + zoom.edge - first
         most = -(-before_seam // zoom.hop) if before_seam > 0 else MOST_BLOCKS
         return min(beyond // zoom.hop, most, MOST_BLOCKS)
 
@@ -236,4 +242,4 @@ def zoom_of(channel: ChannelConfig, modes: Sequence[ModeConfig], rate_hz: int) -
     requests = [
         BandRequest((mode.search_hz.low, mode.search_hz.high), mode.window_s, mode.step_s, power) for mode in modes
     ]
-    return Zoom(rate_hz, requests)
+    return Zoom(rate_hz, requests, (channel.input - 1) * PHASE_STEP % 1.0)

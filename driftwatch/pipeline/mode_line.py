@@ -101,9 +101,7 @@ class ModeLine:
 
     def _ready(self, baseband_end: int) -> int:
         """Return the stream index at which baseband up to `baseband_end` and what is looked at behind it is known."""
-        hop = self._zoom.hop // self._band.decimation
-        block = -(-(baseband_end + self._impacts.after) // hop)
-        return block * self._zoom.hop + self._zoom.edge
+        return self._zoom.known_at((baseband_end + self._impacts.after) * self._band.decimation)
 
     # ------------------------------------------------------------------------------------------ measuring
 

@@ -26,11 +26,11 @@ def expected(zoom: Zoom, hz: float, count: int) -> np.ndarray:
     return turned * np.exp(1j * (2 * np.pi * (hz - band.centre_hz) * t + 0.3))
 
 
-@pytest.mark.parametrize("power", [-1, 0, 1])
+@pytest.mark.parametrize(("power", "phase"), [(-1, 0.0), (0, 0.0), (1, 0.0), (0, 0.62), (0, 0.97)])
 @pytest.mark.parametrize(("rate_hz", "search_hz", "window_s", "step_s"), RATES_AND_BANDS)
-def test_a_tone_in_the_band_becomes_its_complex_exponential(rate_hz, search_hz, window_s, step_s, power):
+def test_a_tone_in_the_band_becomes_its_complex_exponential(rate_hz, search_hz, window_s, step_s, power, phase):
     """Tolerance: the 100 dB to which the band edge's impulse response has died away at either end of a block."""
-    zoom = Zoom(rate_hz, [BandRequest(search_hz, window_s, step_s, power)])
+    zoom = Zoom(rate_hz, [BandRequest(search_hz, window_s, step_s, power)], phase)
     hz = search_hz[0] + 0.71 * (search_hz[1] - search_hz[0])
     x = tone(rate_hz, 3 * zoom.hop / rate_hz, hz)
     (y,) = zoom.stream(x)
@@ -83,15 +83,19 @@ def test_bands_share_one_transform_without_changing_each_other():
     share=st.floats(0.01, 0.5),
     window_s=st.floats(0.3, 60.0),
     overlap=st.integers(1, 8),
+    phase=st.floats(0.0, 1.0, exclude_max=True),
 )
 @settings(max_examples=60, deadline=None)
-def test_every_design_is_alias_free_and_on_one_grid(rate_hz, low, share, window_s, overlap):
+def test_every_design_is_alias_free_and_on_one_grid(rate_hz, low, share, window_s, overlap, phase):
     """Block, hop and edge are whole numbers of baseband samples, and the slice holds the band."""
     high = min(low * (1 + share), 0.49 * rate_hz)
-    zoom = Zoom(rate_hz, [BandRequest((low, high), window_s, window_s / overlap)])
+    zoom = Zoom(rate_hz, [BandRequest((low, high), window_s, window_s / overlap)], phase)
     (band,) = zoom.bands
     assert zoom.fft_length == zoom.hop + 2 * zoom.edge
-    assert zoom.hop % band.decimation == zoom.edge % band.decimation == 0
+    assert zoom.hop % band.decimation == zoom.edge % band.decimation == zoom.lead % band.decimation == 0
+    assert zoom.block_of(0) == 0
+    assert zoom.known_at(zoom.first_of(3)) == zoom.first_of(3) + zoom.edge
+    assert zoom.known_at(zoom.first_of(3) + 1) == zoom.first_of(4) + zoom.edge
     assert band.rate_hz >= high - low
     assert abs(band.window * band.decimation - window_s * rate_hz) <= band.decimation
 

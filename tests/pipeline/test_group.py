@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 import pytest
 from driftwatch.config import loads
+from driftwatch.pipeline.channel import zoom_of
 from driftwatch.pipeline.group import ChannelGroup, measured_channels
 from driftwatch.pipeline.reading import Reading
 from driftwatch.pipeline.station import RunHeader, Station
@@ -301,3 +302,19 @@ def test_why_samples_are_missing_changes_no_figure(cause: Fault) -> None:
     blocks = blocks_of([(16_000, 9_000, "missing")], 1_000)
     caused = [replace(block, cause=cause) for block in blocks]
     assert readings_of(caused, CHANNELS) == readings_of(blocks, CHANNELS)
+
+
+TURNS = "\n".join(
+    ['schema = 1\n[station]\nname = "test rig"']
+    + [f'[[channel]]\nname = "c{number}"\ninput = {number}' for number in range(1, 9)]
+    + ['[[mode]]\nname = "rocking"\nchannel = "c1"\nsearch_hz = [560.0, 680.0]\nwindow_s = 1.0']
+)
+
+
+def test_inputs_are_measured_in_turn_so_that_none_waits_for_all_others():
+    """Of eight inputs with the same modes no two have their blocks of the zoom within a twentieth of a hop."""
+    (mode,) = loads(TURNS).mode
+    zooms = [zoom_of(channel, [mode], RATE_HZ) for channel in loads(TURNS).channel]
+    begins = sorted(-zoom.lead % zoom.hop for zoom in zooms)
+    apart = np.diff([*begins, begins[0] + zooms[0].hop])
+    assert np.min(apart) >= zooms[0].hop / 20

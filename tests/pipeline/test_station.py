@@ -184,7 +184,7 @@ def test_a_fault_that_begins_just_when_a_window_is_known_has_its_place_after_it_
     """Known is a window at the end of a block of the zoom; a cut there parts it from the fault."""
     config = loads(CONFIG)
     zoom = zoom_of(config.channel[0], [mode for mode in config.mode if mode.channel == "near"], RATE_HZ)
-    known = list(range(zoom.hop + zoom.edge, SOURCE.length, zoom.hop))
+    known = [zoom.first_of(number) + zoom.edge for number in range(1, zoom.block_of(SOURCE.length))]
     assert len(known) >= 4
     for first in known:
         assert _with_holes([(first, 50, kind)], first) == _with_holes([(first, 50, kind)], SOURCE.length)
