@@ -189,6 +189,9 @@ class Command:
     action: str  # what to do
     target: str | None  # on what
     reason: str | None  # why
+    value: float | None = None  # of a covariate, in `unit`
+    unit: str | None = None
+    outcome: str | None = None  # what came of it, where that was decided before it entered the stream
 
 
 @dataclass(frozen=True, slots=True)
@@ -408,6 +411,7 @@ class Note:
 
     by: str
     text: str
+    handover: bool  # meant for the next shift
 
 
 @dataclass(frozen=True, slots=True)
@@ -436,6 +440,9 @@ class CommandDone:
     action: str
     target: str | None
     reason: str | None
+    value: float | None
+    unit: str | None
+    outcome: str | None  # what came of it; None: not known
 
 
 @dataclass(frozen=True, slots=True)
@@ -522,6 +529,8 @@ class Heartbeat:
     queue_fill: float  # 0 empty to 1 full
     worst_alert: Priority | None  # highest priority that stands
     sequence: int  # of the last record published
+    unsaved: int = 0  # records that could not be stored when they were due, and so were not published: they wait
+    unsaved_s: float = 0.0  # for how long the oldest of them has waited
 
 
 # ---------------------------------------------------------------------------------------------- topics

@@ -78,11 +78,13 @@ PROMISED = {
 ADDED = {
     "baseline": "frequency_hz frequency_std_hz q q_std readings from until",
     "run": "phase samples reason",
+    "note": "handover",
+    "command": "value unit outcome",
     "clock": "source rate_hz deviation_ppm deviation_std_ppm span_s offset_s offset_std_s",
 }
 
 ENVELOPE = "station run origin sequence previous time time_quality"  # and kind and schema, which the wire adds
-HEARTBEAT = "uptime_s sample_age_s queue_fill worst_alert sequence"
+HEARTBEAT = "uptime_s sample_age_s queue_fill worst_alert sequence unsaved unsaved_s"
 
 ENUMERATIONS: dict[type[enum.StrEnum], str] = {
     Origin: "live replay simulated",
@@ -190,7 +192,7 @@ def test_records_cannot_be_changed_and_carry_no_dictionary() -> None:
         assert "__slots__" in vars(body), body
         assert vars(body)["__dataclass_params__"].frozen, body
     with pytest.raises(dataclasses.FrozenInstanceError):
-        Note("ann", "greased").text = "oiled"  # type: ignore[misc]
+        Note("ann", "greased", handover=False).text = "oiled"  # type: ignore[misc]
 
 
 @pytest.mark.parametrize("words", ENUMERATIONS, ids=lambda words: words.__name__)

@@ -138,6 +138,28 @@ class AlertBook:
         records += self._see_no_data(Finding.VIOLATED, time_ns)
         return records + self._look_at_silent_modes(time_ns)
 
+    def acknowledge(self, alert: str, by: str, reason: str, because: int) -> Alert | None:
+        """Note that a person took note of an alert; return the record of it, None where it has nothing to take note of.
+
+        Parameters
+        ----------
+        alert : str
+            Its name, without regard to case.
+        by, reason : str
+            Who, and what to write.
+        because : int
+            Sequence of the command's record.
+
+        Raises
+        ------
+        KeyError
+            When no alert has this name.
+        """
+        for watch in self._watches():
+            if watch.subject.alert.casefold() == alert.casefold():
+                return watch.acknowledge(by, reason, because)
+        raise KeyError(alert)
+
     def reload(self, modes: Sequence[WatchedMode], settings: AlertSettings) -> list[Alert]:
         """Take over other bands and settings of the same modes; return the ends of alerts that are no more.
 

@@ -1,8 +1,9 @@
 """The life of one alert, apart from what drives it: (life, finding) -> (life, event), by stream time alone.
 
 Two layers. `ROWS` is the state model of IEC 62682 / ISA-18.2 as a table (state, event) -> state. Above it `step` turns
-findings (violated, returned, neither, cannot tell) into events, through the on and off delays. The states and events
-that are not used yet have their place: a row more in the table, an event more in `Event`.
+findings (violated, returned, neither, cannot tell) into events, through the on and off delays; what a person does is
+an event at once. The states and events that are not used yet have their place: a row more in the table, an event more
+in `Event`.
 """
 
 from __future__ import annotations
@@ -18,12 +19,16 @@ class Event(StrEnum):
 
     VIOLATED = "violated"  # beyond the limit throughout the on delay
     RETURNED = "returned"  # back inside throughout the off delay
+    ACKNOWLEDGED = "acknowledged"  # a person has taken note of it
 
 
 ROWS: dict[tuple[AlertState, Event], AlertState] = {
     (AlertState.NORMAL, Event.VIOLATED): AlertState.UNACKNOWLEDGED,
     (AlertState.UNACKNOWLEDGED, Event.RETURNED): AlertState.RETURNED_UNACKNOWLEDGED,
     (AlertState.RETURNED_UNACKNOWLEDGED, Event.VIOLATED): AlertState.UNACKNOWLEDGED,
+    (AlertState.UNACKNOWLEDGED, Event.ACKNOWLEDGED): AlertState.ACKNOWLEDGED,
+    (AlertState.RETURNED_UNACKNOWLEDGED, Event.ACKNOWLEDGED): AlertState.NORMAL,
+    (AlertState.ACKNOWLEDGED, Event.RETURNED): AlertState.NORMAL,
 }
 """Where each event leads from each state; what is not listed changes nothing."""
 
@@ -87,6 +92,16 @@ class Life:
 
 
 _EVENT_OF = {Finding.VIOLATED: Event.VIOLATED, Finding.RETURNED: Event.RETURNED}
+
+
+def acknowledge(life: Life) -> Life:
+    """Return the life after a person took note of it; the same one where there is nothing to take note of.
+
+    Whatever is being timed goes on being timed: to take note of an alert is no judgement.
+    """
+    state = after(life.state, Event.ACKNOWLEDGED)
+    return life if state is life.state else replace(life, state=state)
+
 
 UNKNOWN = Life(determinate=False)
 """Where an alert begins of which nothing is known before the first judgement."""

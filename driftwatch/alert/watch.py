@@ -6,7 +6,7 @@ import uuid
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from driftwatch.alert.machine import IDLE, Delays, Event, Finding, Life, step
+from driftwatch.alert.machine import IDLE, Delays, Event, Finding, Life, acknowledge, step
 from driftwatch.records import NS, Alert, AlertState, Condition, Priority
 
 if TYPE_CHECKING:
@@ -109,6 +109,23 @@ class Watch:
         timer = self._life.off if event is Event.RETURNED else self._life.on
         return self._record(seen, before.state, since_ns, words(event, timer.elapsed_ns / NS))
 
+    def acknowledge(self, by: str, reason: str, because: int) -> Alert | None:
+        """Note that a person took note of what stands; return the record of it, None where nothing changes.
+
+        Parameters
+        ----------
+        by, reason : str
+            Who, and what to write.
+        because : int
+            Sequence of the command's record.
+        """
+        previous, since_ns = self._life.state, self._since_ns
+        self._life = acknowledge(self._life)
+        if self._life.state is previous or since_ns is None:
+            return None
+        seen = Seen(Finding.NEITHER, because=(because,))
+        return self._record(seen, previous, since_ns, reason, by)
+
     def withdraw(self, reason: str) -> Alert | None:
         """End the watch; return the record of it where something stands."""
         previous, since_ns = self._life.state, self._since_ns
@@ -126,7 +143,7 @@ class Watch:
             self._since_ns = time_ns
         return self._since_ns
 
-    def _record(self, seen: Seen, previous: AlertState, since_ns: int, reason: str) -> Alert:
+    def _record(self, seen: Seen, previous: AlertState, since_ns: int, reason: str, by: str | None = None) -> Alert:
         subject = self.subject
         told = self._life.determinate
         because = tuple(sorted({*self._begun, *seen.because})) if told else seen.because
@@ -151,7 +168,7 @@ class Watch:
             state=self._life.state,
             previous_state=previous,
             priority=subject.priority,
-            by=None,
+            by=by,
             reason=reason,
             shelved_until_ns=None,
             because=because,

@@ -19,6 +19,7 @@ from driftwatch.daemon.notify import ServiceManager
 from driftwatch.daemon.pruner import Pruner
 from driftwatch.daemon.reload import reload_plan
 from driftwatch.daemon.state import StateLock, recordings_folder, state_folder
+from driftwatch.pipeline.commands import DONE, Action
 from driftwatch.pipeline.station import RunHeader, Station
 from driftwatch.records import Command, Envelope, Heartbeat, Origin
 from driftwatch.store.errors import unreachable
@@ -200,12 +201,14 @@ class Service:
             new = self._config
         if problems:
             self._outlets.told("The configuration was not reloaded: " + "; ".join(problems), True)
-            reason = "refused: " + "; ".join(problems)
+            outcome = "refused: " + "; ".join(problems)
         else:
             self._take_over(new)
             self._outlets.told(f"The configuration was reloaded from {path}", False)
-            reason = f"taken over, sha256 {new.sha256}"
-        command = Command(self._station.now_ns, str(uuid.uuid4()), "signal", "reload", str(path), reason)
+            outcome = f"{DONE}: taken over, sha256 {new.sha256}"
+        command = Command(
+            self._station.now_ns, str(uuid.uuid4()), "signal", Action.RELOAD, str(path), None, outcome=outcome
+        )
         self._keeper.take(self._station.feed(command))
         self._manager.ready(self._status())
 

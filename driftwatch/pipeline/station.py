@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 
 from driftwatch import __version__
 from driftwatch.alert.book import AlertBook, AlertSettings, ConditionSettings, WatchedMode
+from driftwatch.pipeline.commands import DONE, HANDOVER, Action, done_of
 from driftwatch.pipeline.followed import FollowedMode
 from driftwatch.pipeline.gaps import Gaps
 from driftwatch.pipeline.group import ChannelGroup, measured_channels
@@ -22,13 +23,13 @@ from driftwatch.records import (
     Body,
     Clock,
     Command,
-    CommandDone,
     Condition,
     Covariate,
     CovariateValue,
     Envelope,
     Health,
     Measurement,
+    Note,
     Origin,
     Phase,
     Priority,
@@ -133,8 +134,7 @@ class Station:
             case Tick():
                 return list(self._tick(item))
             case Command():
-                done = CommandDone(item.request, item.by, item.action, item.target, item.reason)
-                return [self._stamp(done, item.time_ns)]
+                return list(self._command(item))
             case Covariate():
                 return [self._stamp(CovariateValue(item.name, item.value, item.unit), item.time_ns)]
 
@@ -237,6 +237,38 @@ class Station:
             if (track := mode.tick(tick.time_ns)) is not None:
                 yield from self._judged(track, tick.time_ns)
         yield from (self._stamp(alert, tick.time_ns) for alert in self._alerts.on_tick(tick.time_ns))
+
+    # ------------------------------------------------------------------------------------------ commands
+
+    def _command(self, command: Command) -> Iterator[Envelope]:
+        """Yield the record of a command, and those of what it does."""
+        self.now_ns = max(self.now_ns, command.time_ns)
+        sequence = self._sequence + 1  # of the command's record, which says what came of it
+        outcome, bodies = command.outcome, list[Body]()
+        if outcome is None:
+            outcome, bodies = self._effect(command, sequence)
+        for body in (done_of(command, outcome), *bodies):
+            yield self._stamp(body, command.time_ns)
+
+    def _effect(self, command: Command, sequence: int) -> tuple[str, list[Body]]:
+        """Return what comes of a command, in words, and the bodies of the records that say so."""
+        match command.action:
+            case Action.ACKNOWLEDGE:
+                return self._acknowledge(command, sequence)
+            case Action.NOTE:
+                return DONE, [Note(command.by, command.reason or "", command.target == HANDOVER)]
+            case Action.COVARIATE:
+                return DONE, [CovariateValue(command.target or "", command.value, command.unit or "")]
+        return f"refused: {command.action} is nothing that the pipeline does", []
+
+    def _acknowledge(self, command: Command, sequence: int) -> tuple[str, list[Body]]:
+        name = command.target or ""
+        words = f"acknowledged: {command.reason}" if command.reason else "acknowledged"
+        try:
+            alert = self._alerts.acknowledge(name, command.by, words, sequence)
+        except KeyError:
+            return f"refused: no alert is called {name!r}", []
+        return (DONE, [alert]) if alert is not None else (f"nothing to acknowledge: {name} does not ask for it", [])
 
     # ------------------------------------------------------------------------------------------ records
 

@@ -16,7 +16,7 @@ from driftwatch.records import KINDS, FieldInfo, fields_of
 APPLICATION_ID = 0x64726674
 """Marks a database as ours in the file's own header (``drft``)."""
 
-HEAD = "0002"
+HEAD = "0003"
 """Revision of the schema that this program writes."""
 
 VERSION_TABLE = "alembic_version"
@@ -41,6 +41,17 @@ HEADER = sa.Table(
 """What the records of a run have in common, once, so that rows stay small. A run whose time quality changes has two."""
 
 
+PREDECESSOR = sa.Table(
+    "predecessor",
+    METADATA,
+    sa.Column("id", sa.Integer, primary_key=True),
+    sa.Column("path", sa.Text, nullable=False),  # where it lies now
+    sa.Column("reason", sa.Text, nullable=False),  # why it was set aside
+    sa.Column("at_ns", sa.BigInteger, nullable=False),  # UTC
+)
+"""Databases that stood in this one's place before it and were set aside."""
+
+
 def _type_of(field: FieldInfo) -> sa.types.TypeEngine[Any]:
     if issubclass(field.type, StrEnum) or field.type in (str, tuple):
         return sa.Text()
@@ -60,6 +71,8 @@ def _indexes(kind: str, names: set[str]) -> list[sa.Index]:
         found.append(sa.Index(f"ix_{kind}_about", "header", *about, "time_ns"))
     if kind == "alert":  # the last word on each alert
         found.append(sa.Index("ix_alert_alert", "header", "alert", "sequence"))
+    if kind == "command":  # the same request again
+        found.append(sa.Index("ix_command_request", "request"))
     return found
 
 

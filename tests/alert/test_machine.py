@@ -3,7 +3,18 @@
 from itertools import pairwise
 
 import pytest
-from driftwatch.alert.machine import ROWS, UNKNOWN, Delays, Event, Finding, Life, Timer, after, step
+from driftwatch.alert.machine import (
+    ROWS,
+    UNKNOWN,
+    Delays,
+    Event,
+    Finding,
+    Life,
+    Timer,
+    acknowledge,
+    after,
+    step,
+)
 from driftwatch.records import NS, AlertState
 from hypothesis import given
 from hypothesis import strategies as st
@@ -104,6 +115,30 @@ def test_what_changes_nothing_returns_the_same_life():
     life, _ = step(UNKNOWN, R, 0, DELAYS)
     assert step(life, R, NS, DELAYS)[0] is life
     assert step(life, N, NS, DELAYS)[0] is life
+
+
+def test_an_acknowledged_alert_returns_to_normal_and_fires_anew():
+    """The walk of IEC 62682 / ISA-18.2: unacknowledged, acknowledged, normal; or returned first, then acknowledged."""
+    fired = live([(0, V), (10, V)])[-1][1]
+    acknowledged = acknowledge(fired)
+    assert acknowledged.state is AlertState.ACKNOWLEDGED
+    walk = live([(11, V), (50, V), (51, R), (81, R), (82, V), (92, V)], life=acknowledged)
+    assert [(seconds, event) for seconds, _, event in walk if event] == [(81, Event.RETURNED), (92, Event.VIOLATED)]
+    assert [life.state for _, life, event in walk if event] == [NORMAL, ACTIVE]
+    returned = live([(0, V), (10, V), (11, R), (41, R)])[-1][1]
+    assert acknowledge(returned).state is NORMAL
+
+
+def test_to_acknowledge_judges_nothing():
+    """Timers go on, what cannot be told stays so, and where nothing stands nothing changes."""
+    fired = live([(0, V), (10, V), (20, R), (40, R)])[-1][1]
+    life = acknowledge(fired)
+    assert (life.on, life.off, life.determinate) == (fired.on, fired.off, fired.determinate)
+    assert step(life, R, 50 * NS, DELAYS)[1] is Event.RETURNED
+    for state in (NORMAL, AlertState.ACKNOWLEDGED, AlertState.SHELVED):
+        assert acknowledge(Life(state)) == Life(state)
+    blind = Life(ACTIVE, determinate=False)
+    assert acknowledge(blind) == Life(AlertState.ACKNOWLEDGED, determinate=False)
 
 
 def test_stream_time_that_repeats_or_goes_back_counts_nothing():

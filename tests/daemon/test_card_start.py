@@ -314,7 +314,7 @@ def test_a_second_daemon_on_a_state_folder_is_told_who_runs_there(changed: Run) 
 def test_a_reload_takes_a_new_band_over_and_loses_no_sample(changed: Run, played: Floats) -> None:
     command = changed.rows[changed.before]
     assert (command["by"], command["action"]) == ("signal", "reload")
-    assert command["reason"].startswith("taken over")
+    assert command["outcome"].startswith("done: taken over")
     assert any(is_unacknowledged(row, "b/second/low") for row in changed.rows[changed.before :])
     assert not any(is_unacknowledged(row, "b/second/low") for row in changed.rows[: changed.before])
     assert not any(row["kind"] == "health" for row in changed.rows)
@@ -325,7 +325,7 @@ def test_a_reload_takes_a_new_band_over_and_loses_no_sample(changed: Run, played
 
 def test_a_reload_that_needs_a_restart_is_refused_with_the_key(changed: Run) -> None:
     refusal = [row for row in changed.rows if row["kind"] == "command"][1]
-    assert refusal["reason"].startswith("refused: ")
-    assert "window_s" in refusal["reason"]
+    assert refusal["outcome"].startswith("refused: ")
+    assert "window_s" in refusal["outcome"]
     assert [line for line in changed.errors if "was not reloaded" in line and "window_s" in line]
     assert {row["window_s"] for row in changed.rows if row["kind"] == "measurement"} == {WINDOW_S}

@@ -179,7 +179,7 @@ def test_a_reload_moves_limits_ends_what_is_gone_and_lets_go_on_what_stands(daem
         daemon.write(("moves", 350.0), ("comes", 403.0), ("stays", 400.0), log_level="warning")
         command = daemon.reload()
         assert (command["by"], command["action"], command["target"]) == ("signal", "reload", str(daemon.path))
-        assert command["reason"].startswith("taken over, sha256 ")
+        assert command["outcome"].startswith("done: taken over, sha256 ")
         gone = until(lambda: daemon.of("alert", **GONE), "its end")[0]
         assert gone["occurrence"] == before["goes"]["occurrence"]
         assert gone["reason"] == "no longer watched: the configuration was reloaded"
@@ -205,17 +205,17 @@ def test_refused_reloads_name_each_key_leave_all_as_it_was_and_the_daemon_goes_o
         stands(daemon, "stays")
         daemon.write(("stays", 350.0), search_low=330.0)
         command = daemon.reload()
-        assert command["reason"].startswith("refused: ")
-        assert "search_hz" in command["reason"]
-        assert "330" in command["reason"]
-        assert "340" in command["reason"]
-        assert "low" not in command["reason"].replace("allow", "")
+        assert command["outcome"].startswith("refused: ")
+        assert "search_hz" in command["outcome"]
+        assert "330" in command["outcome"]
+        assert "340" in command["outcome"]
+        assert "low" not in command["outcome"].replace("allow", "")
         daemon.told("The configuration was not reloaded: ")
 
         daemon.path.write_text("schema = 1\n[station\n", encoding="utf-8")
-        assert daemon.reload()["reason"].startswith("refused: ")
+        assert daemon.reload()["outcome"].startswith("refused: ")
         daemon.path.unlink()
-        reason = daemon.reload()["reason"]
+        reason = daemon.reload()["outcome"]
         assert reason.startswith("refused: ")
         assert str(daemon.path) in reason
 
@@ -223,7 +223,7 @@ def test_refused_reloads_name_each_key_leave_all_as_it_was_and_the_daemon_goes_o
         until(lambda: len(daemon.of("measurement")) > measured + 8, "it goes on")
         assert moves(daemon, "stays") == [("normal", "unacknowledged")]  # by the limit of 400 Hz
         daemon.write(("stays", 350.0))
-        assert daemon.reload()["reason"].startswith("taken over")
+        assert daemon.reload()["outcome"].startswith("done: taken over")
         until(lambda: len(moves(daemon, "stays")) == 2, "the alert returns by the new limit")
         daemon.end()
         measured_without_a_hole(daemon)
@@ -234,13 +234,13 @@ def test_a_reload_changes_how_much_is_logged_and_takes_how_long_rows_are_kept(da
     with daemon:
         until(lambda: daemon.of("measurement"), "it measures")
         daemon.write(keep_days=10, log_level="error")
-        assert daemon.reload()["reason"].startswith("taken over")
+        assert daemon.reload()["outcome"].startswith("done: taken over")
         daemon.write(keep_days=10, log_level="error", search_low=330.0)
-        refused = daemon.reload()["reason"]
+        refused = daemon.reload()["outcome"]
         assert refused.startswith("refused: ")
         assert "keep_days" not in refused  # ten days is what it runs on by now
         daemon.write(keep_days=10, log_level="info")
-        assert daemon.reload()["reason"].startswith("taken over")
+        assert daemon.reload()["outcome"].startswith("done: taken over")
         daemon.told("The configuration was reloaded from ")
         daemon.end()
         assert not [line for line in daemon.lines if "was not reloaded" in line]  # the level "error" hid it

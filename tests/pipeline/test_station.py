@@ -24,6 +24,7 @@ from driftwatch.records import (
     Health,
     Measurement,
     Method,
+    Note,
     Origin,
     Phase,
     Run,
@@ -336,9 +337,44 @@ def test_commands_and_covariates_have_their_place_in_the_order():
     source = rig(1.0)
     station = station_for(source)
     station.begin()
-    (command,) = station.feed(Command(START_NS, "r1", "test", "note", None, "trying"))
+    command, note = station.feed(Command(START_NS, "r1", "ann", "note", None, "trying"))
     (covariate,) = station.feed(Covariate(START_NS, "temperature", 21.5, "degC"))
-    assert (command.kind, command.sequence, covariate.kind, covariate.sequence) == ("command", 2, "covariate", 3)
+    assert [(one.kind, one.sequence) for one in (command, note, covariate)] == [
+        ("command", 2),
+        ("note", 3),
+        ("covariate", 4),
+    ]
+    assert note.body == Note("ann", "trying", handover=False)
+
+
+def test_a_command_that_nothing_comes_of_is_written_down_with_the_reason():
+    source = rig(1.0)
+    station = station_for(source)
+    station.begin()
+    (unknown,) = station.feed(Command(START_NS, "r1", "ann", "acknowledge", "near/rocking/none", None))
+    (quiet,) = station.feed(Command(START_NS, "r2", "ann", "acknowledge", "no data", None))
+    (never,) = station.feed(Command(START_NS, "r3", "ann", "dance", None, None))
+    assert unknown.body.outcome == "refused: no alert is called 'near/rocking/none'"
+    assert quiet.body.outcome == "nothing to acknowledge: no data does not ask for it"
+    assert never.body.outcome == "refused: dance is nothing that the pipeline does"
+
+
+def test_an_alert_that_is_acknowledged_tells_by_whom_and_because_of_which_command():
+    source = rig(1.0)
+    station = station_for(source)
+    station.begin()
+    records = [one for second in range(1, 40) for one in station.feed(Tick(START_NS + second * NS))]
+    (fired,) = (one for one in records if one.kind == "alert" and one.body.alert == "no data")
+    assert fired.body.state is AlertState.UNACKNOWLEDGED
+    at_ns = START_NS + 40 * NS
+    command, alert = station.feed(Command(at_ns, "r1", "ann", "acknowledge", "No Data", "cable is being changed"))
+    assert command.body.outcome == "done"
+    assert (alert.body.state, alert.body.previous_state) == (AlertState.ACKNOWLEDGED, AlertState.UNACKNOWLEDGED)
+    assert (alert.body.by, alert.body.because) == ("ann", (command.sequence,))
+    assert alert.body.reason == "acknowledged: cable is being changed"
+    assert (alert.body.occurrence, alert.body.since_ns) == (fired.body.occurrence, fired.body.since_ns)
+    again = station.feed(Command(at_ns, "r2", "ann", "acknowledge", "no data", None))
+    assert [one.kind for one in again] == ["command"]
 
 
 def test_blocks_out_of_order_or_of_an_unknown_source_are_refused():

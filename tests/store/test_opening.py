@@ -61,7 +61,7 @@ def test_a_newer_schema_is_refused_with_the_remedy(tmp_path: Path, opened: Calla
         connection.execute("UPDATE alembic_version SET version_num = '9001'")
         connection.commit()
     before = path.read_bytes()
-    with pytest.raises(OtherSchemaError, match=r"schema 9001, expected at most 0002.*install that version"):
+    with pytest.raises(OtherSchemaError, match=r"schema 9001, expected at most 0003.*install that version"):
         opened(path)
     assert path.read_bytes() == before
 
