@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 import click
 
+from driftwatch.cli.looking import opened_store
 from driftwatch.cli.progress import progress
 from driftwatch.cli.shared import (
     CAUTION,
@@ -27,7 +28,10 @@ from driftwatch.cli.shared import (
 from driftwatch.cli.view import RunView, folded
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from driftwatch.config import Configuration, SourceConfig
+    from driftwatch.records import Command
     from driftwatch.stream.recording import RecordingSource
 
 
@@ -39,17 +43,34 @@ if TYPE_CHECKING:
 )
 @click.option("--store", metavar="URL|PATH", help="Database to write; left out: a new one named after the run.")
 @click.option("--publish", metavar="ENDPOINT", help="Publish on the bus as well, such as tcp://127.0.0.1:5571.")
+@click.option(
+    "--with-commands",
+    "commands",
+    metavar="URL|PATH",
+    help="Do again what people did at the time, by the database of the run that made the recordings.",
+)
+@click.option(
+    "--commands-of", "commanded", metavar="UUID", help="Which run in that database: its UUID or the begin of it."
+)
 @click.option("--json", "as_json", is_flag=True, help="Print every record as one JSON object a line.")
-def command(
-    config: Path, recordings: tuple[Path, ...], start: int | None, store: str | None, publish: str | None, as_json: bool
+def command(  # noqa: PLR0913, RUF100 - one parameter an option
+    config: Path,
+    recordings: tuple[Path, ...],
+    start: int | None,
+    store: str | None,
+    publish: str | None,
+    commands: str | None,
+    commanded: str | None,
+    as_json: bool,
 ) -> None:
     """Send recordings through the same pipeline as `run`, as fast as it can.
 
     Several recordings are one stream, in the order given, with gaps where their dates say so. What `run` recorded is
     laid out exactly, by the side files of its segments: name the folder, or some of its segments; --start is refused
     there. Without --store the rows go into a new database in the current folder, named after the run; the
-    configuration's own store is never touched. Ctrl-C ends it early: what was read by then is stored, and the exit
-    status is 1.
+    configuration's own store is never touched. With --with-commands alerts are acknowledged, and notes and values
+    given, where they were at the time; left out, --commands-of is the last run in that database. Ctrl-C ends it early:
+    what was read by then is stored, and the exit status is 1.
 
     \b
     Example: driftwatch replay config/post-mortem.toml before.wav during.wav --start 2026-03-01T06:00:00Z
@@ -58,8 +79,11 @@ def command(
     source = _opened(configuration, recordings, start)
     for warning in source.warnings:
         click.echo(f"Warning: {warning}", err=True)
+    if commanded is not None and commands is None:
+        raise click.UsageError("got --commands-of without --with-commands; expected the database as well; name it")
+    given = _commands(commands, commanded or "last") if commands is not None else []
     run = str(uuid.uuid4())
-    _replay(configuration, source, run, store or f"run-{run}.db", publish, as_json)
+    _replay(configuration, source, run, (store or f"run-{run}.db", publish), given, as_json)
 
 
 def _opened(configuration: Configuration, recordings: tuple[Path, ...], start_ns: int | None) -> RecordingSource:
@@ -79,6 +103,20 @@ def _opened(configuration: Configuration, recordings: tuple[Path, ...], start_ns
     return source
 
 
+def _commands(store: str, run: str) -> list[Command]:
+    """Return what was asked for in a run, in order."""
+    from driftwatch.pipeline.commands import Action, again
+    from driftwatch.store.queries import Wanted
+
+    with opened_store(store, None) as reader:
+        given = again(reader.records("command", Wanted(run=reader.find_run(run))))
+    if any(one.action == Action.RELOAD for one in given):
+        click.echo(
+            "Note: the configuration was reloaded then; this replay judges by CONFIG from begin to end.", err=True
+        )
+    return given
+
+
 def _stood_for(configuration: Configuration) -> SourceConfig | None:
     """Return the source in whose place the recordings are read, None in a file without; leave where that is open."""
     sources = {one.name: one for channel in configuration.channel if (one := configuration.source_of(channel))}
@@ -93,8 +131,14 @@ def _stood_for(configuration: Configuration) -> SourceConfig | None:
 
 
 def _replay(
-    configuration: Configuration, source: RecordingSource, run: str, store: str, publish: str | None, as_json: bool
+    configuration: Configuration,
+    source: RecordingSource,
+    run: str,
+    where: tuple[str, str | None],
+    commands: Sequence[Command],
+    as_json: bool,
 ) -> None:
+    """Replay into a database, and onto the bus where the second of `where` says so."""
     from driftwatch.bus.publisher import Publisher
     from driftwatch.daemon.keeper import Keeper
     from driftwatch.daemon.replay import replay
@@ -102,6 +146,7 @@ def _replay(
     from driftwatch.records import Origin
     from driftwatch.store.writer import Writer
 
+    store, publish = where
     header = RunHeader(configuration.station.name, run, Origin.REPLAY, source.time_quality)
     station = Station(configuration, header, [source])
     view = RunView(((mode.channel, mode.name) for mode in configuration.mode), every_s=None)
@@ -116,7 +161,12 @@ def _replay(
         bar = opened.enter_context(progress(source.length - first, source.rate_hz, shown=shown))
         with work_failed():
             ended = replay(
-                source, station, Keeper(writer, publisher, output), lambda sample: bar(sample - first), stop.is_set
+                source,
+                station,
+                Keeper(writer, publisher, output),
+                lambda sample: bar(sample - first),
+                stop.is_set,
+                commands,
             )
     output.check()
     if not as_json:

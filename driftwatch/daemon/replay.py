@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 
 from driftwatch.daemon.keeper import Keeper
+from driftwatch.pipeline.commands import with_commands
 from driftwatch.pipeline.station import Station
 from driftwatch.pipeline.ticks import with_ticks
-from driftwatch.records import Block
+from driftwatch.records import Block, Command
 from driftwatch.stream.source import Source, StreamError
 
 BLOCK_S = 120.0
@@ -29,6 +30,7 @@ def replay(
     keeper: Keeper,
     progress: Callable[[int], None] = lambda _: None,
     stopped: Callable[[], bool] = lambda: False,
+    commands: Sequence[Command] = (),
 ) -> bool:
     """Send a source through a station to the end, and commit everything; return whether it was read to its end.
 
@@ -40,6 +42,8 @@ def replay(
         Called with the stream index reached.
     stopped
         Asked between blocks; True ends the replay in good order.
+    commands
+        What was asked for at the time, in order; it is done again where it was done then.
 
     Raises
     ------
@@ -50,7 +54,7 @@ def replay(
     """
     keeper.take(station.begin())
     try:
-        ended = _feed(source, station, keeper, progress, stopped)
+        ended = _feed(source, station, keeper, progress, stopped, commands)
     except StreamError as error:
         keeper.take(station.finish(f"failed: {error}"))
         keeper.flush()
@@ -66,8 +70,10 @@ def _feed(
     keeper: Keeper,
     progress: Callable[[int], None],
     stopped: Callable[[], bool],
+    commands: Sequence[Command],
 ) -> bool:
-    for item in with_ticks(source.blocks(block_frames(source.rate_hz, source.inputs)), source.rate_hz):
+    items = with_ticks(source.blocks(block_frames(source.rate_hz, source.inputs)), source.rate_hz)
+    for item in with_commands(items, commands, source.rate_hz):
         if stopped():
             return False
         keeper.take(station.feed(item))
