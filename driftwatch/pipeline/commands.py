@@ -40,6 +40,21 @@ def done_of(command: Command, outcome: str) -> CommandDone:
     )
 
 
+def acknowledgement(command: Command) -> str:
+    """Return the reason that stands in the record of an alert that a command acknowledges."""
+    return f"acknowledged: {command.reason}" if command.reason else "acknowledged"
+
+
+def nothing_to_acknowledge(alert: str) -> str:
+    """Return the outcome of a command where the alert does not ask to be acknowledged."""
+    return f"nothing to acknowledge: {alert} does not ask for it"
+
+
+def unknown_alert(alert: str) -> str:
+    """Return the outcome of a command where no alert has the name."""
+    return f"refused: no alert is called {alert!r}"
+
+
 def again(envelopes: Iterable[Envelope]) -> list[Command]:
     """Return the commands behind records of commands, in order, to be given once more.
 

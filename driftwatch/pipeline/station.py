@@ -12,7 +12,15 @@ from typing import TYPE_CHECKING
 
 from driftwatch import __version__
 from driftwatch.alert.book import AlertBook, AlertSettings, ConditionSettings, WatchedMode
-from driftwatch.pipeline.commands import DONE, HANDOVER, Action, done_of
+from driftwatch.pipeline.commands import (
+    DONE,
+    HANDOVER,
+    Action,
+    acknowledgement,
+    done_of,
+    nothing_to_acknowledge,
+    unknown_alert,
+)
 from driftwatch.pipeline.followed import FollowedMode
 from driftwatch.pipeline.gaps import Gaps
 from driftwatch.pipeline.group import ChannelGroup, measured_channels
@@ -263,12 +271,11 @@ class Station:
 
     def _acknowledge(self, command: Command, sequence: int) -> tuple[str, list[Body]]:
         name = command.target or ""
-        words = f"acknowledged: {command.reason}" if command.reason else "acknowledged"
         try:
-            alert = self._alerts.acknowledge(name, command.by, words, sequence)
+            alert = self._alerts.acknowledge(name, command.by, acknowledgement(command), sequence)
         except KeyError:
-            return f"refused: no alert is called {name!r}", []
-        return (DONE, [alert]) if alert is not None else (f"nothing to acknowledge: {name} does not ask for it", [])
+            return unknown_alert(name), []
+        return (DONE, [alert]) if alert is not None else (nothing_to_acknowledge(name), [])
 
     # ------------------------------------------------------------------------------------------ records
 
