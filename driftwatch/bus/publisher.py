@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import errno
+import time
 from typing import TYPE_CHECKING
 
 import zmq
@@ -10,7 +11,7 @@ from pydantic_core import PydanticCustomError
 
 from driftwatch.bus.errors import BusError
 from driftwatch.bus.wire import HEARTBEAT, encode_heartbeat, encode_json
-from driftwatch.config import check_endpoint
+from driftwatch.config import BEYOND, LOOPBACK, check_endpoint, is_loopback
 from driftwatch.records import topic_of
 
 if TYPE_CHECKING:
@@ -25,14 +26,17 @@ QUEUED_MESSAGES = 10_000
 LINGER_MS = 500
 """How long closing waits for messages under way."""
 
+REBIND_S = 1.0
+"""How long `Publisher.rebind` tries to take its port again: the old socket frees it a moment after it was closed."""
 
-def checked_endpoint(endpoint: str) -> str:
-    """Return an endpoint unchanged if it may be bound.
+
+def checked_endpoint(endpoint: str, *, guarded: bool = False) -> str:
+    """Return an endpoint unchanged if it may be bound; `guarded`: only whoever has a key comes in.
 
     Raises
     ------
     BusError
-        When it is no ``tcp://HOST:PORT``, or lies beyond loopback.
+        When it is no ``tcp://HOST:PORT``, or lies beyond loopback and is not guarded.
     """
     # A star stands for any free port: good for binding, though not for a configuration that others must know.
     try:
@@ -40,6 +44,8 @@ def checked_endpoint(endpoint: str) -> str:
     except PydanticCustomError as error:
         context = error.context or {}
         raise BusError(f"got {endpoint!r}; expected {context.get('expected')}; {context.get('remedy')}") from None
+    if not guarded and not is_loopback(endpoint):
+        raise BusError(f"got {endpoint!r}; expected {BEYOND}; {LOOPBACK}")
     return endpoint
 
 
@@ -52,6 +58,9 @@ class Publisher:
         ``tcp://127.0.0.1:PORT``; port ``*`` takes a free one, see `endpoint`.
     context
         Of the socket; left out: its own, ended with it.
+    server_key
+        Public and secret key: whoever listens must have a key that the guard of `context` lets in, and what is sent
+        is encrypted. None: whoever reaches the endpoint may listen, so it must lie on loopback.
 
     Raises
     ------
@@ -62,20 +71,55 @@ class Publisher:
     that by ``previous``. Not for use by two threads at once.
     """
 
-    def __init__(self, endpoint: str, context: zmq.Context[zmq.Socket[bytes]] | None = None) -> None:
-        checked_endpoint(endpoint)
-        used = zmq.Context() if context is None else context
-        self._owned = used if context is None else None
-        self._socket = used.socket(zmq.PUB)
-        self._socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
-        self._socket.setsockopt(zmq.LINGER, LINGER_MS)
-        self._socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
+    def __init__(
+        self,
+        endpoint: str,
+        context: zmq.Context[zmq.Socket[bytes]] | None = None,
+        server_key: tuple[bytes, bytes] | None = None,
+    ) -> None:
+        checked_endpoint(endpoint, guarded=server_key is not None)
+        self._context = zmq.Context() if context is None else context
+        self._owned = self._context if context is None else None
+        self._server_key = server_key
+        self._socket = self._new_socket(endpoint)
         try:
             self._socket.bind(endpoint)
         except zmq.ZMQError as error:
             self.close()
             raise _bind_error(endpoint, error) from None
         self.endpoint: str = self._socket.getsockopt_string(zmq.LAST_ENDPOINT)
+
+    def _new_socket(self, endpoint: str) -> zmq.Socket[bytes]:
+        socket = self._context.socket(zmq.PUB)
+        socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
+        socket.setsockopt(zmq.LINGER, LINGER_MS)
+        socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
+        if self._server_key is not None:
+            socket.curve_publickey, socket.curve_secretkey = self._server_key
+            socket.curve_server = True
+            socket.zap_domain = b"publish"
+        return socket
+
+    def rebind(self) -> None:
+        """Send every listener away and let in anew whoever may come: one who was let in before may be so no more.
+
+        Raises
+        ------
+        BusError
+            When the endpoint is not free within `REBIND_S`; what is published then goes nowhere until this succeeds.
+        """
+        self._socket.close(linger=0)
+        self._socket = self._new_socket(self.endpoint)
+        end = time.monotonic() + REBIND_S
+        while True:
+            try:
+                self._socket.bind(self.endpoint)
+            except zmq.ZMQError as error:
+                if error.errno != errno.EADDRINUSE or time.monotonic() > end:
+                    raise _bind_error(self.endpoint, error) from None
+                time.sleep(0.005)
+            else:
+                return
 
     def publish(self, envelopes: Iterable[Envelope]) -> None:
         """Send records in order."""

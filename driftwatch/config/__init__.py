@@ -5,7 +5,7 @@ what a recording's rate and inputs contradict, `check_rate`.
 """
 
 from driftwatch.config.cross import check_rate, is_simulated, rate_of, record_cautions
-from driftwatch.config.endpoints import check_endpoint
+from driftwatch.config.endpoints import BEYOND, LOOPBACK, check_endpoint, is_loopback, unguarded
 from driftwatch.config.errors import ConfigError, Problem
 from driftwatch.config.load import from_document, load, loads
 from driftwatch.config.models import (
@@ -36,6 +36,8 @@ from driftwatch.config.sources import (
 from driftwatch.config.values import UNIT_OF, Profile, Quantity, Span
 
 __all__ = [
+    "BEYOND",
+    "LOOPBACK",
     "UNIT_OF",
     "AlertConfig",
     "BandConfig",
@@ -65,11 +67,13 @@ __all__ = [
     "check_endpoint",
     "check_rate",
     "from_document",
+    "is_loopback",
     "is_simulated",
     "load",
     "loads",
     "rate_of",
     "record_cautions",
     "sensor_remarks",
+    "unguarded",
     "unserved",
 ]
