@@ -7,6 +7,13 @@ from driftwatch.config import is_loopback, loads, unguarded
 
 TEXT = """
 schema = 1
+[[channel]]
+name = "drive end"
+[[mode]]
+name = "rocking"
+channel = "drive end"
+search_hz = [340.0, 460.0]
+window_s = 1.0
 [bus]
 publish = "{publish}"
 control = "{control}"
