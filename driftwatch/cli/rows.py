@@ -13,7 +13,7 @@ from driftwatch.alert.words import track_words, with_std
 from driftwatch.cli.board import SAMPLES_LATE_S, Board, Verdict
 from driftwatch.cli.figures import NONE, duration, known_with_std, moment, with_interval
 from driftwatch.cli.view import elided, folded, health_place, is_back, key_of
-from driftwatch.records import NS, Alert, Health, Track, TrackStatus
+from driftwatch.records import NS, Alert, AlertState, Health, Track, TrackStatus
 
 LARGE_PER_DAY = 0.01
 """Drift, or its uncertainty, as a share of the frequency a day, from which on it is given by the hour."""
@@ -118,6 +118,8 @@ def wrapped(entry: Entry, width: int) -> Entry:
 def alert_text(alert: Alert, now_ns: int) -> str:
     """Return what stands and since when."""
     back = ", back inside, not acknowledged" if is_back(alert) else ""
+    if alert.state is AlertState.ACKNOWLEDGED and alert.by is None:  # the record of the deed itself says by whom
+        back = ", acknowledged"
     since = f"since {moment(alert.since_ns)} ({_span(alert.since_ns, now_ns)})"
     return f"ALERT {alert.priority}{_GAP}{alert.alert}: {_reason(alert)}; {since}{back}"
 

@@ -66,6 +66,8 @@ def alert_line(alert: Alert) -> str:
     words = f"{alert.alert}: {alert.reason or alert.state}"
     if alert.state is alert.previous_state:
         return f"{alert.alert}: can tell again" if alert.determinate else f"CANNOT TELL  {words}"
+    if alert.by is not None:  # a person moved it, no figure did
+        return words
     return f"{'back inside' if is_back(alert) else f'ALERT {alert.priority}'}  {words}"
 
 
@@ -200,7 +202,7 @@ class RunView:
         if new and known and not moved:
             return  # every alert can be told for a first time: no news
         self._raised += fired
-        self._returned += moved and is_back(alert)
+        self._returned += moved and is_back(alert) and alert.by is None
         if fired:
             self._standing[alert.alert] = alert
         elif is_back(alert):

@@ -42,7 +42,7 @@ def done_of(command: Command, outcome: str) -> CommandDone:
 
 def acknowledgement(command: Command) -> str:
     """Return the reason that stands in the record of an alert that a command acknowledges."""
-    return f"acknowledged: {command.reason}" if command.reason else "acknowledged"
+    return f"acknowledged by {command.by}" + (f": {command.reason}" if command.reason else "")
 
 
 def nothing_to_acknowledge(alert: str) -> str:

@@ -104,6 +104,28 @@ def test_alerts_are_counted_as_they_come_and_go(alert: Make, capsys: pytest.Capt
     assert summary[-1] == "  ALERT medium  two: too low"
 
 
+def test_what_a_person_does_is_told_as_such_and_counts_neither_as_raised_nor_as_back(
+    alert: Make, capsys: pytest.CaptureFixture[str]
+) -> None:
+    view = RunView(MODES, None)
+    fired, seen, back = AlertState.UNACKNOWLEDGED, AlertState.ACKNOWLEDGED, AlertState.RETURNED_UNACKNOWLEDGED
+    normal = AlertState.NORMAL
+    words = "acknowledged by ann: belt slips"
+    view.show(
+        [
+            alert(1, alert="one", previous_state=normal, state=fired, reason="too low"),
+            alert(2, alert="one", previous_state=fired, state=seen, by="ann", reason=words),
+            alert(3, alert="two", previous_state=normal, state=fired, reason="too low"),
+            alert(4, alert="two", previous_state=fired, state=back, reason="inside"),
+            alert(5, alert="two", previous_state=back, state=normal, by="ann", reason=words),
+        ]
+    )
+    _, *told = capsys.readouterr().out.splitlines()
+    assert told[1].endswith("  one: acknowledged by ann: belt slips")
+    assert told[4].endswith("  two: acknowledged by ann: belt slips")
+    assert view.summary()[-2:] == ["Alerts: 2 raised, 1 came back, 1 standing.", "  ALERT medium  one: too low"]
+
+
 def test_a_gap_is_told_and_counted(capsys: pytest.CaptureFixture[str]) -> None:
     view = RunView(MODES, None)
     view.show([_wrapped(1, _gap(Phase.BEGIN, 0.0)), _wrapped(31, _gap(Phase.END, 30.0))])

@@ -371,7 +371,7 @@ def test_an_alert_that_is_acknowledged_tells_by_whom_and_because_of_which_comman
     assert command.body.outcome == "done"
     assert (alert.body.state, alert.body.previous_state) == (AlertState.ACKNOWLEDGED, AlertState.UNACKNOWLEDGED)
     assert (alert.body.by, alert.body.because) == ("ann", (command.sequence,))
-    assert alert.body.reason == "acknowledged: cable is being changed"
+    assert alert.body.reason == "acknowledged by ann: cable is being changed"
     assert (alert.body.occurrence, alert.body.since_ns) == (fired.body.occurrence, fired.body.since_ns)
     again = station.feed(Command(at_ns, "r2", "ann", "acknowledge", "no data", None))
     assert [one.kind for one in again] == ["command"]
