@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-from driftwatch.bus.wire import HEARTBEAT
+from driftwatch.bus.wire import HEARTBEAT, is_repeated
 
 if TYPE_CHECKING:
     from collections.abc import Mapping
@@ -42,7 +42,12 @@ class HoleFinder:
         self._of_topic: dict[str, int] = {}
 
     def seen(self, topic: str, message: Mapping[str, Any]) -> Hole | None:
-        """Take in a message and return what was missed before it, if anything was."""
+        """Take in a message and return what was missed before it, if anything was.
+
+        A message that was sent again says nothing of what came between: it is neither a hole nor progress.
+        """
+        if is_repeated(message):
+            return None
         if message["run"] != self._run:  # another run counts anew
             self._run, self._last, self._of_topic = message["run"], None, {}
         sequence: int = message["sequence"]

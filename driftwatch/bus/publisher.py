@@ -10,6 +10,7 @@ import zmq
 from pydantic_core import PydanticCustomError
 
 from driftwatch.bus.errors import BusError
+from driftwatch.bus.last_values import LastValues
 from driftwatch.bus.wire import HEARTBEAT, encode_heartbeat, encode_json
 from driftwatch.config import BEYOND, LOOPBACK, check_endpoint, is_loopback
 from driftwatch.records import topic_of
@@ -20,8 +21,17 @@ if TYPE_CHECKING:
 
     from driftwatch.records import Envelope, Heartbeat
 
+_SUBSCRIBES = b"\x01"
+"""First byte of the message by which a subscriber adds a prefix."""
+
 QUEUED_MESSAGES = 10_000
-"""Messages held for a subscriber that does not read, about 5 MB; what comes then is lost to it, and to it alone."""
+"""Messages held for a subscriber that does not read, about 10 MB; what comes then is lost to it, and to it alone."""
+
+LONGEST_PREFIX = 4096
+"""Bytes of the longest message that a subscriber may send; it has nothing to send but prefixes of topics."""
+
+MOST_READ = 10_000
+"""Subscriptions read at a time, so that no subscriber can keep the publisher from its work."""
 
 LINGER_MS = 500
 """How long closing waits for messages under way."""
@@ -50,7 +60,7 @@ def checked_endpoint(endpoint: str, *, guarded: bool = False) -> str:
 
 
 class Publisher:
-    """A PUB socket; every message is two frames, the topic and one JSON object.
+    """A publishing socket; every message is two frames, the topic and one JSON object.
 
     Parameters
     ----------
@@ -68,7 +78,9 @@ class Publisher:
         When the endpoint is malformed, beyond loopback, or taken.
 
     Sending never waits: a subscriber that does not read loses messages once `QUEUED_MESSAGES` wait for it, and sees
-    that by ``previous``. Not for use by two threads at once.
+    that by ``previous``. Whoever subscribes gets the last message of each topic asked for again, marked as repeated,
+    within `REPEAT_EVERY_S` and the time to the next call of `serve`, `publish` or `heartbeat`. Not for use by two
+    threads at once.
     """
 
     def __init__(
@@ -81,6 +93,7 @@ class Publisher:
         self._context = zmq.Context() if context is None else context
         self._owned = self._context if context is None else None
         self._server_key = server_key
+        self._last = LastValues()
         self._socket = self._new_socket(endpoint)
         try:
             self._socket.bind(endpoint)
@@ -90,18 +103,24 @@ class Publisher:
         self.endpoint: str = self._socket.getsockopt_string(zmq.LAST_ENDPOINT)
 
     def _new_socket(self, endpoint: str) -> zmq.Socket[bytes]:
-        socket = self._context.socket(zmq.PUB)
+        socket = self._context.socket(zmq.XPUB)
+        socket.setsockopt(zmq.XPUB_VERBOSE, 1)  # tell of a subscription that somebody else has as well
         socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
+        socket.setsockopt(zmq.MAXMSGSIZE, LONGEST_PREFIX)
         socket.setsockopt(zmq.LINGER, LINGER_MS)
         socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
         if self._server_key is not None:
             socket.curve_publickey, socket.curve_secretkey = self._server_key
             socket.curve_server = True
             socket.zap_domain = b"publish"
+            socket.setsockopt(zmq.ZAP_ENFORCE_DOMAIN, 1)  # where there is no guard nobody is let in
         return socket
 
     def rebind(self) -> None:
         """Send every listener away and let in anew whoever may come: one who was let in before may be so no more.
+
+        Listeners come back by themselves. What is published before they are back is lost to them, and they see that
+        by the numbers; last values they get again.
 
         Raises
         ------
@@ -123,12 +142,28 @@ class Publisher:
 
     def publish(self, envelopes: Iterable[Envelope]) -> None:
         """Send records in order."""
+        self.serve()
         for envelope in envelopes:
-            self._socket.send_multipart((topic_of(envelope.body).encode(), encode_json(envelope)))
+            topic, message = topic_of(envelope.body).encode(), encode_json(envelope)
+            self._socket.send_multipart((topic, message))
+            self._last.sent(topic, message)
 
     def heartbeat(self, heartbeat: Heartbeat) -> None:
         """Send a sign of life."""
+        self.serve()
         self._socket.send_multipart((HEARTBEAT.encode(), encode_heartbeat(heartbeat)))
+
+    def serve(self) -> None:
+        """Send last values to whoever has subscribed since; to be called every second at least, at any time."""
+        for _ in range(MOST_READ):
+            try:
+                request = self._socket.recv(zmq.NOBLOCK)
+            except zmq.Again:
+                break
+            if request[:1] == _SUBSCRIBES:
+                self._last.want(request[1:])
+        for frames in self._last.due(time.monotonic()):
+            self._socket.send_multipart(frames)
 
     def close(self) -> None:
         """Free the endpoint, after `LINGER_MS` at most."""

@@ -40,6 +40,9 @@ HEADER_FIELDS = ("kind", "schema", "station", "run", "origin", "sequence", "prev
 HEARTBEAT = "heartbeat"
 """Kind and topic of the message that says every second that the daemon lives."""
 
+REPEATED = "repeated"
+"""Last member of a message that was sent before and is sent again for somebody who came late; always true."""
+
 _encode_finite = json.JSONEncoder(
     ensure_ascii=False, check_circular=False, allow_nan=False, separators=(",", ":")
 ).encode
@@ -160,11 +163,21 @@ def encode_heartbeat(heartbeat: Heartbeat) -> bytes:
     return _as_json(message)
 
 
+def as_repeated(line: bytes) -> bytes:
+    """Return the line of a message with the mark that it was sent before."""
+    return line[:-1] + f',"{REPEATED}":true}}'.encode()
+
+
+def is_repeated(message: Mapping[str, Any]) -> bool:
+    """Whether a message was sent before: it tells a last value, and nothing of what has happened since."""
+    return message.get(REPEATED) is True
+
+
 def decode(message: Mapping[str, Any]) -> Envelope:
     """Return the envelope of an object, the inverse of `encode`.
 
-    Fields that this version does not know are passed over. A null where a number must stand (it was not finite)
-    becomes NaN.
+    Members that this version does not know, and the mark `REPEATED`, are passed over. A null where a number must stand
+    (it was not finite) becomes NaN.
 
     Raises
     ------

@@ -236,6 +236,8 @@ class LiveRun:
     def _housekeeping(self, now: float) -> None:
         """Commit what is due; every second give a sign of life and take a step of what can wait."""
         self._keeper.flush_due(now)
+        if self._company.publisher is not None:
+            self._company.publisher.serve()
         if now < self._beat_due:
             return
         self._beat_due = max(self._beat_due + HEARTBEAT_S, now)  # late ones do not shift those that follow

@@ -74,3 +74,23 @@ def test_a_new_run_counts_anew() -> None:
 def test_a_hole_reads_as_a_sentence() -> None:
     assert str(Hole(None, 4, 9)) == "missed records after sequence 4 and before 9"
     assert str(Hole("alert/a", 4, 9)) == "missed records on alert/a after sequence 4 and before 9"
+
+
+@given(st.lists(st.sampled_from([*TOPICS, "heartbeat"]), min_size=1, max_size=40), st.data())
+def test_what_is_sent_again_is_neither_a_hole_nor_progress(topics: list[str], data: Any) -> None:
+    messages = _messages(topics)
+    records = [(topic, message) for topic, message in messages if _is_record(message)]
+    mixed = []
+    for message in messages:
+        mixed.append(message)
+        if records and data.draw(st.booleans()):
+            topic, record = data.draw(st.sampled_from(records))
+            mixed.append((topic, record | {"repeated": True}))
+    for everything in (True, False):
+        finder, plain = HoleFinder(everything=everything), HoleFinder(everything=everything)
+        kept = [pair for place, pair in enumerate(messages) if place % 3 != 1]  # some are missed
+        holes = [plain.seen(topic, message) for topic, message in kept]
+        found = [
+            finder.seen(topic, message) for topic, message in mixed if (topic, message) in kept or "repeated" in message
+        ]
+        assert [hole for hole in found if hole] == [hole for hole in holes if hole]

@@ -10,7 +10,15 @@ from typing import Any
 
 import pytest
 from driftwatch.bus.errors import WireError
-from driftwatch.bus.wire import decode, decode_heartbeat, encode, encode_heartbeat, encode_json
+from driftwatch.bus.wire import (
+    as_repeated,
+    decode,
+    decode_heartbeat,
+    encode,
+    encode_heartbeat,
+    encode_json,
+    is_repeated,
+)
 from driftwatch.records import Envelope, Heartbeat, Level, Measurement, Method, Origin, Priority, TimeQuality
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -32,8 +40,8 @@ PROMISED = {
     "tone": "channel frequency_hz frequency_std_hz level level_unit order",
     "level": "channel window_s rms peak crest kurtosis band_hz unit",
     "covariate": "name value unit",
-    "note": "by text",
-    "command": "request by action target reason",
+    "note": "by text handover",
+    "command": "request by action target reason value unit outcome",
 }
 """The fields of each kind as the published description of the wire lists them."""
 
@@ -135,3 +143,15 @@ def test_a_figure_keeps_all_its_digits(measurement: Make) -> None:
     body = decode(_strict(encode_json(measurement(1, q=0.1 + 0.2, method=Method.RINGDOWN)))).body
     assert isinstance(body, Measurement)
     assert body.q == 0.1 + 0.2
+
+
+@given(data=st.data())
+def test_a_repeated_record_differs_by_its_last_member_and_comes_back_equal(
+    any_envelope: st.SearchStrategy[Envelope], data: st.DataObject
+) -> None:
+    envelope = data.draw(any_envelope)
+    message = _strict(as_repeated(encode_json(envelope)))
+    assert list(message.items()) == [*encode(envelope).items(), ("repeated", True)]
+    assert is_repeated(message)
+    assert not is_repeated(encode(envelope))
+    assert decode(message) == envelope
