@@ -5,14 +5,18 @@ from __future__ import annotations
 import json
 import time
 from collections.abc import Callable, Iterator
+from contextlib import ExitStack
+from typing import Any
 
 import pytest
 import zmq
 from driftwatch.bus import publisher as module
 from driftwatch.bus.errors import BusError
+from driftwatch.bus.last_values import REPEAT_EVERY_S
 from driftwatch.bus.publisher import Publisher
 from driftwatch.bus.wire import encode
-from driftwatch.records import Envelope, Heartbeat, Origin, TimeQuality
+from driftwatch.records import Envelope, Heartbeat, Origin, TimeQuality, topic_of
+from zmq.auth.thread import ThreadAuthenticator
 
 Make = Callable[..., Envelope]
 ANY_PORT = "tcp://127.0.0.1:*"
@@ -93,6 +97,143 @@ def test_closing_ends_in_time_with_a_subscriber_that_does_not_read(
         begin = time.monotonic()
         publisher.close()
         assert time.monotonic() - begin < 5.0  # linger is 0.5 s; the rest is for a busy computer
+
+
+# ---------------------------------------------------------------------------------------------- last values
+
+
+def _late(
+    context: zmq.Context[zmq.Socket[bytes]], publisher: Publisher, prefix: str, keys: Keys | None = None
+) -> zmq.Socket[bytes]:
+    socket = context.socket(zmq.SUB)
+    socket.setsockopt(zmq.LINGER, 0)
+    socket.setsockopt(zmq.RCVTIMEO, 20_000)
+    if keys is not None:
+        socket.curve_serverkey, (socket.curve_publickey, socket.curve_secretkey) = keys
+    socket.setsockopt_string(zmq.SUBSCRIBE, prefix)
+    socket.connect(publisher.endpoint)
+    return socket
+
+
+def _serve_until_it_hears(publisher: Publisher, socket: zmq.Socket[bytes], deadline_s: float = 20.0) -> None:
+    deadline = time.monotonic() + deadline_s
+    while not socket.poll(20):
+        publisher.serve()
+        assert time.monotonic() < deadline
+
+
+def _received(socket: zmq.Socket[bytes], count: int) -> list[tuple[bytes, dict[str, Any]]]:
+    return [(frames[0], json.loads(frames[1])) for frames in (socket.recv_multipart() for _ in range(count))]
+
+
+def test_whoever_comes_late_gets_the_last_value_of_all_it_asks_for_each_in_its_turn(
+    context: zmq.Context[zmq.Socket[bytes]], measurement: Make, alert: Make
+) -> None:
+    sent = [measurement(1), alert(2), measurement(3, mode="sliding"), measurement(4), alert(5, alert="a/b/c")]
+    with Publisher(ANY_PORT, context) as publisher:
+        publisher.publish(sent)
+        for prefix, expected in (("measurement/", [3, 4]), ("", [2, 3, 4, 5]), ("alert/a", [5]), ("alert/a", [5])):
+            with _late(context, publisher, prefix) as socket:  # the last one asks for the same as the one before it
+                _serve_until_it_hears(publisher, socket)
+                found = _received(socket, len(expected))
+                assert [message["sequence"] for _, message in found] == expected
+                for topic, message in found:
+                    envelope = sent[message["sequence"] - 1]
+                    assert topic == topic_of(envelope.body).encode()
+                    assert message == encode(envelope) | {"repeated": True}
+
+
+def test_a_hundred_subscribers_at_once_cost_the_first_few_repeats(
+    context: zmq.Context[zmq.Socket[bytes]], measurement: Make
+) -> None:
+    """At most one round a second: those who come together share it."""
+    with Publisher(ANY_PORT, context) as publisher, ExitStack() as stack:
+        publisher.publish([measurement(1)])
+        first = stack.enter_context(_late(context, publisher, "measurement/"))
+        _serve_until_it_hears(publisher, first)
+        began = time.monotonic()
+        for number in range(100):
+            other = stack.enter_context(_late(context, publisher, "measurement/"[: number % 12]))
+        _serve_until_it_hears(publisher, other)
+        rounds = 1 + (time.monotonic() - began) / REPEAT_EVERY_S
+        heard = 0
+        while first.poll(300):
+            first.recv_multipart()
+            heard += 1
+        assert 2 <= heard <= rounds + 1
+
+
+def test_what_is_no_subscription_is_passed_over(context: zmq.Context[zmq.Socket[bytes]], measurement: Make) -> None:
+    with Publisher(ANY_PORT, context) as publisher, context.socket(zmq.XSUB) as hostile:
+        hostile.setsockopt(zmq.LINGER, 0)
+        hostile.connect(publisher.endpoint)
+        publisher.publish([measurement(1)])
+        for junk in (b"", b"hello", b"\x02", b"\x01" + b"x" * 3000, b"\x00never", b"\xff" * 4000):
+            hostile.send(junk)
+        hostile.send(b"\x01measurement/")
+        _serve_until_it_hears(publisher, hostile)
+        assert _received(hostile, 1)[0][1]["repeated"] is True
+
+
+# ---------------------------------------------------------------------------------------------- keys, anew
+
+Keys = tuple[bytes, tuple[bytes, bytes]]
+
+
+def test_with_a_server_key_only_whoever_the_guard_lets_in_hears(
+    context: zmq.Context[zmq.Socket[bytes]], measurement: Make
+) -> None:
+    server, friend, stranger = zmq.curve_keypair(), zmq.curve_keypair(), zmq.curve_keypair()
+    guard = ThreadAuthenticator(context)
+    guard.start()
+    try:
+        guard.configure_curve_callback("publish", credentials_provider=Only(friend[0]))
+        with Publisher(ANY_PORT, context, server) as publisher:
+            publisher.publish([measurement(1)])
+            with (
+                _late(context, publisher, "", (server[0], friend)) as known,
+                _late(context, publisher, "", (server[0], stranger)) as unknown,
+                _late(context, publisher, "") as keyless,
+            ):
+                _serve_until_it_hears(publisher, known)
+                assert not unknown.poll(500)
+                assert not keyless.poll(100)
+    finally:
+        guard.stop()
+
+
+def test_without_a_guard_a_server_key_lets_nobody_in(
+    context: zmq.Context[zmq.Socket[bytes]], measurement: Make
+) -> None:
+    server, anyone = zmq.curve_keypair(), zmq.curve_keypair()
+    with Publisher(ANY_PORT, context, server) as publisher:
+        publisher.publish([measurement(1)])
+        with _late(context, publisher, "", (server[0], anyone)) as socket:
+            for _ in range(20):
+                publisher.serve()
+                assert not socket.poll(50)
+
+
+class Only:
+    def __init__(self, public: bytes) -> None:
+        self._public = public
+
+    def callback(self, _domain: str, key: bytes) -> bool:
+        return key == self._public
+
+
+def test_bound_anew_everybody_comes_in_again_and_gets_last_values(
+    context: zmq.Context[zmq.Socket[bytes]], measurement: Make
+) -> None:
+    with Publisher(ANY_PORT, context) as publisher, _late(context, publisher, "") as socket:
+        publisher.publish([measurement(1)])
+        _serve_until_it_hears(publisher, socket)
+        socket.recv_multipart()
+        endpoint = publisher.endpoint
+        publisher.rebind()
+        assert publisher.endpoint == endpoint
+        _serve_until_it_hears(publisher, socket)
+        assert _received(socket, 1)[0][1] == encode(measurement(1)) | {"repeated": True}
 
 
 def test_a_taken_port_is_an_error_that_says_what_to_do() -> None:
