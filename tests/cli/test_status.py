@@ -81,10 +81,54 @@ def _changed(bench: Any, config: Path, *pairs: tuple[str, str]) -> None:
 # ---------------------------------------------------------------------------------------------- real daemons
 
 
-def test_a_quiet_daemon_is_told_as_one_and_its_end_and_hang_too(bench: Any, objects: Any) -> None:
-    config = bench.config(pace=2.0)
+def test_a_daemon_is_quiet_has_an_alert_hangs_and_ends_and_is_told_so_each_time(
+    bench: Any, objects: Any, measurement: Make
+) -> None:
+    config = bench.config(pace=4.0)
     _changed(bench, config, (MOVING, "400.0"))
     daemon = bench.start("run", config, "--json", stdout=subprocess.DEVNULL)
+    run = _is_quiet(bench, config, objects)
+    same = ["--store", "state/bench.db", "--publish", bench.endpoint]  # without the configuration
+    assert bench.run("status", *same).returncode == 0
+
+    with Writer.open(bench.folder / "other.db", "line 3") as writer:
+        writer.write([measurement(1)])
+    other = _status("--config", config, "--store", "other.db")  # a store that is not the daemon's
+    assert other.exit_code == 4
+    assert "CANNOT TELL  other.db holds nothing of run " in other.stdout
+    missing = _status("--config", config, "--store", "none.db")
+    assert missing.exit_code == 4
+    assert "none.db does not exist" in missing.stdout
+
+    _changed(bench, config, ("low = 390.0", "low = 405.0"))  # the band is now left
+    daemon.send_signal(signal.SIGHUP)
+    done = _until(3, "--config", config)
+    assert done.stdout.startswith("ALERT  bench: 1 alert stands")
+    assert "\nALERT high  drive end/rocking/bolts: frequency " in done.stdout
+    (told,) = objects(_status("--config", config, "--json").stdout)
+    assert [one["alert"] for one in told["alerts"]] == ["drive end/rocking/bolts"]
+    assert told["alerts"][0]["priority"] == "high"
+
+    daemon.send_signal(signal.SIGSTOP)
+    hung = _status("--config", config, "--wait", "0.5")
+    daemon.send_signal(signal.SIGCONT)
+    assert hung.exit_code == 1
+    assert hung.stdout.startswith(f"UNREACHABLE  no sign of life from {bench.endpoint};")
+    assert "it has no end: cut off, or hanging" in " ".join(hung.stdout.split())
+
+    daemon.send_signal(signal.SIGINT)
+    assert daemon.wait(timeout=20) == 0
+    ended = _status("--config", config, "--wait", "0.2")
+    assert ended.exit_code == 1
+    words = " ".join(ended.stdout.split())
+    assert "last heard at 20" in words
+    assert f"from run {run[:8]} of bench (simulated); it ended: stopped" in words
+    (last,) = objects(_status("--config", config, "--wait", "0.2", "--json").stdout)
+    assert (last["verdict"], last["exit"], last["run"], last["uptime_s"]) == ("unreachable", 1, run, None)
+
+
+def _is_quiet(bench: Any, config: Path, objects: Any) -> str:
+    """Wait until the daemon of a configuration is quiet; hold what is told of it to that; return its run."""
     done = _until(0, "--config", config)
     first, second, *_ = done.stdout.splitlines()
     assert first == "QUIET  bench: no alert stands, 1 of 1 mode tracked"
@@ -97,60 +141,7 @@ def test_a_quiet_daemon_is_told_as_one_and_its_end_and_hang_too(bench: Any, obje
     assert (mode["channel"], mode["mode"], mode["status"]) == ("drive end", "rocking", "tracking")
     assert abs(mode["frequency_hz"] - 400.0) < 6 * mode["frequency_std_hz"]  # of a Gaussian beyond: 2e-9
     assert 0.0 <= mode["last_seen_s"] < DEADLINE_S
-    same = ["--store", "state/bench.db", "--publish", bench.endpoint]  # without the configuration
-    assert bench.run("status", *same).returncode == 0
-
-    daemon.send_signal(signal.SIGSTOP)
-    hung = _status("--config", config, "--wait", "1.5")
-    daemon.send_signal(signal.SIGCONT)
-    assert hung.exit_code == 1
-    assert hung.stdout.startswith(f"UNREACHABLE  no sign of life from {bench.endpoint};")
-    assert "it has no end: cut off, or hanging" in " ".join(hung.stdout.split())
-
-    daemon.send_signal(signal.SIGINT)
-    assert daemon.wait(timeout=20) == 0
-    ended = _status("--config", config, "--wait", "0.2")
-    assert ended.exit_code == 1
-    words = " ".join(ended.stdout.split())
-    assert "last heard at 20" in words
-    assert f"from run {told['run'][:8]} of bench (simulated); it ended: stopped" in words
-    (last,) = objects(_status("--config", config, "--wait", "0.2", "--json").stdout)
-    assert (last["verdict"], last["exit"], last["run"], last["uptime_s"]) == ("unreachable", 1, told["run"], None)
-
-
-def test_an_alert_that_stands_is_told_first(bench: Any, objects: Any) -> None:
-    config = bench.config(pace=4.0)
-    bench.start("run", config, "--json", stdout=subprocess.DEVNULL)
-    done = _until(3, "--config", config)
-    assert done.stdout.startswith("ALERT  bench: 1 alert stands")
-    assert "\nALERT high  drive end/rocking/bolts: frequency " in done.stdout
-    (told,) = objects(_status("--config", config, "--json").stdout)
-    assert [one["alert"] for one in told["alerts"]] == ["drive end/rocking/bolts"]
-    assert told["alerts"][0]["priority"] == "high"
-
-
-def test_a_mode_that_is_not_found_cannot_be_told(bench: Any) -> None:
-    config = bench.config()
-    _changed(bench, config, ("level = 0.05", "level = 1e-9"))
-    bench.start("run", config, "--json", stdout=subprocess.DEVNULL)
-    done = _until(4, "--config", config)
-    assert done.stdout.startswith("CANNOT TELL  bench: no alert stands, 0 of 1 mode tracked")
-    assert "drive end / rocking" in done.stdout
-
-
-def test_a_store_that_is_not_the_daemons_cannot_tell(bench: Any, measurement: Make) -> None:
-    with Writer.open(bench.folder / "other.db", "line 3") as writer:
-        writer.write([measurement(1)])
-    config = bench.config()
-    bench.start("run", config, "--json", stdout=subprocess.DEVNULL)
-    end = time.monotonic() + DEADLINE_S
-    while "holds nothing" not in (done := _status("--config", config, "--store", "other.db")).stdout:
-        assert time.monotonic() < end, done.output
-    assert done.exit_code == 4
-    assert "CANNOT TELL  other.db holds nothing of run " in done.stdout
-    missing = _status("--config", config, "--store", "none.db")
-    assert missing.exit_code == 4
-    assert "none.db does not exist" in missing.stdout
+    return str(told["run"])
 
 
 def test_nothing_anywhere_is_unreachable_and_nonsense_starts_nothing(bench: Any) -> None:
@@ -274,8 +265,9 @@ def test_of_a_crafted_store_the_worst_comes_first_with_the_last_word_on_everythi
         ([_track(1, "a")], _beat(sequence=2), "driftwatch.db ends at record 1, the daemon has published 2"),
         ([_track(1, "a"), _fault(2, "open")], _beat(), "FAULT  the input: device"),
         ([_fault(1, "open"), _fault(2, "open", Phase.END)], _beat(), "no mode has a reading yet"),
+        ([_track(1, "a", TrackStatus.LOST)], _beat(), "no alert stands, 0 of 1 mode tracked"),
     ],
-    ids=["late samples", "no sample", "an old copy", "a fault", "no mode"],
+    ids=["late samples", "no sample", "an old copy", "a fault", "no mode", "a mode that is not found"],
 )
 def test_what_cannot_be_told_says_why(crafted: Any, records: list[Envelope], beat: Heartbeat, says: str) -> None:
     done = crafted(records, beat)
