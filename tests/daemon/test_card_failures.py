@@ -78,7 +78,7 @@ def outcome(request: pytest.FixtureRequest, outcomes: dict[str, Future[Outcome]]
 # ---------------------------------------------------------------------------------------------- what must come of it
 
 
-def test_no_process_outlives_a_main_process_that_was_killed(
+def test_no_process_outlives_a_main_process_that_was_killed_and_the_next_one_takes_over(
     outcomes: dict[str, Future[Outcome]], rig: Rig, wav: Path, tmp_path: Path
 ) -> None:
     """The rows told until then are whole, and all of them are in the store. (The scenarios go on meanwhile.)"""
@@ -98,6 +98,9 @@ def test_no_process_outlives_a_main_process_that_was_killed(
         kept = stored(config)
         assert kept == list(range(1, len(kept) + 1))
         assert len(kept) >= len(numbers)
+    with Daemon(config, rig.env) as daemon:  # neither lock nor port is left taken
+        assert daemon.rows[daemon.row(lambda row: row["kind"] == "run")]["phase"] == "begin"
+        assert daemon.stop() == 0
 
 
 def test_samples_flow_within_5_s_of_the_end_of_the_cause(outcome: Outcome) -> None:

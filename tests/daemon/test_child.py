@@ -126,7 +126,7 @@ time.sleep(600)
 
 
 def test_when_the_parent_is_killed_its_children_end_by_themselves() -> None:
-    """While they wait for an order; with one, `test_service` tries it."""
+    """While they wait for an order; with one, `test_card_failures` tries it."""
     parent = subprocess.Popen([sys.executable, "-c", _PARENT], stdout=subprocess.PIPE, text=True)
     assert parent.stdout is not None
     pids = [int(word) for word in parent.stdout.readline().split()]

@@ -1,4 +1,4 @@
-"""A real ``driftwatch run`` on a simulated source: what a reload takes over, and that no process outlives it."""
+"""A real ``driftwatch run`` on a simulated source: what a reload takes over, and what it refuses."""
 
 from __future__ import annotations
 
@@ -9,12 +9,12 @@ import socket
 import subprocess
 import sys
 import threading
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any, Self
 
 import pytest
-from ordered import LONG_S, children, is_running, killed_at_the_end, until
+from ordered import LONG_S, until
 
 Row = dict[str, Any]
 
@@ -36,7 +36,7 @@ kind = "simulated"
 rate_hz = 2000
 seed = 5
 noise = 0.002
-pace = 2.0
+pace = 4.0
 [[source.resonator]]
 frequency_hz = 380.0
 q = 30.0
@@ -131,10 +131,6 @@ class Daemon:
         until(lambda: len(self.of("command")) > before, "the reload is a record")
         return self.of("command")[before]
 
-    def told(self, words: str) -> str:
-        """Return the line of standard error that holds the words, once it is there."""
-        return str(until(lambda: [line for line in list(self.lines) if words in line], f"it says {words!r}")[0])
-
     def end(self) -> None:
         """End it in good order, and hold all that it printed to be whole."""
         self.process.send_signal(signal.SIGTERM)
@@ -145,8 +141,8 @@ class Daemon:
 
 
 @pytest.fixture
-def daemon(tmp_path: Path) -> Iterator[Daemon]:
-    yield Daemon(tmp_path)
+def daemon(tmp_path: Path) -> Daemon:
+    return Daemon(tmp_path)
 
 
 def stands(daemon: Daemon, name: str) -> Row:
@@ -171,25 +167,15 @@ def measured_without_a_hole(daemon: Daemon) -> None:
 GONE = {"alert": "drive end/rocking/goes", "previous_state": "unacknowledged", "state": "normal"}
 
 
-def test_a_reload_moves_limits_ends_what_is_gone_and_lets_go_on_what_stands(daemon: Daemon) -> None:
-    """Three bands that are all left: one gets another limit, one goes, one stays; a fourth comes. No sample is lost."""
+def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_sample(daemon: Daemon) -> None:
+    """One daemon, reloaded again and again: it starts only once, which is what takes long."""
     daemon.write(("stays", 400.0), ("goes", 401.0), ("moves", 402.0))
     with daemon:
-        before = {name: stands(daemon, name) for name in ("stays", "goes", "moves")}
-        daemon.write(("moves", 350.0), ("comes", 403.0), ("stays", 400.0), log_level="warning")
-        command = daemon.reload()
-        assert (command["by"], command["action"], command["target"]) == ("signal", "reload", str(daemon.path))
-        assert command["outcome"].startswith("done: taken over, sha256 ")
-        gone = until(lambda: daemon.of("alert", **GONE), "its end")[0]
-        assert gone["occurrence"] == before["goes"]["occurrence"]
-        assert gone["reason"] == "no longer watched: the configuration was reloaded"
-        moved = until(
-            lambda: daemon.of("alert", alert="drive end/rocking/moves", previous_state="unacknowledged"), "it returns"
-        )[0]
-        assert moved["occurrence"] == before["moves"]["occurrence"]  # the same life, by the new limit
-        assert (moved["low"], moved["state"]) == (350.0, "returned_unacknowledged")
-        came = stands(daemon, "comes")
-        assert came["sequence"] > command["sequence"]
+        limits_move_and_what_is_gone_ends(daemon)
+        what_is_refused_leaves_all_as_it_was(daemon)
+        it_changes_how_much_is_logged_and_how_long_rows_are_kept(daemon)
+        measured = len(daemon.of("measurement"))
+        until(lambda: len(daemon.of("measurement")) > measured + 8, "it goes on")
         daemon.end()
         assert moves(daemon, "stays") == [("normal", "unacknowledged")]
         assert moves(daemon, "goes") == [("normal", "unacknowledged"), ("unacknowledged", "normal")]
@@ -198,66 +184,59 @@ def test_a_reload_moves_limits_ends_what_is_gone_and_lets_go_on_what_stands(daem
         measured_without_a_hole(daemon)
 
 
-def test_refused_reloads_name_each_key_leave_all_as_it_was_and_the_daemon_goes_on(daemon: Daemon) -> None:
+def lines_with(daemon: Daemon, words: str) -> list[str]:
+    """Return what was said so far on standard error and holds the words."""
+    return [line for line in list(daemon.lines) if words in line]
+
+
+def limits_move_and_what_is_gone_ends(daemon: Daemon) -> None:
+    """Three bands that are all left: one gets another limit, one goes, one stays; a fourth comes."""
+    before = {name: stands(daemon, name) for name in ("stays", "goes", "moves")}
+    daemon.write(("moves", 350.0), ("comes", 403.0), ("stays", 400.0))
+    command = daemon.reload()
+    assert (command["by"], command["action"], command["target"]) == ("signal", "reload", str(daemon.path))
+    assert command["outcome"].startswith("done: taken over, sha256 ")
+    gone = until(lambda: daemon.of("alert", **GONE), "its end")[0]
+    assert gone["occurrence"] == before["goes"]["occurrence"]
+    assert gone["reason"] == "no longer watched: the configuration was reloaded"
+    moved = until(
+        lambda: daemon.of("alert", alert="drive end/rocking/moves", previous_state="unacknowledged"), "it returns"
+    )[0]
+    assert moved["occurrence"] == before["moves"]["occurrence"]  # the same life, by the new limit
+    assert (moved["low"], moved["state"]) == (350.0, "returned_unacknowledged")
+    assert stands(daemon, "comes")["sequence"] > command["sequence"]
+
+
+def what_is_refused_leaves_all_as_it_was(daemon: Daemon) -> None:
     """First a key that needs a restart, beside one that does not; then a file that is none; then one that is gone."""
-    daemon.write(("stays", 400.0))
-    with daemon:
-        stands(daemon, "stays")
-        daemon.write(("stays", 350.0), search_low=330.0)
-        command = daemon.reload()
-        assert command["outcome"].startswith("refused: ")
-        assert "search_hz" in command["outcome"]
-        assert "330" in command["outcome"]
-        assert "340" in command["outcome"]
-        assert "low" not in command["outcome"].replace("allow", "")
-        daemon.told("The configuration was not reloaded: ")
-
-        daemon.path.write_text("schema = 1\n[station\n", encoding="utf-8")
-        assert daemon.reload()["outcome"].startswith("refused: ")
-        daemon.path.unlink()
-        reason = daemon.reload()["outcome"]
-        assert reason.startswith("refused: ")
-        assert str(daemon.path) in reason
-
-        measured = len(daemon.of("measurement"))
-        until(lambda: len(daemon.of("measurement")) > measured + 8, "it goes on")
-        assert moves(daemon, "stays") == [("normal", "unacknowledged")]  # by the limit of 400 Hz
-        daemon.write(("stays", 350.0))
-        assert daemon.reload()["outcome"].startswith("done: taken over")
-        until(lambda: len(moves(daemon, "stays")) == 2, "the alert returns by the new limit")
-        daemon.end()
-        measured_without_a_hole(daemon)
+    daemon.write(("stays", 350.0), search_low=330.0)
+    outcome = daemon.reload()["outcome"]
+    assert outcome.startswith("refused: ")
+    assert "search_hz" in outcome
+    assert "330" in outcome
+    assert "340" in outcome
+    assert "low" not in outcome.replace("allow", "")
+    daemon.path.write_text("schema = 1\n[station\n", encoding="utf-8")
+    assert daemon.reload()["outcome"].startswith("refused: ")
+    daemon.path.unlink()
+    reason = daemon.reload()["outcome"]
+    assert reason.startswith("refused: ")
+    assert str(daemon.path) in reason
 
 
-def test_a_reload_changes_how_much_is_logged_and_takes_how_long_rows_are_kept(daemon: Daemon) -> None:
-    daemon.write()
-    with daemon:
-        until(lambda: daemon.of("measurement"), "it measures")
-        daemon.write(keep_days=10, log_level="error")
-        assert daemon.reload()["outcome"].startswith("done: taken over")
-        daemon.write(keep_days=10, log_level="error", search_low=330.0)
-        refused = daemon.reload()["outcome"]
-        assert refused.startswith("refused: ")
-        assert "keep_days" not in refused  # ten days is what it runs on by now
-        daemon.write(keep_days=10, log_level="info")
-        assert daemon.reload()["outcome"].startswith("done: taken over")
-        daemon.told("The configuration was reloaded from ")
-        daemon.end()
-        assert not [line for line in daemon.lines if "was not reloaded" in line]  # the level "error" hid it
-
-
-def test_when_the_daemon_is_killed_its_children_end_by_themselves_and_the_next_one_takes_over(daemon: Daemon) -> None:
-    daemon.write(("stays", 400.0))
-    with daemon:
-        until(lambda: len(daemon.of("measurement")) > 2, "it measures")
-        pids = [pid for role in ("capture", "tracker", "recorder") for pid in children(daemon.process.pid, role)]
-        with killed_at_the_end(pids):
-            assert len(pids) == 3
-            daemon.process.kill()
-            until(lambda: not any(is_running(pid) for pid in pids), "the children have ended")
-        daemon.process.wait()
-    with daemon:  # neither lock nor port is left taken
-        count = len(daemon.of("run"))
-        until(lambda: len(daemon.of("run")) > count, "it runs again")
-        daemon.process.send_signal(signal.SIGTERM)
-        assert daemon.process.wait(LONG_S) == 0
+def it_changes_how_much_is_logged_and_how_long_rows_are_kept(daemon: Daemon) -> None:
+    bands = (("stays", 400.0), ("comes", 403.0))
+    until(
+        lambda: len(lines_with(daemon, "The configuration was not reloaded: ")) == 3,
+        "all that was refused before is said",
+    )
+    daemon.write(*bands, keep_days=10, log_level="error")
+    assert daemon.reload()["outcome"].startswith("done: taken over")
+    daemon.write(*bands, keep_days=10, log_level="error", search_low=330.0)
+    refused = daemon.reload()["outcome"]
+    assert refused.startswith("refused: ")
+    assert "keep_days" not in refused  # ten days is what it runs on by now
+    daemon.write(*bands, keep_days=10, log_level="info")
+    assert daemon.reload()["outcome"].startswith("done: taken over")
+    until(lambda: len(lines_with(daemon, "The configuration was reloaded from ")) == 2, "it says so")
+    assert len(lines_with(daemon, "was not reloaded")) == 3  # the level "error" hid the fourth
