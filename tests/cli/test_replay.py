@@ -18,6 +18,7 @@ import numpy as np
 import pytest
 import soundfile
 import zmq
+from driftwatch.bus.wire import is_repeated
 from driftwatch.daemon.replay import BLOCK_S
 from driftwatch.records import parse_time
 from driftwatch.store.queries import Reader
@@ -118,7 +119,9 @@ def test_a_replay_publishes_where_it_is_told_to(bench: Any, folder: Path, object
         printed = objects(first + process.stdout.read())
         heard = []
         while subscriber.poll(500):
-            heard.append(json.loads(subscriber.recv_multipart()[1]))
+            message = json.loads(subscriber.recv_multipart()[1])
+            if not is_repeated(message):
+                heard.append(message)
     assert process.wait(timeout=20) == 0
     assert len(heard) > len(printed) // 2  # what was stalled had gone before
     assert heard == printed[-len(heard) :]

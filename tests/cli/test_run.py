@@ -16,7 +16,7 @@ from typing import Any
 
 import pytest
 import zmq
-from driftwatch.bus.wire import encode_json
+from driftwatch.bus.wire import encode_json, is_repeated
 from driftwatch.records import KINDS
 from driftwatch.store.queries import Reader
 
@@ -65,7 +65,9 @@ def _listening(endpoint: str) -> Iterator[list[Message]]:
             while subscriber.poll(200) or not done.is_set():
                 if subscriber.poll(0):
                     topic, raw = subscriber.recv_multipart()
-                    heard.append((topic.decode(), json.loads(raw)))
+                    message = json.loads(raw)
+                    if not is_repeated(message):
+                        heard.append((topic.decode(), message))
 
     thread = threading.Thread(target=listen)
     thread.start()
