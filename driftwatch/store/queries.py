@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -114,6 +115,21 @@ class Reader:
                 rows = connection.execution_options(yield_per=_CHUNK).execute(selected)
                 for row in rows:
                     yield form.envelope(keys[row[0]], row)
+        except sa.exc.DBAPIError as error:
+            raise unreachable(self.path, error) from error
+
+    @contextmanager
+    def reading(self) -> Iterator[Connection]:
+        """Give a connection in a transaction: all that is read by it comes from one instant.
+
+        Raises
+        ------
+        StoreError
+            When the database cannot be read.
+        """
+        try:
+            with self._engine.begin() as connection:
+                yield connection
         except sa.exc.DBAPIError as error:
             raise unreachable(self.path, error) from error
 
