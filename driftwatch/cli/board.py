@@ -96,6 +96,8 @@ class Board:
                     self.clock = clock
                 case Run(phase=Phase.BEGIN):
                     self.begun_ns = envelope.time_ns
+                case Run(phase=Phase.CONTINUE):  # in another database, which does not know the begin
+                    self.begun_ns = self.begun_ns or envelope.time_ns
                 case Run() as run:
                     self.ended = run
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import dataclasses
 import time
 import uuid
+from typing import Any
 
 from driftwatch.records import Fault, Health, Phase
 
@@ -32,12 +33,12 @@ class Incidents:
         self._open[key] = body
         return body
 
-    def end(self, key: str) -> Health | None:
-        """Return the end of a fault; None where it does not stand."""
+    def end(self, key: str, **changes: Any) -> Health | None:
+        """Return the end of a fault, with these fields changed; None where it does not stand."""
         known = self._open.pop(key, None)
         if known is None:
             return None
-        return dataclasses.replace(known, phase=Phase.END, seconds=self._seconds(key))
+        return dataclasses.replace(known, phase=Phase.END, seconds=self._seconds(key), **changes)
 
     def end_all(self) -> list[Health]:
         """Return the ends of all faults that stand."""

@@ -8,11 +8,13 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Protocol, Self
 
-from driftwatch.daemon.crew import Crew, FaultBegins, FaultEnds
+from driftwatch.daemon.crew import LOOK_S, Crew, FaultBegins, FaultEnds
 from driftwatch.daemon.incidents import Incidents, clock_step
+from driftwatch.daemon.keeper import ANEW
 from driftwatch.daemon.messages import ClockSeen, ClockStepped
 from driftwatch.pipeline.ticks import Ticker
 from driftwatch.records import NS, Fault, Heartbeat, Stretch, Tick, sample_time_ns
+from driftwatch.store.errors import CommitError
 from driftwatch.stream.clock import STEP_NS
 from driftwatch.stream.instants import instant_ns
 from driftwatch.stream.source import SourceFailedError
@@ -42,6 +44,9 @@ RECORDER_END_S = 5.0
 STALL_S = 30.0
 """Time without progress of the workers, although there is work, after which time goes on without them, seconds."""
 
+STORE_END_S = 5.0
+"""How long the end waits for a store that takes no rows, seconds."""
+
 TICK_LAG_NS = NS // 2
 """So far ticks stay behind: samples that come again were taken a moment before they arrive."""
 
@@ -64,6 +69,7 @@ class Company:
     beat: Callable[[Heartbeat], None] = lambda _: None  # each heartbeat, published or not
     ending: Callable[[], object] = lambda: None  # called when the end begins
     observer: Observer | None = None
+    asked: Callable[[], None] = lambda: None  # at every turn: what was asked for enters the stream
 
 
 class LiveRun:
@@ -150,6 +156,7 @@ class LiveRun:
             self._hear(news)
         self._take_blocks()
         self._tick_while_silent()
+        self._company.asked()
         self._housekeeping(time.monotonic())
         self._crew.wait()
 
@@ -167,6 +174,18 @@ class LiveRun:
                 self._company.told(f"The computer's clock was set by {news.seconds:+.3f} s", True)
                 for body in clock_step(self.station.now_ns, news.seconds, STEP_NS / NS):
                     self._note(body)
+
+    def _hear_store(self) -> None:
+        """Tell what became of the store, in the log and as records, which wait like all others."""
+        for news in self._keeper.news():
+            self._company.told(news.words, news.fault is not None)
+            if news.goes_on:
+                self._take([self.station.again()])
+            if news.fault is not None:
+                self._note(self._incidents.begin(news.key, news.fault, self.station.now_ns, news.words))
+            if news.fault is None or news.key == ANEW:
+                lost = {"value": float(news.lost), "unit": "records"} if news.fault is None else {}
+                self._note(self._incidents.end(news.key, detail=news.words, **lost))
 
     def _note(self, body: Health | Clock | None) -> None:
         if body is not None:
@@ -265,6 +284,7 @@ class LiveRun:
     def _heartbeat(self, now: float) -> Heartbeat:
         header = self.station.header
         age = None if self._sample_came_ns is None else max(0.0, (instant_ns() - self._sample_came_ns) / NS)
+        unsaved, unsaved_s = self._keeper.unsaved(now)
         return Heartbeat(
             station=header.station,
             run=header.run,
@@ -276,6 +296,8 @@ class LiveRun:
             queue_fill=self._ring.fill,
             worst_alert=self.station.worst_alert,
             sequence=self._keeper.last_sequence,
+            unsaved=unsaved,
+            unsaved_s=unsaved_s,
         )
 
     # ------------------------------------------------------------------------------------------ the end
@@ -301,12 +323,36 @@ class LiveRun:
         reason = self._reason or "the source ended"
         if failure is not None:
             reason = f"failed: {failure}"
-        for body in self._incidents.end_all():
-            self._note(body)
+        self._await_store()
+        if self._keeper.trouble is None:  # else this is no end of it
+            for body in self._incidents.end_all():
+                self._note(body)
         silent_until_ns = self._now_ns() if self.is_silent else None
         self._take(self.station.finish(reason, self._crew.last_readings, silent_until_ns))
-        self._keeper.flush()
-        self._crew.end(RECORDER_END_S)
+        try:
+            self._store_rest()
+        finally:
+            self._crew.end(RECORDER_END_S)
         if failure is not None:
             raise SourceFailedError(failure)
         return reason
+
+    def _await_store(self) -> None:
+        """Give a store that takes no rows a while to come back, with signs of life."""
+        until = time.monotonic() + STORE_END_S
+        while self._keeper.trouble is not None and (now := time.monotonic()) < until:
+            self._housekeeping(now)
+            time.sleep(LOOK_S)
+
+    def _store_rest(self) -> None:
+        """Store the last records, or tell how many are lost with the end.
+
+        Raises
+        ------
+        CommitError
+            When they cannot be stored.
+        """
+        try:
+            self._keeper.flush()
+        except CommitError as error:
+            raise CommitError(f"{error}; {self._keeper.waiting} records of this run were not stored") from error

@@ -13,6 +13,9 @@ if TYPE_CHECKING:
 LOOK_EVERY_S = 3600.0
 """Time from finding nothing old to looking again, seconds."""
 
+AFTER_FAILURE_S = 60.0
+"""Time from a step that failed to the next one, seconds."""
+
 
 class Pruner:
     """Takes a step of pruning when it is called and one is due.
@@ -39,7 +42,11 @@ class Pruner:
         Raises
         ------
         CommitError
-            When the store fails.
+            When the store fails; the next step is due in a while.
         """
-        if now_monotonic >= self._due and not prune(self._writer, self.keep_days, self._utc_ns()):
-            self._due = now_monotonic + LOOK_EVERY_S
+        if now_monotonic < self._due:
+            return
+        self._due = now_monotonic + AFTER_FAILURE_S
+        self._due = (
+            now_monotonic if prune(self._writer, self.keep_days, self._utc_ns()) else now_monotonic + LOOK_EVERY_S
+        )

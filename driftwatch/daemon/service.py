@@ -6,12 +6,12 @@ import time
 import uuid
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import ExitStack, contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Self, TypeVar
 
-from driftwatch.bus.publisher import Publisher
 from driftwatch.config import ConfigError, Configuration, SoundcardSourceConfig, is_simulated, load, unserved
+from driftwatch.daemon.door import Door
 from driftwatch.daemon.feed import CardFeed, PacedFeed
 from driftwatch.daemon.keeper import Keeper
 from driftwatch.daemon.live import Company, LiveRun, Observer
@@ -22,7 +22,7 @@ from driftwatch.daemon.state import StateLock, recordings_folder, state_folder
 from driftwatch.pipeline.commands import DONE, Action
 from driftwatch.pipeline.station import RunHeader, Station
 from driftwatch.records import Command, Envelope, Heartbeat, Origin
-from driftwatch.store.errors import unreachable
+from driftwatch.store.errors import CommitError, Trouble, unreachable
 from driftwatch.store.location import database_path
 from driftwatch.store.lock import HolderLock, WriterLock
 from driftwatch.store.opening import refuse_foreign, refuse_read_only
@@ -115,7 +115,8 @@ class Service:
         """
         config, outlets, enter = self._config, self._outlets, self._opened.enter_context
         station = config.station.name
-        publisher = enter(Publisher(self._publish or config.bus.publish))
+        self._door = enter(Door(state_folder(config, self._store), outlets.told))
+        publisher = enter(self._door.publisher(self._publish or config.bus.publish))
         self._manager = enter(ServiceManager())
         for warning in self._manager.warnings:
             outlets.told(warning, True)
@@ -130,18 +131,23 @@ class Service:
         self._locked(StateLock(folder, station))
         if config.record.keep_hours > 0 and recordings != folder:
             self._locked(StateLock(recordings, station))  # another state folder may have the same one for these
-        company = Company(publisher, self._chore, outlets.told, outlets.beat, self._manager.stopping, outlets.observer)
+        self._opened.callback(self._door.shut)  # while the folder is still ours
+        self._door.open(config.bus.control, publisher.endpoint)
+        company = Company(
+            publisher, self._chore, outlets.told, self._beat, self._ending, outlets.observer, asked=self._obey
+        )
         self._live = enter(LiveRun(config, self._run, self._feed, company, recordings))
         source = self._live.start(stop)
         if source is None:
             return False
-        writer = enter(Writer.open(url, station, lock=lock))
+        writer = enter(Writer.open_live(path, lock))
         self._is_open = True
         outlets.opened(writer.path, publisher.endpoint)
         header = RunHeader(station, self._run, origin_of(config), source.time_quality)
         self._station = Station(config, header, [source])
-        self._keeper = Keeper(writer, publisher, outlets.show)
+        self._keeper = Keeper(writer, publisher, self._shown, is_patient=True)
         self._pruner = Pruner(writer, config.store.keep_days, time.time_ns)
+        self._door.serve(writer.path)
         return True
 
     def _locked(self, lock: _Lock) -> _Lock:
@@ -157,18 +163,29 @@ class Service:
         SourceFailedError, CommitError
             As `LiveRun.until`.
         """
-        self._hangup = hangup
+        self._stop, self._hangup = stop, hangup
         self._is_ready = False
         return self._live.until(stop, self._station, self._keeper)
 
     # ------------------------------------------------------------------------------------------ once a second
 
     def _chore(self, now: float) -> None:
-        self._pruner.step(now)
+        self._prune(now)
         self._notify(now)
+        self._door.chore()
         if self._hangup is not None and self._hangup.is_set():
             self._hangup.clear()
-            self._reload()
+            self._reload(Command(self._station.now_ns, str(uuid.uuid4()), "signal", Action.RELOAD, None, None))
+
+    def _prune(self, now: float) -> None:
+        """Take a step of pruning, where the store is well; damage that it finds is the keeper's to deal with."""
+        if self._keeper.trouble is not None:
+            return
+        try:
+            self._pruner.step(now)
+        except CommitError as error:
+            if error.trouble in (Trouble.DAMAGED, Trouble.REFUSED):
+                self._keeper.failed(error, now)
 
     def _notify(self, now: float) -> None:
         live, manager = self._live, self._manager
@@ -184,13 +201,48 @@ class Service:
     def _status(self) -> str:
         if self._live.is_silent:
             return f"Waiting for the samples of {self._feed.name}"
+        if (trouble := self._keeper.trouble) is not None:
+            unsaved, seconds = self._keeper.unsaved(time.monotonic())
+            return f"Measuring; the store takes no rows ({trouble}): {unsaved} records wait since {seconds:.0f} s"
         worst = self._station.worst_alert
         return f"Measuring; {f'an alert of {worst} priority stands' if worst else 'no alert stands'}"
 
+    # ------------------------------------------------------------------------------------------ the door
+
+    def _obey(self) -> None:
+        self._door.desk.carry_out(lambda: self._station.now_ns, self._do)
+
+    def _do(self, command: Command) -> Sequence[Envelope]:
+        """Do what a command asks for and keep its records; return them."""
+        if command.action == Action.RELOAD:
+            return self._reload(command)
+        if command.action == Action.STOP:
+            self._stop.set()
+            self._outlets.told(f"{command.by} stops the daemon: {command.reason or 'no reason given'}", False)
+            command = replace(command, outcome=DONE)
+        return self._fed(command)
+
+    def _fed(self, command: Command) -> Sequence[Envelope]:
+        envelopes = self._station.feed(command)
+        self._keeper.take(envelopes)
+        return envelopes
+
+    def _shown(self, group: Sequence[Envelope]) -> None:
+        self._door.desk.stored(group)
+        self._outlets.show(group)
+
+    def _beat(self, heartbeat: Heartbeat) -> None:
+        self._door.stands(heartbeat, self._station.standing)
+        self._outlets.beat(heartbeat)
+
+    def _ending(self) -> None:
+        self._door.desk.end()
+        self._manager.stopping()
+
     # ------------------------------------------------------------------------------------------ reload
 
-    def _reload(self) -> None:
-        """Take over a changed configuration, or tell why that needs a restart; either way it is a record."""
+    def _reload(self, command: Command) -> Sequence[Envelope]:
+        """Take over a changed configuration, or tell why that needs a restart; return the record of it."""
         self._manager.reloading()
         path = self._config.path
         try:
@@ -206,11 +258,8 @@ class Service:
             self._take_over(new)
             self._outlets.told(f"The configuration was reloaded from {path}", False)
             outcome = f"{DONE}: taken over, sha256 {new.sha256}"
-        command = Command(
-            self._station.now_ns, str(uuid.uuid4()), "signal", Action.RELOAD, str(path), None, outcome=outcome
-        )
-        self._keeper.take(self._station.feed(command))
         self._manager.ready(self._status())
+        return self._fed(replace(command, target=str(path), outcome=outcome))
 
     def _take_over(self, new: Configuration) -> None:
         self._keeper.take(self._station.reload(new))

@@ -52,6 +52,7 @@ from driftwatch.records import (
 )
 
 if TYPE_CHECKING:
+    from driftwatch.alert.book import Standing
     from driftwatch.config import Configuration
     from driftwatch.stream.source import SourceFacts
 
@@ -106,6 +107,11 @@ class Station:
         return self._sequence
 
     @property
+    def standing(self) -> Standing:
+        """Return what stands now, worst first."""
+        return self._alerts.standing()
+
+    @property
     def worst_alert(self) -> Priority | None:
         """Highest priority among the alerts that stand."""
         return self._alerts.standing().worst
@@ -126,6 +132,10 @@ class Station:
     def begin(self) -> list[Envelope]:
         """Return the record that opens the run."""
         return [self._stamp(self._run_record(Phase.BEGIN, None), self.now_ns)]
+
+    def again(self) -> Envelope:
+        """Return the record that opens the run in another database, where its begin is not."""
+        return self._stamp(self._run_record(Phase.CONTINUE, None), self.now_ns)
 
     def feed(self, item: StreamItem) -> list[Envelope]:
         """Take one item in and return the records that it makes known, in order.

@@ -15,10 +15,25 @@ here, once, and nowhere else.
 
 from __future__ import annotations
 
+import os
+import sqlite3
+from enum import StrEnum
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from pathlib import Path
+
+
+class Trouble(StrEnum):
+    """Why a database takes no rows."""
+
+    LOCKED = "locked"  # another program holds it
+    FULL = "full"  # the disk has no room
+    READ_ONLY = "read-only"  # it may not be written to
+    DISK = "disk"  # the disk does not answer as it should
+    GONE = "gone"  # the file is not at its place any more
+    DAMAGED = "damaged"  # what is in the file is no whole database
+    REFUSED = "refused"  # the rows themselves: trying again would not help
 
 
 class StoreError(Exception):
@@ -42,12 +57,40 @@ class StoreUnreachableError(StoreError):
 
 
 class CommitError(StoreError):
-    """A transaction failed and was rolled back as a whole."""
+    """A transaction failed and was rolled back as a whole.
 
+    Attributes
+    ----------
+    trouble
+        What kept it from being stored.
+    """
+
+    def __init__(self, message: str, trouble: Trouble = Trouble.REFUSED) -> None:
+        super().__init__(message)
+        self.trouble = trouble
+
+
+_TROUBLES = {
+    sqlite3.SQLITE_BUSY: Trouble.LOCKED,
+    sqlite3.SQLITE_LOCKED: Trouble.LOCKED,
+    sqlite3.SQLITE_PROTOCOL: Trouble.LOCKED,
+    sqlite3.SQLITE_FULL: Trouble.FULL,
+    sqlite3.SQLITE_READONLY: Trouble.READ_ONLY,
+    sqlite3.SQLITE_PERM: Trouble.READ_ONLY,
+    sqlite3.SQLITE_IOERR: Trouble.DISK,
+    sqlite3.SQLITE_CANTOPEN: Trouble.DISK,
+    sqlite3.SQLITE_CORRUPT: Trouble.DAMAGED,
+    sqlite3.SQLITE_NOTADB: Trouble.DAMAGED,
+}
+"""By primary result code of the library; what is not named is about the rows, not about the file."""
+
+_LEAST_FREE = 1 << 16
+"""Bytes; where a disk has no more, an error of reading or writing means that it is full."""
 
 _REMEDIES = {
     "locked": "another program holds the database; end it, or wait until it is done",
     "full": "the disk is full; free some space or lower [store] keep_days",
+    "no room": "free some space or lower [store] keep_days",
     "readonly": "the database may only be read; change the permissions of the file and its folder",
     "malformed": "the database is damaged; keep the file, save what `driftwatch readings` still shows, start a new one",
     "not a database": "the file is no SQLite database; name another file",
@@ -65,10 +108,31 @@ def remedy_of(error: object) -> str:
     return next((remedy for sign, remedy in _REMEDIES.items() if sign in words), "see the message for the cause")
 
 
+def trouble_of(path: Path, error: object) -> Trouble:
+    """Return why an error of the database library kept rows from being stored."""
+    cause = getattr(error, "orig", None) or error
+    trouble = _TROUBLES.get(getattr(cause, "sqlite_errorcode", -1) & 0xFF, Trouble.REFUSED)
+    return _on_disk(path, trouble) if trouble in (Trouble.DISK, Trouble.READ_ONLY) else trouble
+
+
+def _on_disk(path: Path, trouble: Trouble) -> Trouble:
+    """Return what is behind an error of writing, as far as the file system tells."""
+    try:
+        disk = os.statvfs(path.parent)
+    except OSError:
+        return trouble
+    if disk.f_flag & os.ST_RDONLY:
+        return Trouble.READ_ONLY
+    return Trouble.FULL if trouble is Trouble.DISK and disk.f_bavail * disk.f_frsize < _LEAST_FREE else trouble
+
+
 def commit_failed(path: Path, error: Exception) -> CommitError:
     """Translate an error of the database library that ended a transaction."""
     cause = getattr(error, "orig", None) or error
-    return CommitError(f"{path}: nothing of this group was stored: {cause}; {remedy_of(cause)}")
+    trouble = trouble_of(path, cause)
+    said = f"{cause}, no room is left" if trouble is Trouble.FULL and "full" not in str(cause) else str(cause)
+    remedy = remedy_of(said) if trouble is not Trouble.READ_ONLY else _REMEDIES["readonly"]
+    return CommitError(f"{path}: nothing of this group was stored: {said}; {remedy}", trouble)
 
 
 def unreachable(path: Path, error: Exception) -> StoreUnreachableError:
@@ -81,5 +145,6 @@ def file_gone(path: Path) -> CommitError:
     """Return the error about a database that was taken away from under its writer."""
     return CommitError(
         f"{path}: nothing of this group was stored: the file was deleted, moved or replaced since it was opened; "
-        "expected to find it where it was; leave it there while it is written to, and begin again"
+        "expected to find it where it was; leave it there while it is written to, and begin again",
+        Trouble.GONE,
     )

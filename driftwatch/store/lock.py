@@ -45,7 +45,12 @@ class HolderLock:
 
     def __init__(self, path: Path, station: str) -> None:
         self._path = path
+        self._station = station
         self._is_new = not path.exists()
+        self._take()
+
+    def _take(self) -> None:
+        path = self._path
         self._file = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
         try:
             fcntl.flock(self._file, fcntl.LOCK_EX | fcntl.LOCK_NB)
@@ -54,7 +59,7 @@ class HolderLock:
                 self._file = os.open(path, os.O_RDWR | os.O_CREAT | os.O_CLOEXEC, 0o644)
                 fcntl.flock(self._file, fcntl.LOCK_EX | fcntl.LOCK_NB)
             os.ftruncate(self._file, 0)
-            os.pwrite(self._file, f"{os.getpid()} {station}\n".encode(), 0)
+            os.pwrite(self._file, f"{os.getpid()} {self._station}\n".encode(), 0)
         except BlockingIOError:
             holder = self._holder()
             self.release()
@@ -78,6 +83,20 @@ class HolderLock:
         if self._file >= 0 and self._is_new and self._is_at_its_place():
             self._path.unlink()
         self.release()
+
+    def renew(self) -> None:
+        """Take the lock again where its file was taken away, so that the next one still finds it.
+
+        Raises
+        ------
+        HeldError
+            When somebody else has it by now.
+        OSError
+            As at first.
+        """
+        if self._file < 0 or not self._is_at_its_place():
+            self.release()
+            self._take()
 
     def release(self) -> None:
         """Let the next one in."""
@@ -104,8 +123,13 @@ class WriterLock(HolderLock):
     """
 
     def __init__(self, database: Path, station: str) -> None:
+        self._database = database
+        super().__init__(database.with_name(database.name + ".lock"), station)
+
+    def _take(self) -> None:
+        database = self._database
         try:
-            super().__init__(database.with_name(database.name + ".lock"), station)
+            super()._take()
         except OSError as error:
             raise unreachable(database, error) from None
         except HeldError as error:

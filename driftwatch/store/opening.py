@@ -39,10 +39,10 @@ def refuse_foreign(path: Path) -> None:
     """
     if path.is_dir():
         raise StoreUnreachableError(f"{path} is a folder; expected a database file; name a file in it")
-    if not path.exists() or _is_marked(path):
+    if not path.exists() or is_marked(path):
         return
     try:
-        with closing(_connect(path, "immutable=1")) as connection:
+        with closing(connect(path, "immutable=1")) as connection:
             mark = connection.execute("PRAGMA application_id").fetchone()[0]
             tables = [row[0] for row in connection.execute("SELECT name FROM sqlite_master WHERE type = 'table'")]
     except sqlite3.OperationalError as error:
@@ -59,7 +59,7 @@ def refuse_foreign(path: Path) -> None:
         )
 
 
-def _is_marked(path: Path) -> bool:
+def is_marked(path: Path) -> bool:
     """Say whether a file's header is that of a database of ours.
 
     The header alone is looked at (SQLite's file format, section 1.3), without the library: a file whose log was not
@@ -94,9 +94,12 @@ def file_at(path: Path) -> tuple[int, int] | None:
     return status.st_dev, status.st_ino
 
 
-def writing_engine(path: Path) -> Engine:
-    """Return the engine of the one writer: every transaction takes the write lock at its begin."""
-    engine = _engine(path, "mode=rwc", StaticPool)
+def writing_engine(path: Path, busy_ms: int | None = None) -> Engine:
+    """Return the engine of the one writer: every transaction takes the write lock at its begin.
+
+    It waits for a lock as long as `busy_ms` says, milliseconds; None: `BUSY_MS`.
+    """
+    engine = _engine(path, "mode=rwc", StaticPool, busy_ms)
 
     def begin(connection: Connection) -> None:
         connection.exec_driver_sql("BEGIN IMMEDIATE")
@@ -134,18 +137,19 @@ def _reading_mode(path: Path) -> str:
     return "immutable=1" if archived and not write_ahead.exists() else "mode=ro"
 
 
-def _engine(path: Path, how: str, pool: type[Pool]) -> Engine:
-    return sa.create_engine("sqlite://", creator=lambda: _connect(path, how), poolclass=pool)
+def _engine(path: Path, how: str, pool: type[Pool], busy_ms: int | None = None) -> Engine:
+    return sa.create_engine("sqlite://", creator=lambda: connect(path, how, busy_ms), poolclass=pool)
 
 
-def _connect(path: Path, how: str) -> sqlite3.Connection:
+def connect(path: Path, how: str, busy_ms: int | None = None) -> sqlite3.Connection:
+    """Return a bare connection to a database; `how` are the parameters of its URI, as ``mode=ro``."""
     # No transaction is begun behind our back (isolation_level None): SQLAlchemy's begin event does it.
     connection = sqlite3.connect(
         f"file:{quote(str(path))}?{how}",
         uri=True,
         isolation_level=None,
         check_same_thread=False,
-        timeout=BUSY_MS / 1000,
+        timeout=(BUSY_MS if busy_ms is None else busy_ms) / 1000,
     )
     connection.execute("PRAGMA foreign_keys = ON")
     return connection

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import sqlite3
 import time
+from contextlib import suppress
 from functools import cache
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -12,6 +13,15 @@ import sqlalchemy as sa
 from sqlalchemy.dialects import sqlite
 
 from driftwatch.records import KIND_OF, Alert
+from driftwatch.store.ahead import AheadLog, log_of
+from driftwatch.store.aside import (
+    Predecessor,
+    damage_in,
+    name_predecessor,
+    open_at,
+    set_aside,
+    take_log_along,
+)
 from driftwatch.store.errors import StoreError, commit_failed, file_gone, unreachable
 from driftwatch.store.location import database_path
 from driftwatch.store.lock import WriterLock
@@ -31,6 +41,9 @@ if TYPE_CHECKING:
 
 CACHE_KB = 512
 """Pages kept in memory, kilobytes: rows are only appended, and memory that fills over hours looks like a leak."""
+
+LIVE_BUSY_MS = 100
+"""How long a live run waits for a lock, milliseconds: meanwhile it answers nobody, and it tries again anyway."""
 
 
 @cache
@@ -58,11 +71,24 @@ class Writer:
 
     def __init__(self, connection: Connection, path: Path, lock: WriterLock, clock: Callable[[], int]) -> None:
         self.path = path
-        self._connection = connection
         self._lock = lock
         self._clock = clock
+        self._busy_ms: int | None = None
+        self._unnamed: list[Predecessor] = []  # what was set aside, until the database names it
+        self._use(connection)
+
+    def _use(self, connection: Connection) -> None:
+        self._connection = connection
         self._headers: dict[HeaderKey, int] = {}
-        self._file = file_at(path)
+        self._is_open = True
+        self._file = file_at(self.path)
+        self._ahead = AheadLog(self.path, self._say)
+        self._log = file_at(log_of(self.path))
+
+    def _say(self, statement: str) -> tuple[int, ...]:
+        """Execute a statement past the library that would begin a transaction, and return its first row."""
+        row = self._connection.connection.cursor().execute(statement).fetchone()
+        return tuple(row or ())
 
     @classmethod
     def open(
@@ -88,7 +114,8 @@ class Writer:
         Raises
         ------
         StoreError
-            When the file is foreign, newer, taken by another writer, or cannot be written; it is then unchanged.
+            When the file is foreign, newer, damaged, taken by another writer, or cannot be written; it is then
+            unchanged.
         """
         path = database_path(str(url), Path.cwd())
         refuse_foreign(path)
@@ -100,6 +127,33 @@ class Writer:
             if lock is None:
                 taken.release()
             raise
+
+    @classmethod
+    def open_live(cls, path: Path, lock: WriterLock, clock: Callable[[], int] = time.time_ns) -> Writer:
+        """Open a database for a live run: one that is damaged is set aside and another begun, which names it.
+
+        Raises
+        ------
+        StoreError
+            As `open`, but for damage.
+        """
+        refuse_foreign(path)
+        refuse_read_only(path)
+        gone = _aside(path, damage, clock()) if (damage := damage_in(path)) is not None else None
+        writer = cls(_prepared(path), path, lock, clock)
+        writer._wait_at_most(LIVE_BUSY_MS)
+        if gone is not None:
+            writer._unnamed.append(gone)
+        return writer
+
+    def _wait_at_most(self, milliseconds: int) -> None:
+        self._busy_ms = milliseconds
+        self._say(f"PRAGMA busy_timeout = {milliseconds}")
+
+    @property
+    def set_aside(self) -> tuple[Predecessor, ...]:
+        """What was set aside and is named with the next group."""
+        return tuple(self._unnamed)
 
     def write(self, envelopes: Sequence[Envelope]) -> None:
         """Store a group in one transaction: all of it is committed on return, or none.
@@ -117,9 +171,24 @@ class Writer:
         with self.transaction(
             synchronous=any(isinstance(envelope.body, Alert) for envelope in envelopes)
         ) as connection:
+            for predecessor in self._unnamed:
+                name_predecessor(connection, predecessor)
             for kind, rows in self._rows(connection, envelopes, headers).items():
                 connection.exec_driver_sql(_insert(kind), rows)
         self._headers = headers
+        self._unnamed = []
+        self._log = self._log or file_at(log_of(self.path))
+        self._ahead.committed(len(envelopes))
+
+    @property
+    def pinned_bytes(self) -> int:
+        """Size of the write-ahead log while a reader keeps it from being emptied although it is large; else 0."""
+        return self._ahead.pinned_bytes
+
+    @property
+    def is_at_its_place(self) -> bool:
+        """Whether the file is where it was opened."""
+        return self._file is not None and file_at(self.path) == self._file
 
     def _rows(
         self, connection: Connection, envelopes: Sequence[Envelope], headers: dict[HeaderKey, int]
@@ -154,13 +223,81 @@ class Writer:
             At its begin, when the file is no longer where it was opened: what is written to a deleted file is lost.
             At its end or inside, when the database refuses.
         """
-        if file_at(self.path) != self._file:
+        if not (self._is_open and self.is_at_its_place):
             raise file_gone(self.path)
         return _Transaction(self._connection, self.path, synchronous)
 
     def forget_headers(self) -> None:
         """Look up again what the records of a run share: rows of ``header`` went."""
         self._headers = {}
+
+    # ------------------------------------------------------------------------------------------ begin anew
+
+    def begin_after_damage(self, damage: str) -> Predecessor:
+        """Set the damaged database aside, begin another in its place that names it, and go on in that.
+
+        Parameters
+        ----------
+        damage
+            What the library said.
+
+        Raises
+        ------
+        StoreError
+            When that failed; `begin_after_loss` may try again.
+        """
+        gone = _aside(self.path, damage, self._clock())
+        self._unnamed.append(gone)
+        self._let_go()
+        self._use_anew()
+        return gone
+
+    def begin_after_loss(self) -> Predecessor | None:
+        """Go on in another database where this one was taken away from its place; return what is known of that.
+
+        What lies there now is gone on in where it is a database of ours; a foreign file is left as it is. Where the
+        old one was put back, it is gone on in, and None is returned.
+
+        Raises
+        ------
+        StoreError
+            When no other can be begun; it may be tried again.
+        """
+        refuse_foreign(self.path)
+        refuse_read_only(self.path)
+        if self._is_open:
+            if self.is_at_its_place:
+                return None
+            self._unnamed.append(self._left_behind(self._clock()))
+            self._let_go()
+        elif (damage := damage_in(self.path)) is not None:
+            self._unnamed.append(_aside(self.path, damage, self._clock()))
+        self._use_anew()
+        return self._unnamed[-1] if self._unnamed else None
+
+    def _left_behind(self, now_ns: int) -> Predecessor:
+        """Fold what is left of the log into the file that is gone, as far as it still is, and say where that lies."""
+        moved = open_at(self._file) if self._file is not None else None
+        try:
+            if moved is not None:
+                with suppress(sqlite3.DatabaseError, sa.exc.DBAPIError):  # the log is then put beside it
+                    self._say("PRAGMA wal_checkpoint(TRUNCATE)")
+            take_log_along(self.path, self._log, moved, now_ns)
+        except OSError as error:
+            raise unreachable(self.path, error) from None
+        if moved is None:
+            return Predecessor(str(self.path), "deleted while it was written to; what it held is lost", now_ns)
+        return Predecessor(str(moved), "moved, or replaced, while it was written to", now_ns)
+
+    def _let_go(self) -> None:
+        self._is_open, self._file = False, None  # the number of a file that nobody has open is given to another
+        with suppress(sqlite3.DatabaseError, sa.exc.DBAPIError):  # it is gone, or damaged: nothing is expected of it
+            self._connection.close()
+            self._connection.engine.dispose()
+
+    def _use_anew(self) -> None:
+        self._lock.renew()
+        self._use(_prepared(self.path, self._busy_ms))
 
     def close(self) -> None:
         """Fold the write-ahead log into the database and let the next writer in."""
@@ -210,8 +347,23 @@ class _Transaction:
         self._connection.connection.cursor().execute(f"PRAGMA synchronous = {level}")
 
 
-def _prepared(path: Path) -> Connection:
-    engine = writing_engine(path)
+def _aside(path: Path, damage: str, now_ns: int) -> Predecessor:
+    """Set a damaged database aside.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When it cannot be renamed.
+    """
+    try:
+        name = set_aside(path, "damaged", now_ns)
+    except OSError as error:
+        raise unreachable(path, error) from None
+    return Predecessor(str(name), f"damaged: {damage}", now_ns)
+
+
+def _prepared(path: Path, busy_ms: int | None = None) -> Connection:
+    engine = writing_engine(path, busy_ms)
     try:
         connection = engine.connect()
         with connection.begin():
