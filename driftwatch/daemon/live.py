@@ -255,6 +255,7 @@ class LiveRun:
     def _housekeeping(self, now: float) -> None:
         """Commit what is due; every second give a sign of life and take a step of what can wait."""
         self._keeper.flush_due(now)
+        self._hear_store()
         if self._company.publisher is not None:
             self._company.publisher.serve()
         if now < self._beat_due:
