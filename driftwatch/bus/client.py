@@ -71,7 +71,7 @@ class Asker:
         self._monitor = self._socket.get_monitor_socket(_EVENTS)
         self._seen = 0  # events of the connection so far
         try:
-            self._socket.connect(self.endpoint)
+            self._socket.connect(_reachable(self.endpoint))
         except zmq.ZMQError as error:
             self.close()
             raise AskError(f"{self.endpoint!r} cannot be asked: {error}; expected tcp://HOST:PORT") from None
@@ -170,3 +170,10 @@ class Asker:
 
     def __exit__(self, *_: object) -> None:
         self.close()
+
+
+def _reachable(endpoint: str) -> str:
+    """Return where to go for an endpoint that is bound on every interface: to this computer."""
+    for every, one in (("//*:", "//127.0.0.1:"), ("//0.0.0.0:", "//127.0.0.1:"), ("//[::]:", "//[::1]:")):
+        endpoint = endpoint.replace(every, one)
+    return endpoint

@@ -63,6 +63,7 @@ def write_document(path: Path, document: dict[str, Any], *, new: bool = False) -
     draft = path.with_name(f".{path.name}.{secrets.token_hex(4)}")
     try:
         with os.fdopen(os.open(draft, os.O_WRONLY | os.O_CREAT | os.O_EXCL, FILE_MODE), "w", encoding="utf-8") as file:
+            give_to_owner_of(path.parent, file.fileno())
             file.write(text)
             file.flush()
             os.fsync(file.fileno())
@@ -76,6 +77,13 @@ def write_document(path: Path, document: dict[str, Any], *, new: bool = False) -
         raise unusable(path, error) from None
     finally:
         draft.unlink(missing_ok=True)
+
+
+def give_to_owner_of(folder: Path, made: int) -> None:
+    """Let what root made, an open file or folder, be its whose folder it lies in: the daemon need not be root."""
+    if os.geteuid() == 0:
+        owner = folder.stat()
+        os.fchown(made, owner.st_uid, owner.st_gid)
 
 
 def refuse_open(path: Path, mode: int) -> None:

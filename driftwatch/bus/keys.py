@@ -22,7 +22,16 @@ from typing import TYPE_CHECKING, Any
 from pydantic import TypeAdapter, ValidationError
 
 from driftwatch.bus.errors import KeysError, NoKeyError
-from driftwatch.bus.keyfiles import FOLDER_MODE, SCHEMA, damaged, read_document, refuse_open, unusable, write_document
+from driftwatch.bus.keyfiles import (
+    FOLDER_MODE,
+    SCHEMA,
+    damaged,
+    give_to_owner_of,
+    read_document,
+    refuse_open,
+    unusable,
+    write_document,
+)
 from driftwatch.config.values import Name
 from driftwatch.records import parse_time, time_text
 
@@ -264,6 +273,11 @@ class KeyFolder:
     def _make_folder(self) -> None:
         try:
             self.path.mkdir(FOLDER_MODE)
+            made = os.open(self.path, os.O_RDONLY | os.O_DIRECTORY)
+            try:
+                give_to_owner_of(self.path.parent, made)
+            finally:
+                os.close(made)
         except FileExistsError:
             return
         except OSError as error:

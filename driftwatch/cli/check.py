@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
-from driftwatch.cli.check_live import live_lines, live_objects, source_object, source_words
+from driftwatch.cli.check_live import live_lines, live_objects, source_object, source_words, unguarded_problems
 from driftwatch.cli.shared import CAUTION, refuse
 
 if TYPE_CHECKING:
@@ -42,6 +42,8 @@ def command(config: Path, as_json: bool) -> None:
         configuration = load(config)
     except ConfigError as error:
         _refuse(error.problems, as_json)
+    if problems := unguarded_problems(configuration):
+        _refuse(problems, as_json)
     if as_json:
         click.echo(json.dumps(explained(configuration), ensure_ascii=False, allow_nan=False))
     else:
@@ -78,6 +80,7 @@ def explained(config: Configuration) -> dict[str, Any]:
         "store": config.store.url,
         "keep_days": config.store.keep_days,
         "publish": config.bus.publish,
+        "control": config.bus.control,
         **live_objects(config),
         "assumed": list(assumed(config)),
         "remarks": list(remarks(config)),
@@ -263,5 +266,8 @@ def _places(config: Configuration) -> Iterator[str]:
     if not config.source:
         return
     yield f"rows of `run`: {config.store.url}, kept {config.store.keep_days:g} days"
-    yield f"messages of `run`: {config.bus.publish}"
-    yield f"commands: {config.bus.control} is set aside for them; this version obeys none"
+    from driftwatch.config import is_loopback
+
+    whom = "whoever is on this computer" if is_loopback(config.bus.publish) else "whoever has a granted key, encrypted"
+    yield f"messages of `run`: {config.bus.publish}, for {whom}"
+    yield f"commands to `run`: {config.bus.control}, from this user and whoever has a granted key"

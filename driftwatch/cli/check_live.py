@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from collections.abc import Iterator
 
-    from driftwatch.config import Configuration, SoundcardSourceConfig, SourceConfig
+    from driftwatch.config import Configuration, Problem, SoundcardSourceConfig, SourceConfig
 
 
 # ---------------------------------------------------------------------------------------------- sources
@@ -56,6 +56,26 @@ def source_object(config: Configuration, source: SourceConfig) -> dict[str, Any]
         keys = ("device", "rate_hz", "sample_format", "block_s", "wait_for_device")
         said |= {key: getattr(source, key) for key in keys} | {"inputs": opened_inputs(config, source)}
     return said
+
+
+# ---------------------------------------------------------------------------------------------- the bus
+
+
+def unguarded_problems(config: Configuration) -> list[Problem]:
+    """Return which endpoints lie beyond this computer although no key is granted in the state folder."""
+    from driftwatch.bus.errors import KeysError
+    from driftwatch.bus.keys import KeyFolder
+    from driftwatch.config import Problem, unguarded
+    from driftwatch.daemon.state import state_folder
+
+    problems = unguarded(config, granted=False)
+    if not problems:
+        return []
+    folder = KeyFolder(state_folder(config))
+    try:
+        return unguarded(config, granted=bool(folder.granted()))
+    except KeysError as error:
+        return [Problem("bus", f"keys that cannot be read ({error})", "keys in the state folder", "see to them first")]
 
 
 # ---------------------------------------------------------------------------------------------- the daemon
