@@ -12,6 +12,8 @@ import signal
 import threading
 import time
 from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass
 from multiprocessing import connection
 from pathlib import Path
 from types import SimpleNamespace
@@ -184,21 +186,29 @@ def are_numbered(records: list[Envelope]) -> None:
 # ---------------------------------------------------------------------------------------------- pace and time
 
 
-@pytest.mark.parametrize(("pace", "least_s", "most_s"), [(2.0, 1.5, 60.0), (0.0, 0.0, 60.0)])
-def test_the_source_sets_the_pace(pace: float, least_s: float, most_s: float) -> None:
-    """At no pace 90 s are read in less than 60; the other way no sample comes before its time."""
-    source = OddSource(3.0 if pace else 90.0)
-    trial = Trial(source, pace, configuration())
+def test_no_sample_comes_before_its_time() -> None:
+    """At twice the pace of real time 3 s last 1.5 s, less a block; at no pace see `test_whoever_dies_...`."""
+    source = OddSource(3.0)
+    trial = Trial(source, 2.0, configuration())
     began = time.monotonic()
     assert trial.run() == "the source ended"
-    assert least_s - 0.1 / pace if pace else 0.0 <= time.monotonic() - began < most_s
+    assert time.monotonic() - began > 1.5 - 0.1 / 2.0
     assert figures(trial.records) == figures(whole(source, configuration()))
-    assert trial.bodies(Run)[-1].samples == round(source.seconds * RATE)
+    assert trial.bodies(Run)[-1].samples == 3 * RATE
 
 
-@pytest.fixture
-def looks(monkeypatch: pytest.MonkeyPatch) -> SimpleNamespace:
-    """Let the main process's clock move by the longest wait at each wait and not otherwise: the worst case."""
+@dataclass
+class Looked:
+    """A run whose main process's clock moved by the longest wait at each wait and not otherwise: the worst case."""
+
+    trial: Trial
+    made: dict[int, float]  # when each record was made, by its number
+    chores: list[float]
+
+
+@pytest.fixture(scope="module")
+def looked() -> Iterator[Looked]:
+    """Run through a gap of 5 s at four times the pace of real time, until six chores were done and it is over."""
     clock = SimpleNamespace(now=100.0)
 
     def waited(*arguments: Any) -> Any:
@@ -209,69 +219,41 @@ def looks(monkeypatch: pytest.MonkeyPatch) -> SimpleNamespace:
         clock.now += LOOK_S
         time.sleep(seconds)
 
-    monkeypatch.setattr(crew, "connection", SimpleNamespace(wait=waited))
-    stepped = SimpleNamespace(monotonic=lambda: clock.now, sleep=slept)
-    for module in (crew, live):
-        monkeypatch.setattr(module, "time", stepped)
-    return clock
-
-
-def test_a_record_is_committed_within_200_ms_of_when_it_was_made(
-    looks: SimpleNamespace, monkeypatch: pytest.MonkeyPatch
-) -> None:
     made: dict[int, float] = {}
+    chores: list[float] = []
     take = Keeper.take
 
     def noting(keeper: Keeper, envelopes: Sequence[Envelope]) -> None:
-        made.update((envelope.sequence, looks.now) for envelope in envelopes)
+        made.update((envelope.sequence, clock.now) for envelope in envelopes)
         take(keeper, envelopes)
 
-    monkeypatch.setattr(Keeper, "take", noting)
-    trial = Trial(OddSource(6.0), 4.0, configuration())
-    trial.run()
-    assert len(trial.out) > 40
-    assert max(now - made[one.sequence] for now, one in trial.out) <= DUE_S + 1e-9
+    def chore(trial: Trial, now: float) -> None:
+        chores.append(now)
+        if len(chores) >= 6 and trial.live.samples > 4 * RATE:
+            trial.stop.set()
+
+    stepped = SimpleNamespace(monotonic=lambda: clock.now, sleep=slept)
+    with pytest.MonkeyPatch.context() as patch:
+        patch.setenv("PYTHONPATH", str(Path(__file__).parent))
+        patch.setattr(crew, "connection", SimpleNamespace(wait=waited))
+        patch.setattr(Keeper, "take", noting)
+        for module in (crew, live):
+            patch.setattr(module, "time", stepped)
+        trial = Trial(OddSource(600.0, gap_at_s=3.0), 4.0, configuration(), chore=chore)
+        trial.run()
+        yield Looked(trial, made, chores)
 
 
-def test_a_heartbeat_comes_every_second_also_while_no_samples_come(looks: SimpleNamespace) -> None:
-    """A look every 50 ms finds a beat that late at most, and lateness does not add up."""
-    trial = Trial(OddSource(3.0, gap_at_s=1.5), 1.0, configuration())
-    trial.run()
-    times = [now - 100.0 for now, _ in trial.beats]
-    assert len(times) >= 7  # the gap is waited for as well
-    first = times[0]
-    assert all(index <= now - first < index + LOOK_S + 1e-6 for index, now in enumerate(times))
+def test_a_record_is_committed_within_200_ms_of_when_it_was_made(looked: Looked) -> None:
+    assert len(looked.trial.out) > 20
+    assert max(now - looked.made[one.sequence] for now, one in looked.trial.out) <= DUE_S + 1e-9
 
 
-def test_heartbeats_tell_how_old_the_last_sample_is_and_how_full_the_queue() -> None:
-    """Two seconds of queue, and a worker that is stopped: it fills, and the source waits with what it has."""
-    stopped: list[int] = []
-
-    def chore(trial: Trial, _: float) -> None:
-        found = children(os.getpid(), "tracker")
-        if trial.live.samples > 0 and not stopped and found:
-            stopped.append(found[0])
-            os.kill(found[0], signal.SIGSTOP)
-        if stopped and trial.beats and trial.beats[-1][1].queue_fill == 1.0:
-            os.kill(stopped[0], signal.SIGCONT)
-
-    source = OddSource(12.0)
-    trial = Trial(source, 1.0, configuration(1, 2.0), chore=chore)
-    assert trial.run() == "the source ended"
-    fills = [beat.queue_fill for _, beat in trial.beats]
-    assert max(fills) == 1.0
-    assert all(0.0 <= fill <= 1.0 for fill in fills)
-    ages = [beat.sample_age_s for _, beat in trial.beats]
-    assert ages[0] is None
-    assert max(age for age in ages if age is not None) > 1.5  # while nothing was measured
-    assert figures(trial.records) == figures(whole(source, configuration()))
-
-
-def test_chores_are_done_once_a_second(looks: SimpleNamespace) -> None:
-    done: list[float] = []
-    Trial(OddSource(3.0), 1.0, configuration(1), chore=lambda _, now: done.append(now - 100.0)).run()
-    assert len(done) >= 4
-    assert all(index - 1e-6 <= now - done[0] < index + LOOK_S + 1e-6 for index, now in enumerate(done))
+def test_heartbeats_and_chores_come_every_second_also_while_no_samples_come(looked: Looked) -> None:
+    """A look every 50 ms finds each that late at most, and lateness does not add up. A gap is waited for as well."""
+    for times in ([now for now, _ in looked.trial.beats], looked.chores):
+        assert len(times) >= 6
+        assert all(index - 1e-6 <= now - times[0] < index + LOOK_S + 1e-6 for index, now in enumerate(times))
 
 
 # ---------------------------------------------------------------------------------------------- the end
@@ -279,7 +261,7 @@ def test_chores_are_done_once_a_second(looks: SimpleNamespace) -> None:
 
 def test_the_stop_ends_the_run_with_everything_told() -> None:
     trial = Trial(
-        OddSource(600.0), 1.0, configuration(), chore=lambda one, _: one.live.samples > 1500 and one.stop.set()
+        OddSource(600.0), 2.0, configuration(), chore=lambda one, _: one.live.samples > 1500 and one.stop.set()
     )
     assert trial.run() == "stopped"
     are_numbered(trial.records)
@@ -340,107 +322,99 @@ def test_a_gap_of_the_source_is_told_as_a_replay_tells_it() -> None:
 # ---------------------------------------------------------------------------------------------- what dies
 
 
-@pytest.mark.parametrize("workers", [1, 3])
-def test_the_records_do_not_depend_on_how_many_workers_measure(workers: int) -> None:
-    """There are two channels, so of three workers two work."""
-    source = model(12.0)
-    trial = Trial(source, 0.0, configuration(workers))
+def test_the_records_do_not_depend_on_how_many_workers_measure() -> None:
+    """There are two channels, so of three workers two work; of one worker a gap, above, tells the same."""
+    source = model(10.0)
+    trial = Trial(source, 0.0, configuration(3))
     trial.run()
     assert trial.records == whole(source, configuration())
 
 
-def _killer(
-    role: str, when: Callable[[Trial], bool], times: int = 1
-) -> tuple[Callable[[Trial, float], None], list[int]]:
-    """Return a chore that kills the first process of a role once something is so, and whom it has killed."""
-    killed: list[int] = []
+@contextmanager
+def struck(trial: Trial, number: signal.Signals, *blows: tuple[str, float]) -> Iterator[list[int]]:
+    """Send a signal to the newest process of a role, for each (role, seconds of stream), once so much was measured.
 
-    def chore(trial: Trial, _: float) -> None:
-        if len(killed) < times and when(trial):
-            found = [pid for pid in children(os.getpid(), role) if pid not in killed]
-            if found:
-                os.kill(found[0], signal.SIGKILL)
-                killed.append(found[0])
+    Gives the list of those it was sent to, which fills; one process is struck once.
+    """
+    done = threading.Event()
+    hit: list[int] = []
 
-    return chore, killed
+    def strike() -> None:
+        for role, seconds in blows:
+            while not done.wait(0.005):
+                if trial.live.samples < seconds * RATE:
+                    continue
+                fresh = [pid for pid in children(os.getpid(), role) if pid not in hit]
+                if fresh:
+                    os.kill(fresh[-1], number)
+                    hit.append(fresh[-1])
+                    break
+
+    thread = threading.Thread(target=strike)
+    thread.start()
+    try:
+        yield hit
+    finally:
+        done.set()
+        thread.join()
 
 
-def test_a_killed_worker_changes_no_figure_and_is_one_incident_with_one_begin_and_one_end() -> None:
-    source = model(18.0)
-    chore, killed = _killer("tracker", lambda one: one.live.samples > 5 * RATE)
-    trial = Trial(source, 4.0, configuration(2), chore=chore)
-    trial.run()
-    assert len(killed) == 1
+def test_a_killed_worker_and_a_killed_capture_change_no_figure_and_the_source_waits() -> None:
+    """Of the worker there is one incident with one begin and one end; the capture loses nothing, so there is none.
+
+    The source is at most 10 s ahead of what was measured, and 5 s of before are kept: more than what windows of 1 s and
+    decays look back.
+    """
+    source = model(12.0)
+    trial = Trial(source, 4.0, configuration(2, 10.0))
+    with struck(trial, signal.SIGKILL, ("capture", 2.0), ("tracker", 4.0)) as killed:
+        trial.run()
+    assert len(killed) == 2
     are_numbered(trial.records)
     assert figures(trial.records) == figures(whole(source, configuration()))
+    assert trial.bodies(Run)[-1].samples == 12 * RATE
+    assert trial.lines == ["The process that reads the source died: it was ended by SIGKILL; it is started again"]
     begin, end = trial.bodies(Health)
     assert (begin.phase, end.phase, end.incident) == (Phase.BEGIN, Phase.END, begin.incident)
     assert begin.fault is end.fault is Fault.PROCESS
     assert begin.detail == (
-        "the process that measures a died: it was ended by SIGKILL; it is started again a little way back"
+        "the process that measures b died: it was ended by SIGKILL; it is started again a little way back"
     )
     assert 0.1 <= end.seconds < LONG_S
     assert end.lost_samples == 0
 
 
-def test_a_killed_capture_of_a_source_that_waits_loses_nothing() -> None:
-    source = model(18.0)
-    chore, killed = _killer("capture", lambda one: one.live.samples > 5 * RATE)
-    trial = Trial(source, 4.0, configuration(1, 4.0), chore=chore)  # it is at most 4 s ahead of what was measured
-    trial.run()
-    assert len(killed) == 1
-    assert figures(trial.records) == figures(whole(source, configuration()))
-    assert trial.bodies(Health) == []
-    assert trial.bodies(Run)[-1].samples == 18 * RATE
-    assert trial.lines == ["The process that reads the source died: it was ended by SIGKILL; it is started again"]
-
-
 def test_whoever_dies_and_whenever_a_run_at_no_pace_gives_the_same_records() -> None:
-    """A minute of stream; a thread kills a worker, and then the capture, within moments."""
-    source = model(60.0)
+    """40 s of stream, read in less time; a worker is killed, and then the capture, within moments."""
+    source = model(40.0)
     trial = Trial(source, 0.0, configuration(2))
-    done = threading.Event()
-    killed: list[int] = []
-
-    def kill() -> None:
-        for role in ("tracker", "capture"):
-            before = trial.live.samples
-            while not done.wait(0.005) and trial.live.samples <= before + 5 * RATE:
-                pass
-            for pid in children(os.getpid(), role)[:1]:
-                os.kill(pid, signal.SIGKILL)
-                killed.append(pid)
-
-    thread = threading.Thread(target=kill)
-    thread.start()
-    try:
+    began = time.monotonic()
+    with struck(trial, signal.SIGKILL, ("tracker", 3.0), ("capture", 6.0)) as killed:
         trial.run()
-    finally:
-        done.set()
-        thread.join()
+    assert time.monotonic() - began < 40.0
     assert killed
     assert figures(trial.records) == figures(whole(source, configuration()))
     phases = [body.phase for body in trial.bodies(Health)]
     assert phases.count(Phase.BEGIN) == phases.count(Phase.END)
 
 
-def test_a_stopped_worker_is_killed_and_changes_no_figure() -> None:
-    """After half of what the queue holds, 7 s. The history is 5 s, more than windows of 1 s look back."""
-    stopped: list[int] = []
-
-    def chore(trial: Trial, _: float) -> None:
-        if trial.live.samples > 2 * RATE and not stopped:
-            stopped.extend(children(os.getpid(), "tracker")[1:])
-            os.kill(stopped[0], signal.SIGSTOP)
-
-    source = model(14.0)
-    trial = Trial(source, 3.0, configuration(2, 14.0), chore=chore)
-    trial.run()
+def test_a_stopped_worker_is_killed_and_changes_no_figure_and_heartbeats_tell_how_full_the_queue_is() -> None:
+    """A queue of 10 s fills, and the source waits with what it has, until after 5 s the worker is known to hang."""
+    source = model(16.0)
+    trial = Trial(source, 4.0, configuration(2, 10.0))
+    with struck(trial, signal.SIGSTOP, ("tracker", 2.0)) as stopped:
+        assert trial.run() == "the source ended"
     assert not is_running(stopped[0])
     assert figures(trial.records) == figures(whole(source, configuration()))
     begin, end = trial.bodies(Health)
-    assert begin.detail.startswith("the process that measures b died: it did nothing for 7 s")
+    assert begin.detail.startswith("the process that measures b died: it did nothing for 5 s")
     assert (begin.phase, end.phase, end.incident) == (Phase.BEGIN, Phase.END, begin.incident)
+    fills = [beat.queue_fill for _, beat in trial.beats]
+    assert max(fills) == 1.0
+    assert all(0.0 <= fill <= 1.0 for fill in fills)
+    ages = [beat.sample_age_s for _, beat in trial.beats]
+    assert ages[0] is None
+    assert max(age for age in ages if age is not None) > 1.5  # while nothing was measured
 
 
 def test_a_worker_that_dies_in_a_loop_is_told_as_such_and_the_run_goes_on_once_it_lives() -> None:
@@ -449,28 +423,13 @@ def test_a_worker_that_dies_in_a_loop_is_told_as_such_and_the_run_goes_on_once_i
     The block at which it died three times is passed over, and then the next: windows that touch them are lost, and no
     other figure changes. They are told of later than 2 s before it died at most, and until it has seen enough again.
     """
-    source = model(24.0)
+    source = model(18.0)
     trial = Trial(source, 4.0, configuration(1))
-    done = threading.Event()
-    killed: set[int] = set()
-
-    def kill() -> None:
-        until(lambda: done.is_set() or trial.live.samples > 4 * RATE, "samples come")
-        while len(killed) < 6 and not done.wait(0.01):
-            for pid in set(children(os.getpid(), "tracker")) - killed:
-                os.kill(pid, signal.SIGKILL)
-                killed.add(pid)
-
-    thread = threading.Thread(target=kill)
-    thread.start()
-    try:
+    with struck(trial, signal.SIGKILL, *[("tracker", 4.0)] * 6) as killed:
         assert trial.run() == "the source ended"
-    finally:
-        done.set()
-        thread.join()
     assert len(killed) == 6
     are_numbered(trial.records)
-    assert trial.bodies(Run)[-1].samples == 24 * RATE
+    assert trial.bodies(Run)[-1].samples == 18 * RATE
     told, expected = (_ambient(records) for records in (trial.records, whole(source, configuration())))
     assert set(told) <= set(expected)
     lost = sorted(first for _, first in set(expected) - set(told))
