@@ -1,0 +1,160 @@
+"""Where a listener hears a daemon, and how it asks it for what was missed."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, Self
+
+import click
+
+from driftwatch.bus.errors import AskError, BusError, NoKeyError
+from driftwatch.cli.listen import DEFAULT_ENDPOINT
+
+if TYPE_CHECKING:
+    import zmq
+
+    from driftwatch.bus.client import Asker
+    from driftwatch.bus.follow import Place
+
+AGAIN_S = 1.0
+"""Time between two attempts to ask a daemon that did not answer, seconds."""
+
+BUSY_S = 0.1
+"""Wait where more was asked than the daemon answers in a second, seconds."""
+
+
+@dataclass(frozen=True, slots=True)
+class Way:
+    """How to reach a daemon."""
+
+    endpoint: str  # where it publishes
+    control: str | None = None  # where it answers; None: what the key's file says
+    key: Path | None = None  # file of the key to come in with; None: nothing can be asked
+
+
+def way_to(endpoint: str | None, config: str | None, key: Path | None) -> Way:
+    """Return how to reach the daemon that options name.
+
+    Raises
+    ------
+    click.UsageError
+        When both or neither of two things are given, or what is named cannot be read.
+    """
+    if config is not None and key is not None:
+        raise click.UsageError("got both --config and --key; expected one of them; leave out the other")
+    if config is not None:
+        return _by_config(endpoint, config)
+    return Way(endpoint or DEFAULT_ENDPOINT) if key is None else _by_key(endpoint, key)
+
+
+def _by_config(endpoint: str | None, config: str) -> Way:
+    from driftwatch.bus.keys import KeyFolder
+    from driftwatch.config import ConfigError, load
+    from driftwatch.daemon.state import state_folder
+
+    try:
+        found = load(config)
+    except ConfigError as error:
+        raise click.UsageError(str(error)) from None
+    key = KeyFolder(state_folder(found)).operator_path
+    return Way(endpoint or found.bus.publish, found.bus.control, key)
+
+
+def _by_key(endpoint: str | None, key: Path) -> Way:
+    from driftwatch.bus.keys import ClientKey
+
+    try:
+        known = ClientKey.read(key).publish
+    except BusError as error:
+        raise click.UsageError(str(error)) from None
+    if endpoint is None and known is None:
+        raise click.UsageError(f"{key} does not tell where the daemon publishes; expected its ENDPOINT; give it")
+    return Way(endpoint or known or "", None, key)
+
+
+def let_in(socket: zmq.Socket[bytes], way: Way) -> None:
+    """Give a subscriber its key where the daemon publishes beyond this computer, which it does for keys alone.
+
+    Raises
+    ------
+    click.UsageError
+        When the key cannot be read.
+    """
+    from driftwatch.bus.keys import ClientKey
+    from driftwatch.config import is_loopback
+
+    if way.key is None or is_loopback(way.endpoint):
+        return
+    try:
+        key = ClientKey.read(way.key)
+    except BusError as error:
+        raise click.UsageError(str(error)) from None
+    socket.curve_publickey, socket.curve_secretkey = key.public.encode(), key.secret.encode()
+    socket.curve_serverkey = key.daemon.encode()
+
+
+class StoredSince:
+    """Asks a daemon for what it stored after a record, and opens the connection when that is first needed.
+
+    Parameters
+    ----------
+    way
+        To the daemon, with a key.
+    """
+
+    def __init__(self, way: Way) -> None:
+        self._way = way
+        self._asker: Asker | None = None
+        self._failed: tuple[float, BusError] | None = None
+
+    def __call__(self, place: Place | None) -> dict[str, Any]:
+        """Return the next page, as `Since` says.
+
+        Raises
+        ------
+        BusError
+            When nobody answers, the key is refused, or the daemon cannot tell now; for `AGAIN_S` nothing more is asked.
+        """
+        if self._failed is not None and time.monotonic() < self._failed[0]:
+            raise self._failed[1]
+        self._failed = None
+        try:
+            return self._page(place)
+        except BusError as error:
+            self.close()
+            self._failed = (time.monotonic() + AGAIN_S, error)
+            raise
+
+    def _page(self, place: Place | None) -> dict[str, Any]:
+        asker = self._opened()
+        while True:
+            run, sequence = (None, None) if place is None else (place.run, place.sequence)
+            reply = asker.ask("since", run=run, sequence=sequence)
+            if reply.get("ok"):
+                return reply
+            if reply.get("fault") != "rate":
+                raise AskError(f"{asker.endpoint} answers: {reply.get('outcome')}")
+            time.sleep(BUSY_S)
+
+    def _opened(self) -> Asker:
+        from driftwatch.bus.client import Asker
+
+        if self._asker is None:
+            if self._way.key is None:
+                raise NoKeyError("there is no key to ask the daemon with for what was missed")
+            self._asker = Asker(self._way.control, self._way.key)
+        return self._asker
+
+    def close(self) -> None:
+        """End the connection."""
+        if self._asker is not None:
+            self._asker.close()
+            self._asker = None
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
