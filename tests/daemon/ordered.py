@@ -10,6 +10,9 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from driftwatch.daemon import recorder
+from driftwatch.daemon.messages import Record
+
 LONG_S = 60.0
 """A deadline for what takes a second or two on a computer that has nothing else to do."""
 
@@ -23,6 +26,12 @@ class Do:
 
     def __reduce__(self) -> tuple[Callable[..., Any], tuple[Any, ...]]:
         return self.function, self.arguments
+
+
+def hurried(order: Record) -> Record:
+    """Return an order to record that, where it arrives, makes the disk be asked again sooner than after 5 s."""
+    recorder.RETRY_S = 0.5
+    return order
 
 
 def until(found: Callable[[], Any], what: str, seconds: float = LONG_S) -> Any:

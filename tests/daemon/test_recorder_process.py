@@ -18,7 +18,7 @@ from driftwatch.records import NS, Clock, Fault, TimeQuality
 from driftwatch.stream.recording import open_recordings
 from driftwatch.stream.ring import Ring, Shape
 from numpy.typing import NDArray
-from ordered import LONG_S, is_running, until
+from ordered import LONG_S, Do, hurried, is_running, until
 
 RATE = 1000
 FRAMES = 100
@@ -95,8 +95,14 @@ def is_the_same(one: dict[int, NDArray[np.float32]], other: dict[int, NDArray[np
 
 def started(ring: Ring, folder: Path) -> Child:
     child = Child("recorder", ring.descriptor)
-    child.tell(order(folder))
+    child.tell(Do(hurried, (order(folder),)))
     return child
+
+
+@pytest.fixture(autouse=True)
+def _importable(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Let the process import `ordered`."""
+    monkeypatch.setenv("PYTHONPATH", str(Path(__file__).parent))
 
 
 def test_all_that_goes_through_the_ring_is_kept_with_its_gaps_and_blocks_without_a_place_are_not(
