@@ -18,6 +18,7 @@ from driftwatch.bus.publisher import Publisher
 from driftwatch.bus.wire import encode
 from driftwatch.cli import listen
 from driftwatch.cli.figures import in_words
+from driftwatch.cli.listen_asking import Way
 from driftwatch.records import Envelope, Heartbeat, Origin, TimeQuality
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -51,15 +52,21 @@ def _until_it_hears(process: subprocess.Popen[str], send: Callable[[], None]) ->
     return process.stdout.readline()
 
 
-def test_json_lines_are_the_objects_as_they_came(publisher: Publisher, measurement: Make, alert: Make) -> None:
-    sent = [measurement(1), alert(2), measurement(3)]
-    with _start(publisher.endpoint, "--topic", "measurement/drive_end/rocking", "--count", "2", "--json") as process:
-        first = _until_it_hears(process, lambda: publisher.publish([measurement(1)]))
-        publisher.publish([measurement(1), *sent])
-        out, _ = process.communicate(timeout=20)
-    assert json.loads(first) == encode(sent[0])
-    assert [json.loads(line) for line in out.splitlines()] == [encode(sent[0])]
+def test_the_last_value_comes_first_and_then_json_lines_are_the_objects_as_they_came(
+    publisher: Publisher, measurement: Make, alert: Make
+) -> None:
+    publisher.publish([measurement(1)])
+    with _start(publisher.endpoint, "--topic", "measurement/drive_end/rocking", "--count", "3", "--json") as process:
+        first = _until_it_hears(process, publisher.serve)
+        publisher.publish([measurement(2), alert(3), measurement(4, previous=2)])
+        out, told = process.communicate(timeout=20)
+    assert json.loads(first) == encode(measurement(1)) | {"repeated": True}
+    assert [json.loads(line) for line in out.splitlines()] == [
+        encode(measurement(2)),
+        encode(measurement(4, previous=2)),
+    ]
     assert process.returncode == 0
+    assert told == ""
 
 
 def test_a_hole_is_told_by_the_numbers(publisher: Publisher, measurement: Make) -> None:
@@ -83,7 +90,8 @@ def test_a_hole_is_told_by_the_numbers(publisher: Publisher, measurement: Make) 
 
 def test_people_get_a_line_each(publisher: Publisher, measurement: Make, alert: Make) -> None:
     with _start(publisher.endpoint, "--topic", "measurement", "--topic", "alert") as process:
-        first = _until_it_hears(process, lambda: publisher.publish([measurement(1)]))
+        publisher.publish([measurement(1)])
+        first = _until_it_hears(process, publisher.serve)
         publisher.publish([alert(2)])
         assert process.stdout is not None
         line = process.stdout.readline()
@@ -94,6 +102,7 @@ def test_people_get_a_line_each(publisher: Publisher, measurement: Make, alert: 
     assert first.startswith(
         "2026-01-01T00:00:01.000Z  measurement/drive_end/rocking  ambient  900.12 ± 0.12 Hz  Q 40.5"
     )
+    assert first.endswith("(last value)\n")
     assert "alert/drive_end/rocking/warning  normal -> unacknowledged  medium" in line
 
 
@@ -101,7 +110,7 @@ def test_silence_is_told_once_with_what_may_be_wrong(
     publisher: Publisher, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
 ) -> None:
     monkeypatch.setattr(listen, "QUIET_S", 0.05)
-    messages = listen._messages(publisher.endpoint, ())
+    messages = listen._messages(Way(publisher.endpoint), ())
     done = threading.Event()
 
     def speak() -> None:
