@@ -80,14 +80,13 @@ class Bench:
     def __init__(self, folder: Path, stack: ExitStack) -> None:
         self.folder = folder
         self._stack = stack
-        self.port, control = free_ports(2)
+        self.port, self.control = free_ports(2)
         self.endpoint = f"tcp://127.0.0.1:{self.port}"
-        self._control = control
 
     def config(self, name: str = "bench.toml", *, pace: float = 1.0, seconds: float | None = None) -> Path:
         """Write the configuration `BENCH` and return its name."""
         length = "" if seconds is None else f"seconds = {seconds}"
-        text = BENCH.format(pace=pace, seconds=length, port=self.port, control=self._control)
+        text = BENCH.format(pace=pace, seconds=length, port=self.port, control=self.control)
         (self.folder / name).write_text(text, encoding="utf-8")
         return Path(name)
 

@@ -50,7 +50,8 @@ def layout(bench: Any) -> Path:
     folder: Path = bench.folder
     shutil.copytree(CONFIG, folder / "config")
     demo = folder / "config" / "demo.toml"
-    demo.write_text(demo.read_text().replace("5571", str(bench.port)))
+    ports = demo.read_text().replace("5571", str(bench.port)).replace("5572", str(bench.control))
+    demo.write_text(ports)
     for name in ("before", "during", "recording"):
         samples = 0.1 * np.random.default_rng(0).standard_normal(6 * 4000)
         soundfile.write(folder / f"{name}.wav", samples.astype(np.float32), 4000, subtype="FLOAT")

@@ -49,7 +49,8 @@ class LiveScene:
 
     def config(self, source: str, publish: str, more: str = "") -> str:
         """Return the configuration that follows every mode of a source, given as its table."""
-        parts = ['schema = 1\n[station]\nname = "bench"', source, f'[bus]\npublish = "{publish}"', more]
+        bus = f'[bus]\npublish = "{publish}"\ncontrol = "{free_endpoint()}"'
+        parts = ['schema = 1\n[station]\nname = "bench"', source, bus, more]
         parts += ['[store]\nurl = "sqlite:///bench.db"']
         for index in range(1, self.channels + 1):
             parts += [f'[[channel]]\nname = "c{index}"\ninput = {index}\nquantity = "velocity"']
