@@ -9,14 +9,18 @@ from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
 
-from driftwatch.cli.shared import drop_output
+from driftwatch.cli.shared import drop_output, told_time
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterable, Iterator, Sequence
 
+    from driftwatch.records import Envelope
     from driftwatch.store.queries import Reader
 
 DEFAULT_STORE = "driftwatch.db"
+
+SHOWN = 40
+"""How many rows a table shows where no limit is given."""
 
 UNCUT = ("run", "time", "from", "origin")
 """Heads of columns that are never wrapped."""
@@ -33,6 +37,27 @@ def store_options(function: _Function) -> _Function:
         "--store", metavar="URL|PATH", help=f"Look into this database; left out: {DEFAULT_STORE} in the current folder."
     )
     return of_store(of_config(function))
+
+
+def span_options(function: _Function) -> _Function:
+    """Add ``--run``, ``--since``, ``--until`` and ``--limit``: which records to look at."""
+    for option in (
+        click.option(
+            "--limit", type=click.IntRange(min=1), help=f"The latest so many; left out: {SHOWN}, or all with --json."
+        ),
+        click.option("--until", callback=told_time, metavar="TIME", help="Before this moment."),
+        click.option(
+            "--since", callback=told_time, metavar="TIME", help="From this moment on, such as 2026-03-01T06:00:00Z."
+        ),
+        click.option("--run", "run", metavar="UUID", help="Only this run: its UUID, the begin of it, or `last`."),
+    ):
+        function = option(function)
+    return function
+
+
+def limited(limit: int | None, as_json: bool) -> int | None:
+    """Return how many records are wanted: without a limit as many as a table shows, and all as JSON."""
+    return limit if limit or as_json else SHOWN
 
 
 @contextmanager
@@ -102,6 +127,13 @@ def print_lines(lines: Iterable[bytes]) -> None:
     for line in lines:
         out.write(line + b"\n")
     out.flush()
+
+
+def print_envelopes(envelopes: Iterable[Envelope]) -> None:
+    """Print records on stdout, one JSON object a line, as on the bus."""
+    from driftwatch.bus.wire import encode_json
+
+    print_lines(map(encode_json, envelopes))
 
 
 def print_table(heads: Sequence[str], rows: Sequence[Sequence[str]]) -> None:

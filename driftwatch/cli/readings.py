@@ -7,30 +7,29 @@ from typing import TYPE_CHECKING
 import click
 
 from driftwatch.cli.figures import NONE, known_with_std, moment, with_interval
-from driftwatch.cli.looking import opened_store, print_lines, print_table, quiet_pipe, store_options
-from driftwatch.cli.shared import told_time
+from driftwatch.cli.looking import (
+    limited,
+    opened_store,
+    print_envelopes,
+    print_table,
+    quiet_pipe,
+    span_options,
+    store_options,
+)
 from driftwatch.records import Envelope, Measurement, Method, Track
 
 if TYPE_CHECKING:
-    from collections.abc import Iterable
-
     from driftwatch.store.queries import Reader, Wanted
-
-SHOWN = 40
-"""How many rows a table shows where no limit is given."""
 
 
 @click.command("readings")
 @store_options
-@click.option("--run", "run", metavar="UUID", help="Only this run: its UUID, the begin of it, or `last`.")
+@span_options
 @click.option("--channel", metavar="NAME", help="Only this channel.")
 @click.option("--mode", metavar="NAME", help="Only this mode.")
 @click.option(
     "--method", type=click.Choice([str(method) for method in Method]), help="Only measurements by this method."
 )
-@click.option("--since", callback=told_time, metavar="TIME", help="From this moment on, such as 2026-03-01T06:00:00Z.")
-@click.option("--until", callback=told_time, metavar="TIME", help="Before this moment.")
-@click.option("--limit", type=click.IntRange(min=1), help=f"The latest so many; left out: {SHOWN}, or all with --json.")
 @click.option("--tracks", is_flag=True, help="Track points instead of measurements.")
 @click.option("--json", "as_json", is_flag=True, help="One JSON object a line, as on the bus.")
 def command(  # noqa: PLR0913, RUF100 - one parameter an option
@@ -66,19 +65,13 @@ def command(  # noqa: PLR0913, RUF100 - one parameter an option
             method=Method(method) if method else None,
             since_ns=since,
             until_ns=until,
-            limit=limit if limit or as_json else SHOWN,
+            limit=limited(limit, as_json),
         )
         kind = "track" if tracks else "measurement"
         if as_json:
-            _print_json(reader.records(kind, wanted))
+            print_envelopes(reader.records(kind, wanted))
         else:
             _print_readable(reader, kind, wanted)
-
-
-def _print_json(envelopes: Iterable[Envelope]) -> None:
-    from driftwatch.bus.wire import encode_json
-
-    print_lines(map(encode_json, envelopes))
 
 
 def _print_readable(reader: Reader, kind: str, wanted: Wanted) -> None:
