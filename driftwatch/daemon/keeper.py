@@ -199,7 +199,7 @@ class Keeper:
         if error.trouble is not Trouble.DAMAGED and not is_lost:
             return
         try:
-            gone = self._writer.begin_after_loss() if is_lost else self._writer.begin_after_damage(str(error))
+            gone = self._writer.begin_after_loss() if is_lost else self._writer.begin_after_damage(error.cause)
         except StoreError as failure:
             self._tell(StoreNews("store", f"another database cannot be begun: {failure}", Fault.STORE))
             return

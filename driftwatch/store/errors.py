@@ -63,11 +63,14 @@ class CommitError(StoreError):
     ----------
     trouble
         What kept it from being stored.
+    cause
+        The database library's own words, where they are its.
     """
 
-    def __init__(self, message: str, trouble: Trouble = Trouble.REFUSED) -> None:
+    def __init__(self, message: str, trouble: Trouble = Trouble.REFUSED, cause: str = "") -> None:
         super().__init__(message)
         self.trouble = trouble
+        self.cause = cause or message
 
 
 _TROUBLES = {
@@ -132,7 +135,7 @@ def commit_failed(path: Path, error: Exception) -> CommitError:
     trouble = trouble_of(path, cause)
     said = f"{cause}, no room is left" if trouble is Trouble.FULL and "full" not in str(cause) else str(cause)
     remedy = remedy_of(said) if trouble is not Trouble.READ_ONLY else _REMEDIES["readonly"]
-    return CommitError(f"{path}: nothing of this group was stored: {said}; {remedy}", trouble)
+    return CommitError(f"{path}: nothing of this group was stored: {said}; {remedy}", trouble, said)
 
 
 def unreachable(path: Path, error: Exception) -> StoreUnreachableError:

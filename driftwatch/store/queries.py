@@ -9,13 +9,18 @@ from typing import TYPE_CHECKING, Any
 
 import sqlalchemy as sa
 
-from driftwatch.records import Alert, AlertState, Envelope, Method, Origin, Phase, Run, TimeQuality
+from driftwatch.records import Alert, AlertState, Envelope, Origin, Phase, Run, TimeQuality
+from driftwatch.store import paging
 from driftwatch.store.errors import StoreError, unreachable
+from driftwatch.store.hourly import hourly
 from driftwatch.store.latest import Latest, latest_of
 from driftwatch.store.location import database_path
 from driftwatch.store.opening import reading_engine, refuse_other_schema, revision_of
-from driftwatch.store.rows import HeaderKey, form_of
+from driftwatch.store.paging import Wanted, key_of_header
+from driftwatch.store.rows import form_of
 from driftwatch.store.tables import HEADER, TABLES
+
+__all__ = ["NoSuchRunError", "Reader", "RunSummary", "Wanted"]
 
 if TYPE_CHECKING:
     from collections.abc import Iterator
@@ -23,26 +28,9 @@ if TYPE_CHECKING:
 
     from sqlalchemy.engine import Connection, Engine
 
-_CHUNK = 1000
-"""Rows fetched at once, so that memory does not grow with the answer."""
-
 
 class NoSuchRunError(StoreError):
     """A run that was asked for is not in the database, or several answer to what was given of its name."""
-
-
-@dataclass(frozen=True, slots=True)
-class Wanted:
-    """Which records of a kind are asked for; what is None or empty does not narrow."""
-
-    run: str | None = None  # UUID of the run
-    channel: str | None = None
-    mode: str | None = None
-    method: Method | None = None  # of measurements
-    since_ns: int | None = None  # stream time, included
-    until_ns: int | None = None  # stream time, not included
-    limit: int | None = None  # the latest so many, or the earliest with `earliest`
-    earliest: bool = False  # take the limit from the begin
 
 
 @dataclass(frozen=True, slots=True)
@@ -100,21 +88,41 @@ class Reader:
     def records(self, kind: str, wanted: Wanted | None = None) -> Iterator[Envelope]:
         """Yield records of one kind as they were written, in the order of stream time.
 
-        Every one comes from the same instant of the database, whatever is written meanwhile.
+        What is written meanwhile is left out. It may be read slowly: no transaction is open between two pages.
 
         Raises
         ------
         StoreError
             When the database cannot be read.
         """
-        form = form_of(kind)
+        with self._connected() as connection:
+            yield from paging.records(connection, kind, wanted or Wanted())
+
+    def hourly(
+        self,
+        channel: str,
+        mode: str,
+        *,
+        station: str | None = None,
+        since_ns: int | None = None,
+        until_ns: int | None = None,
+    ) -> Iterator[Envelope]:
+        """Yield the first usable track point of a mode in each hour, see `hourly`; fast over years.
+
+        Raises
+        ------
+        StoreError
+            When the database cannot be read.
+        """
+        with self._connected() as connection:
+            yield from hourly(connection, channel, mode, station, (since_ns, until_ns))
+
+    @contextmanager
+    def _connected(self) -> Iterator[Connection]:
+        """Give a connection on which each part of an answer is a transaction of its own."""
         try:
-            with self._engine.begin() as connection:
-                keys = {row.id: _key(row) for row in connection.execute(sa.select(HEADER))}
-                selected = _selected(kind, wanted or Wanted(), keys)
-                rows = connection.execution_options(yield_per=_CHUNK).execute(selected)
-                for row in rows:
-                    yield form.envelope(keys[row[0]], row)
+            with self._engine.connect() as connection:
+                yield connection
         except sa.exc.DBAPIError as error:
             raise unreachable(self.path, error) from error
 
@@ -223,13 +231,9 @@ def _standing(connection: Connection, headers: list[Any]) -> tuple[Alert, ...]:
 def _bodies(connection: Connection, kind: str, headers: list[Any]) -> Iterator[Any]:
     table = TABLES[kind]
     chosen = sa.select(table).where(table.c.header.in_([row.id for row in headers])).order_by(table.c.sequence)
-    keys = {row.id: _key(row) for row in headers}
+    keys = {row.id: key_of_header(row) for row in headers}
     for row in connection.execute(chosen):
         yield form_of(kind).envelope(keys[row.header], row).body
-
-
-def _key(row: Any) -> HeaderKey:
-    return (row.run, row.station, Origin(row.origin), TimeQuality(row.time_quality))
 
 
 def _summary(
@@ -240,38 +244,8 @@ def _summary(
     counts: dict[str, int] = {}
     for kind, _, count, _, _ in mine:
         counts[kind] = counts.get(kind, 0) + count
-    run, station, origin, _ = _key(headers[0])
-    quality = _key(headers[-1])[3]  # the latest known
+    run, station, origin, _ = key_of_header(headers[0])
+    quality = key_of_header(headers[-1])[3]  # the latest known
     first = min((row[3] for row in mine), default=headers[0].opened_ns)
     last = max((row[4] for row in mine), default=headers[0].opened_ns)
     return RunSummary(run, station, origin, quality, first, last, ends[-1] if ends else None, counts, standing)
-
-
-def _selected(kind: str, wanted: Wanted, keys: dict[int, HeaderKey]) -> sa.Select[Any]:
-    table = TABLES[kind]
-    narrow = sa.select(table).where(*_conditions(table, wanted, keys))
-    order = (table.c.time_ns, table.c.header, table.c.sequence)
-    if wanted.limit is None:
-        return narrow.order_by(*order)
-    if wanted.earliest:
-        return narrow.order_by(*order).limit(wanted.limit)
-    latest = narrow.order_by(*(column.desc() for column in order)).limit(wanted.limit).subquery()
-    return sa.select(latest).order_by(latest.c.time_ns, latest.c.header, latest.c.sequence)
-
-
-def _conditions(table: sa.Table, wanted: Wanted, keys: dict[int, HeaderKey]) -> list[sa.ColumnElement[bool]]:
-    found: list[sa.ColumnElement[bool]] = []
-    if wanted.run is not None:
-        # Nearly always one number: as an equality it lets the index give the rows in the order of time.
-        headers = [number for number, key in keys.items() if key[0] == wanted.run]
-        found.append(table.c.header == headers[0] if len(headers) == 1 else table.c.header.in_(headers))
-    found.extend(
-        table.c[name] == value
-        for name, value in (("channel", wanted.channel), ("mode", wanted.mode), ("method", wanted.method))
-        if value is not None
-    )
-    if wanted.since_ns is not None:
-        found.append(table.c.time_ns >= wanted.since_ns)
-    if wanted.until_ns is not None:
-        found.append(table.c.time_ns < wanted.until_ns)
-    return found
