@@ -150,20 +150,18 @@ def _track(measurement: Make, sequence: int, time_ns: int, **changes: Any) -> En
 
 @pytest.fixture(scope="module")
 def year(tmp_path_factory: pytest.TempPathFactory, measurement: Make) -> Iterator[Reader]:
-    """Return a year of points of two modes every 20 minutes, in two runs; some hours hold nothing, or nothing usable."""
+    """Return a year of points every half hour, in two runs; some hours hold nothing, or nothing usable."""
     rows = []
-    for number in range(0, 365 * 24 * 3):
-        hour = number // 3
-        run = RUNS[hour // 5000]
-        time_ns = START + number * HOUR // 3 + 5 * NS
-        status = TrackStatus.LOST if hour % 100 == 50 or number % 3 == 0 and hour % 7 == 0 else TrackStatus.TRACKING
+    for number in range(365 * 24 * 2):
+        hour = number // 2
+        is_lost = hour % 100 == 50 or (number % 2 == 0 and hour % 7 == 0)
+        status, figure = (TrackStatus.LOST, None) if is_lost else (TrackStatus.TRACKING, 900.0)
         if hour % 1000 < 100:
             continue
-        figure = 900.0 if status is TrackStatus.TRACKING else None
-        rows += [
-            _track(measurement, 2 * number + 1, time_ns, run=run, status=status, frequency_hz=figure),
-            _track(measurement, 2 * number + 2, time_ns, run=run, mode="bending"),
-        ]
+        run, time_ns = RUNS[hour // 5000], START + number * HOUR // 2 + 5 * NS
+        rows.append(_track(measurement, number + 1, time_ns, run=run, status=status, frequency_hz=figure))
+        if number % 10 == 0:
+            rows.append(_track(measurement, number + 20_000, time_ns, run=run, mode="bending"))
     path = tmp_path_factory.mktemp("year") / "a.db"
     with Writer.open(path, "line 3") as writer:
         writer.write(rows)
