@@ -17,7 +17,11 @@ def command() -> None:
     """  # noqa: D301 - \b is click's mark for lines that stay as they are
 
 
-@command.command("value", short_help="Give one value of a slow quantity.")
+@command.command(
+    "value",
+    short_help="Give one value of a slow quantity.",
+    context_settings={"ignore_unknown_options": True},  # a value may be negative
+)
 @click.argument("name")
 @click.argument("value")
 @click.argument("unit")
