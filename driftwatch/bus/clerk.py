@@ -124,16 +124,16 @@ class Clerk(Generic[Sender]):
             return [(sender, self._refused("key", "a request with a revoked key", "this key is granted no more"))]
         if not self._allowance(holder).take(now):
             words = f"more than {REQUESTS_PER_S:g} requests a second; wait a moment"
-            return [(sender, self._refused("rate", f"requests of {holder.name}: too many", words))]
+            return [(sender, self._refused("rate", f"requests of {holder.name}: too many", words, of=holder))]
         try:
             request = parse_request(raw)
         except RequestError as error:
             told = f"a request of {holder.name} that is none"
-            return [(sender, self._refused("malformed", told, str(error), error.request))]
+            return [(sender, self._refused("malformed", told, str(error), error.request, of=holder))]
         if not may(holder.role, request.action):
             words = f"the key {holder.name!r} may only {holder.role}; expected one that may operate"
             told = f"{request.action} by {by_of(request, holder)}: the key may only {holder.role}"
-            return [(sender, self._refused("right", told, words, request.request))]
+            return [(sender, self._refused("right", told, words, request.request, of=holder))]
         reply = self._answer(sender, request, by_of(request, holder), now)
         return [] if reply is None else [(sender, reply)]
 
@@ -187,10 +187,12 @@ class Clerk(Generic[Sender]):
         self._pending[order.request.request] = _Pending(mark, now + PATIENCE_S, [sender])
         return None
 
-    def _refused(self, fault: str, told: str | None, words: str, request: str | None = None) -> Reply:
+    def _refused(
+        self, fault: str, told: str | None, words: str, request: str | None = None, *, of: Granted | None = None
+    ) -> Reply:
         self.counts.refused[fault] = self.counts.refused.get(fault, 0) + 1
-        if told is not None:
-            self._behind.told(fault, f"Refused: {told}")
+        if told is not None:  # each key for itself: none may hide in the crowd of another
+            self._behind.told(fault if of is None else f"{fault} of {of.name}", f"Refused: {told}")
         return {"request": request, "ok": False, "fault": fault, "outcome": f"refused: {words}"}
 
     # ------------------------------------------------------------------------------------------ what comes of it

@@ -161,7 +161,9 @@ def test_a_key_to_look_may_look_and_what_else_it_wants_is_refused_and_logged(roo
         assert room.lines == []
     else:
         assert (reply["ok"], reply["fault"], reply["request"]) == (False, "right", "r")
-        assert room.lines == [("right", f"Refused: {action} by Ann (wall screen): the key may only look")]
+        assert room.lines == [
+            ("right of wall screen", f"Refused: {action} by Ann (wall screen): the key may only look")
+        ]
 
 
 @pytest.mark.parametrize("action", FIELDS)

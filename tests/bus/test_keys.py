@@ -80,7 +80,7 @@ def test_a_name_that_is_taken_or_none_is_refused_and_leaves_no_file(
 ) -> None:
     folder.grant("Night shift", Role.LOOK, AT_NS, WHERE, tmp_path / "night.key")
     before = folder.granted()
-    with pytest.raises(KeysError, match="expected (a name of its own|1 to 64 letters)"):
+    with pytest.raises(KeysError, match=r"expected (a name of its own|1 to 64 letters)"):
         folder.grant(name, Role.OPERATE, AT_NS, WHERE, tmp_path / "other.key")
     assert folder.granted() == before
     assert not (tmp_path / "other.key").exists()
