@@ -16,7 +16,9 @@ from typing import Any
 
 import pytest
 import zmq
+from click.testing import CliRunner
 from driftwatch.bus.wire import encode_json, is_repeated
+from driftwatch.cli import main
 from driftwatch.records import KINDS
 from driftwatch.store.queries import Reader
 
@@ -107,105 +109,95 @@ def _are_tied(messages: Iterable[Message]) -> None:
 # ---------------------------------------------------------------------------------------------- one stream of records
 
 
-def test_what_is_printed_is_what_is_stored_and_what_the_bus_carries(bench: Any, objects: Objects) -> None:
-    with _listening(bench.endpoint) as heard:
-        done = bench.run("run", bench.config(pace=10.0, seconds=15.0), "--json")
-    assert done.returncode == 0, done.stderr
-    printed = objects(done.stdout)
-    _is_whole(printed)
-    assert printed == _stored(bench.folder / "state" / "bench.db")
-    carried = [message for topic, message in heard if topic != "heartbeat"]
-    assert len(carried) > 0.8 * len(printed)  # a subscriber that joins late misses the first
-    assert carried == printed[-len(carried) :]
-    assert {one["origin"] for one in printed} == {"simulated"}
-    assert printed[-1]["reason"] == "the source ended"
-    fired = [one for one in printed if one["kind"] == "alert" and one["state"] == "unacknowledged"]
-    assert [one["alert"] for one in fired] == ["drive end/rocking/bolts"]
-    topics = {topic for topic, _ in heard}
-    assert topics >= {"measurement/drive_end/rocking", "track/drive_end/rocking", "alert/drive_end/rocking/bolts"}
-    _are_tied((topic, message) for topic, message in heard if topic != "heartbeat")
-
-
-def test_a_heartbeat_comes_every_second_with_its_fields_and_names_the_worst_alert_that_stands(bench: Any) -> None:
+def test_what_is_printed_is_what_is_stored_and_what_the_bus_carries_until_a_signal_ends_it(
+    bench: Any, objects: Objects
+) -> None:
+    """How soon it ends is for the bench; that SIGTERM ends it as SIGINT does is held by `daemon/test_service`."""
     began = time.monotonic()
     with _listening(bench.endpoint) as heard:
         process = bench.start("run", bench.config(pace=4.0), "--json")
         read = _until_told(process, '"state":"unacknowledged"')
-        time.sleep(1.3)
+        time.sleep(1.3)  # until it is in a heartbeat
         process.send_signal(signal.SIGINT)
-        _ended(process, read)
-    beats = [message for topic, message in heard if topic == "heartbeat"]
+        out, err = _ended(process, read)
+    assert process.returncode == 0, err
+    assert "Traceback" not in err
+    printed = objects(out)
+    _is_whole(printed)
+    assert printed == _stored(bench.folder / "state" / "bench.db")
+    assert printed[-1]["reason"] == "stopped"
+    assert {one["origin"] for one in printed} == {"simulated"}
+    fired = [one for one in printed if one["kind"] == "alert" and one["state"] == "unacknowledged"]
+    assert [one["alert"] for one in fired] == ["drive end/rocking/bolts"]
+    told = [(topic, message) for topic, message in heard if topic != "heartbeat" and not message.get("repeated")]
+    carried = [message for _, message in told]
+    assert len(carried) > 0.5 * len(printed)  # a subscriber that joins late misses the first
+    assert carried == printed[-len(carried) :]
+    topics = {topic for topic, _ in heard}
+    assert topics >= {"measurement/drive_end/rocking", "track/drive_end/rocking", "alert/drive_end/rocking/bolts"}
+    _are_tied(told)
+    _are_heartbeats([message for topic, message in heard if topic == "heartbeat"], time.monotonic() - began)
+
+
+def _are_heartbeats(beats: list[dict[str, Any]], seconds: float) -> None:
+    """Hold the heartbeats of a run of so many seconds to their fields; that one comes a second is for `test_live`."""
     assert len(beats) >= 3
     for beat in beats:
         assert beat.keys() == {
             *("kind", "schema", "station", "run", "origin", "time", "time_quality", "uptime_s"),
-            *("sample_age_s", "queue_fill", "worst_alert", "sequence"),
+            *("sample_age_s", "queue_fill", "worst_alert", "sequence", "unsaved", "unsaved_s"),
         }
         assert (beat["kind"], beat["station"], beat["origin"]) == ("heartbeat", "bench", "simulated")
         assert 0.0 <= beat["queue_fill"] <= 1.0
     ups = [beat["uptime_s"] for beat in beats]
-    assert 0.0 <= ups[0] <= ups[-1] <= time.monotonic() - began
-    # A beat may be late on a busy computer; those that follow are not late with it.
-    assert (ups[-1] - ups[0]) / (len(ups) - 1) == pytest.approx(1.0, abs=0.2)
+    assert 0.0 <= ups[0] <= ups[-1] <= seconds
     sequences = [beat["sequence"] for beat in beats]
     assert sequences == sorted(sequences)
-    assert beats[-1]["sample_age_s"] < 1.0
     assert [beats[0]["worst_alert"], beats[-1]["worst_alert"]] == [None, "high"]
 
 
 # ---------------------------------------------------------------------------------------------- the end
 
 
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM], ids=["SIGINT", "SIGTERM"])
-def test_a_signal_ends_a_run_within_two_seconds_with_everything_stored(
-    bench: Any, objects: Objects, number: signal.Signals
+def test_the_view_is_for_people_and_its_summary_names_commands_that_work(
+    bench: Any, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    process = bench.start("run", bench.config(), "--json")
-    read = _until_told(process, '"kind":"track"')
-    sent = time.monotonic()
-    process.send_signal(number)
-    out, err = _ended(process, read)
-    assert time.monotonic() - sent < 2.0
-    assert process.returncode == 0, err
-    assert "Traceback" not in err
-    records = objects(out)
-    _is_whole(records)
-    assert records[-1]["reason"] == "stopped"
-    assert records == _stored(bench.folder / "state" / "bench.db")
-
-
-def test_the_summary_names_commands_that_work(bench: Any) -> None:
     config = bench.config("a bench.toml", pace=10.0)  # a name that a shell must have quoted
     process = bench.start("run", config)
     read = _until_told(process, "ALERT")
     process.send_signal(signal.SIGINT)
-    out, _ = _ended(process, read)
+    out, err = _ended(process, read)
     assert process.returncode == 0
+    _is_for_people(out)
+    assert err.startswith("Watching 1 mode of bench.\nRows go to ")
     told = out.partition("What next:\n")[2].splitlines()
     named = [shlex.split(line[line.index("driftwatch") :])[1:] for line in told if re.match(r"  \S", line)]
     assert [command[0] for command in named] == ["readings", "runs", "check", "replay"]
-    assert bench.run("simulate", "short.wav", "--config", config, "--seconds", "3").returncode == 0
+    monkeypatch.chdir(bench.folder)
+    _done("simulate", "short.wav", "--config", config, "--seconds", "3")
     for command in named:
-        done = bench.run(*("short.wav" if word == "RECORDING" else word for word in command))
-        assert done.returncode == 0, done.stderr
-        assert done.stdout
-    assert "drive end" in bench.run(*named[0]).stdout
+        assert _done(*("short.wav" if word == "RECORDING" else word for word in command))
+    assert "drive end" in _done(*named[0])
 
 
-def test_the_view_is_for_people(bench: Any) -> None:
-    done = bench.run("run", bench.config(pace=10.0, seconds=12.0))
-    assert done.returncode == 0
-    lines = done.stdout.splitlines()
+def _is_for_people(out: str) -> None:
+    lines = out.splitlines()
     assert lines[0] == "Times are UTC, frequencies ± standard uncertainty, Q with its 95 % interval."
     assert max(map(len, lines)) <= 110
-    assert "\x1b" not in done.stdout  # colours only on a terminal
-    assert "can tell" not in done.stdout  # the first time is no news
+    assert "\x1b" not in out  # colours only on a terminal
+    assert "can tell" not in out  # the first time is no news
     mode = re.compile(r"\d\d:\d\d:\d\d  drive end / rocking +\d+\.\d+ ± \d+\.\d+ Hz  Q \d+.* to .*\)  +tracking")
     assert any(mode.fullmatch(line) for line in lines)
     assert any(re.fullmatch(r"\d\d:\d\d:\d\d  ALERT high  drive end/rocking/bolts: frequency .*", one) for one in lines)
     assert "Alerts: 1 raised, 0 came back, 1 standing." in lines
-    assert "driftwatch advises; it is no protective system." in done.stdout
-    assert done.stderr.startswith("Watching 1 mode of bench.\nRows go to ")
+    assert "driftwatch advises; it is no protective system." in out
+
+
+def _done(*arguments: object) -> str:
+    """Return what a command prints, which needs no process of its own."""
+    done = CliRunner().invoke(main, list(map(str, arguments)))
+    assert done.exit_code == 0, done.output
+    return done.stdout
 
 
 def test_a_reader_that_has_had_enough_ends_a_run_quietly_and_the_next_goes_on_in_the_same_store(bench: Any) -> None:
@@ -226,9 +218,12 @@ def test_a_reader_that_has_had_enough_ends_a_run_quietly_and_the_next_goes_on_in
 # ---------------------------------------------------------------------------------------------- the same again
 
 
-def test_a_replay_of_the_recording_that_a_run_read_equals_it_record_by_record(bench: Any, objects: Objects) -> None:
+def test_a_replay_of_the_recording_that_a_run_read_equals_it_record_by_record(
+    bench: Any, objects: Objects, monkeypatch: pytest.MonkeyPatch
+) -> None:
     config = bench.config()
-    assert bench.run("simulate", "tape.wav", "--config", config, "--seconds", "4.3").returncode == 0
+    monkeypatch.chdir(bench.folder)
+    _done("simulate", "tape.wav", "--config", config, "--seconds", "4.3")
     text = (bench.folder / config).read_text()
     begin, end = text.index("[[source]]"), text.index("[[channel]]")
     source = f'[[source]]\nname = "tape"\nkind = "recording"\npath = "{bench.folder}/tape.wav"\n'
@@ -237,8 +232,8 @@ def test_a_replay_of_the_recording_that_a_run_read_equals_it_record_by_record(be
     live = bench.run("run", "tape.toml", "--json")
     assert time.monotonic() - began > 4.3  # at real pace
     assert live.returncode == 0, live.stderr
-    again = bench.run("replay", "tape.toml", bench.folder / "tape.wav", "--json")
-    records, replayed = objects(live.stdout), objects(again.stdout)
+    records = objects(live.stdout)
+    replayed = objects(_done("replay", "tape.toml", bench.folder / "tape.wav", "--json"))
     _is_whole(records)
     assert len([one for one in records if one["kind"] == "measurement"]) == 10  # (4.3 - 2) / 0.25, and one
     assert records[-1].pop("reason") == "the source ended"
@@ -246,15 +241,16 @@ def test_a_replay_of_the_recording_that_a_run_read_equals_it_record_by_record(be
     assert [{**one, "run": None} for one in records] == [{**one, "run": None} for one in replayed]
 
 
-def test_a_recording_of_what_a_run_was_fed_replays_to_the_same_records(bench: Any, objects: Objects) -> None:
+def test_a_recording_of_what_a_run_was_fed_replays_to_the_same_records(
+    bench: Any, objects: Objects, monkeypatch: pytest.MonkeyPatch
+) -> None:
     config = bench.config(pace=0.0, seconds=12.0)
+    monkeypatch.chdir(bench.folder)
     live = bench.run("run", config, "--json")
     assert live.returncode == 0, live.stderr
     records = objects(live.stdout)
-    assert bench.run("simulate", "fed.wav", "--config", config).returncode == 0
-    again = bench.run("replay", config, "fed.wav", "--start", records[0]["time"], "--json")
-    assert again.returncode == 0, again.stderr
-    replayed = objects(again.stdout)
+    _done("simulate", "fed.wav", "--config", config)
+    replayed = objects(_done("replay", config, "fed.wav", "--start", records[0]["time"], "--json"))
     assert _figures(replayed[:-1]) == _figures(records[:-1])
     assert _figures(replayed[-1:], "reason") == _figures(records[-1:], "reason")
     assert {one["kind"] for one in records} == {"run", "measurement", "track", "alert"}
