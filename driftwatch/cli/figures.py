@@ -63,6 +63,13 @@ def in_words(message: Mapping[str, Any]) -> str:
             return (
                 f"{message['previous_state']} -> {message['state']}  {message['priority']}  {message['reason'] or ''}"
             )
+        case "note":
+            return f"{message['by']}{' for the next shift' if message['handover'] else ''}: {message['text']}"
+        case "command":
+            target = f" {message['target']}" if message["target"] else ""
+            return (
+                f"{message['action']}{target} by {message['by']}: {message['outcome'] or 'not known what came of it'}"
+            )
         case "heartbeat":
             age = message["sample_age_s"]
             samples = "no sample yet" if age is None else f"last sample {duration(age)} ago"

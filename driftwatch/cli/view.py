@@ -19,6 +19,7 @@ from driftwatch.records import (
     Fault,
     Health,
     Heartbeat,
+    Note,
     Phase,
     Track,
     TrackStatus,
@@ -89,6 +90,11 @@ def health_line(health: Health) -> str:
     return f"FAULT  {where}: {fault}: {health.detail or 'no more is known'}"
 
 
+def note_line(note: Note) -> str:
+    """Return one line about a note."""
+    return f"note by {note.by}{' for the next shift' if note.handover else ''}: {note.text}"
+
+
 def is_back(alert: Alert) -> bool:
     """Say whether an alert has come back, acknowledged or not."""
     return alert.state in (AlertState.NORMAL, AlertState.RETURNED_UNACKNOWLEDGED)
@@ -157,6 +163,8 @@ class RunView:
             self._last_ns = max(self._last_ns, envelope.time_ns)
             self.run = envelope.run
             match envelope.body:
+                case Note() as note:
+                    self._say(envelope.time_ns, note_line(note))
                 case Alert() as alert:
                     self._alert(alert, envelope.time_ns)
                 case Track() as track:

@@ -14,6 +14,7 @@ from driftwatch.records import (
     Envelope,
     Fault,
     Health,
+    Note,
     Origin,
     Phase,
     TimeQuality,
@@ -124,6 +125,15 @@ def test_what_a_person_does_is_told_as_such_and_counts_neither_as_raised_nor_as_
     assert told[1].endswith("  one: acknowledged by ann: belt slips")
     assert told[4].endswith("  two: acknowledged by ann: belt slips")
     assert view.summary()[-2:] == ["Alerts: 2 raised, 1 came back, 1 standing.", "  ALERT medium  one: too low"]
+
+
+def test_a_note_is_a_line_with_who_and_for_whom(capsys: pytest.CaptureFixture[str]) -> None:
+    view = RunView(MODES, None)
+    view.show(
+        [_wrapped(1, Note("ann", "belt tensioned", handover=False)), _wrapped(2, Note("ben", "hot", handover=True))]
+    )
+    _, *told = capsys.readouterr().out.splitlines()
+    assert [line[10:] for line in told] == ["note by ann: belt tensioned", "note by ben for the next shift: hot"]
 
 
 def test_a_gap_is_told_and_counted(capsys: pytest.CaptureFixture[str]) -> None:
