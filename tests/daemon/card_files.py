@@ -164,6 +164,12 @@ def replay(config: Path, folder: Path, *words: object) -> list[Row]:
 
 # ---------------------------------------------------------------------------------------------- rows
 
+OF_THE_STREAM = ("measurement", "track", "alert", "health")
+"""Kinds of rows that samples and configuration alone decide."""
+
+OF_THE_RUN = ("run", "origin", "sequence", "previous", "time_quality")
+"""What two runs may have different."""
+
 
 def ns_of(text: str) -> int:
     """Return the nanoseconds of an RFC 3339 time in UTC."""
@@ -179,3 +185,24 @@ def usable(row: Row, channel: str, first: int = 0) -> bool:
 
 def health(row: Row, phase: str) -> bool:
     return row["kind"] == "health" and row["phase"] == phase
+
+
+def of_the_stream(rows: list[Row]) -> list[dict[str, Any]]:
+    """Return what samples and configuration alone decide; rows that others point to by their place among these."""
+    chosen = [row for row in rows if row["kind"] in OF_THE_STREAM]
+    places = {row["sequence"]: place for place, row in enumerate(chosen)}
+    return [
+        {name: _value(name, value, places) for name, value in row.items() if name not in OF_THE_RUN} for row in chosen
+    ]
+
+
+def _value(name: str, value: Any, places: dict[int, int]) -> Any:
+    return [places[one] for one in value] if name == "because" and value is not None else value
+
+
+def first_difference(ours: list[dict[str, Any]], theirs: list[dict[str, Any]]) -> str | None:
+    """Return the first row that differs; None: they are equal. (A comparison of whole lists tells too much.)"""
+    for one, other in zip(ours, theirs, strict=False):
+        if one != other:
+            return str({name: (one[name], other.get(name)) for name in one if one[name] != other.get(name)})
+    return None if len(ours) == len(theirs) else f"{len(ours)} rows against {len(theirs)}"

@@ -19,7 +19,7 @@ from soundrig import missing_packages
 PLAYED_S = 70
 """Length of the recording, longer than any scenario."""
 
-AT_ONCE = 3
+AT_ONCE = 4
 """Scenarios that run at the same time: they mostly wait."""
 
 
