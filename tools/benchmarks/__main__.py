@@ -11,7 +11,7 @@ import click
 
 from benchmarks.bars import FAMILY_BENCH, Row, Size
 
-NAMES = ("ambient", "ringdown", "falsestart", "speed", "memory", "live", "memory_live")
+NAMES = ("ambient", "ringdown", "falsestart", "speed", "memory", "live", "memory_live", "listeners", "slow")
 """Every bench, each a module of this package with a function ``run(size)`` that yields rows."""
 
 
