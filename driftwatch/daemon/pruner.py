@@ -35,6 +35,8 @@ class Pruner:
         self.keep_days = keep_days
         self._utc_ns = utc_ns
         self._due = 0.0
+        self.is_done = False
+        """Whether the last step found nothing old."""
 
     def step(self, now_monotonic: float) -> None:
         """Take a step if one is due at `now_monotonic`, seconds.

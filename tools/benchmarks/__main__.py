@@ -11,7 +11,19 @@ import click
 
 from benchmarks.bars import FAMILY_BENCH, Row, Size
 
-NAMES = ("ambient", "ringdown", "falsestart", "speed", "memory", "live", "memory_live", "listeners", "slow")
+NAMES = (
+    "ambient",
+    "ringdown",
+    "falsestart",
+    "speed",
+    "memory",
+    "live",
+    "memory_live",
+    "listeners",
+    "slow",
+    "kills",
+    "writing",
+)
 """Every bench, each a module of this package with a function ``run(size)`` that yields rows."""
 
 
