@@ -27,7 +27,8 @@ from benchmarks.slow_ends import RATE
 SECONDS = 600.0
 SECONDS_SMALL = 6.0
 ALONE = 1.0
-"""Part of that for which the others are heard before, without the slow one: as long, for the longest wait grows with it."""
+"""Part of that for which the others are heard before, without the slow one: as long, or the longest waits would not
+compare."""
 
 READERS = 3
 LIMIT_MB = 20.0
