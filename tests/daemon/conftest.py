@@ -44,3 +44,9 @@ def pool() -> Iterator[ThreadPoolExecutor]:
     executor = ThreadPoolExecutor(AT_ONCE)
     yield executor
     executor.shutdown(wait=True, cancel_futures=True)
+
+
+@pytest.fixture
+def importable(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Let the daemon's processes import what stands in this folder."""
+    monkeypatch.setenv("PYTHONPATH", str(Path(__file__).parent))

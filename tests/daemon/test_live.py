@@ -148,10 +148,7 @@ class Trial:
         return [one.body for one in self.records if isinstance(one.body, kind)]
 
 
-@pytest.fixture(autouse=True)
-def _importable(monkeypatch: pytest.MonkeyPatch) -> None:
-    """Let the daemon's processes import `odd_source`."""
-    monkeypatch.setenv("PYTHONPATH", str(Path(__file__).parent))
+pytestmark = pytest.mark.usefixtures("importable")  # `odd_source`
 
 
 @pytest.fixture(autouse=True)

@@ -46,6 +46,8 @@ keep_hours = 1.0
 segment_s = 2.0
 """)
 
+pytestmark = pytest.mark.usefixtures("importable")
+
 
 @pytest.fixture
 def ring() -> Iterator[Ring]:
@@ -97,12 +99,6 @@ def started(ring: Ring, folder: Path) -> Child:
     child = Child("recorder", ring.descriptor)
     child.tell(Do(hurried, (order(folder),)))
     return child
-
-
-@pytest.fixture(autouse=True)
-def _importable(monkeypatch: pytest.MonkeyPatch) -> None:
-    """Let the process import `ordered`."""
-    monkeypatch.setenv("PYTHONPATH", str(Path(__file__).parent))
 
 
 def test_all_that_goes_through_the_ring_is_kept_with_its_gaps_and_blocks_without_a_place_are_not(

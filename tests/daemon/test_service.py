@@ -2,21 +2,14 @@
 
 from __future__ import annotations
 
-import json
 import os
 import signal
-import socket
-import subprocess
-import sys
-import threading
-from collections.abc import Callable
 from pathlib import Path
-from typing import Any, Self
+from typing import Any
 
 import pytest
-from ordered import LONG_S, until
-
-Row = dict[str, Any]
+from card_files import Row, free_port
+from live_card import Daemon
 
 BAND = """
 [[mode.band]]
@@ -64,17 +57,12 @@ keep_hours = 1.0
 """A mode at 380 Hz."""
 
 
-class Daemon:
-    """``driftwatch run --json`` as a process, with what it prints."""
+class Bench(Daemon):
+    """The daemon of the configuration above, which is written again and again."""
 
     def __init__(self, folder: Path) -> None:
-        self.path = folder / "bench.toml"
-        with socket.socket() as one, socket.socket() as other:
-            for each in (one, other):
-                each.bind(("127.0.0.1", 0))
-            self._ports = {"port": one.getsockname()[1], "control": other.getsockname()[1]}
-        self.rows: list[Row] = []
-        self.lines: list[str] = []
+        super().__init__(folder / "bench.toml", dict(os.environ))
+        self._ports = {"port": free_port(), "control": free_port()}
 
     def write(
         self,
@@ -86,38 +74,7 @@ class Daemon:
         """Write the configuration, with bands by name and low limit."""
         told = "".join(BAND.format(name=name, low=low) for name, low in bands)
         values = {"keep_days": keep_days, "log_level": log_level, "search_low": search_low, **self._ports}
-        self.path.write_text(TEXT.format(bands=told, **values), encoding="utf-8")
-
-    def __enter__(self) -> Self:
-        self.process = subprocess.Popen(
-            [sys.executable, "-m", "driftwatch", "run", str(self.path), "--json"],
-            cwd=self.path.parent,
-            env={**os.environ, "OMP_NUM_THREADS": "1"},
-            stdout=subprocess.PIPE,
-            stderr=subprocess.PIPE,
-            text=True,
-        )
-        self._threads = [
-            threading.Thread(
-                target=self._read, args=(self.process.stdout, lambda line: self.rows.append(json.loads(line)))
-            ),
-            threading.Thread(target=self._read, args=(self.process.stderr, self.lines.append)),
-        ]
-        for thread in self._threads:
-            thread.start()
-        return self
-
-    def __exit__(self, *_: object) -> None:
-        self.process.kill()
-        self.process.wait()
-        for thread in self._threads:
-            thread.join()
-
-    @staticmethod
-    def _read(stream: Any, take: Callable[[str], None]) -> None:
-        with stream:
-            for line in stream:
-                take(line)
+        self.config.write_text(TEXT.format(bands=told, **values), encoding="utf-8")
 
     def of(self, kind: str, **wanted: Any) -> list[Row]:
         """Return what was printed of a kind, with these values."""
@@ -128,36 +85,33 @@ class Daemon:
         """Ask for a reload and return the record of it."""
         before = len(self.of("command"))
         self.process.send_signal(signal.SIGHUP)
-        until(lambda: len(self.of("command")) > before, "the reload is a record")
+        self.until(lambda: len(self.of("command")) > before)
         return self.of("command")[before]
 
     def end(self) -> None:
         """End it in good order, and hold all that it printed to be whole."""
-        self.process.send_signal(signal.SIGTERM)
-        assert self.process.wait(LONG_S) == 0
-        for thread in self._threads:
-            thread.join()
+        assert self.stop(signal.SIGTERM) == 0
         assert [row["sequence"] for row in self.rows] == list(range(1, len(self.rows) + 1))
 
 
 @pytest.fixture
-def daemon(tmp_path: Path) -> Daemon:
-    return Daemon(tmp_path)
+def daemon(tmp_path: Path) -> Bench:
+    return Bench(tmp_path)
 
 
-def stands(daemon: Daemon, name: str) -> Row:
+def stands(daemon: Bench, name: str) -> Row:
     """Wait until an alert stands; return its record."""
     alert = f"drive end/rocking/{name}"
-    return dict(until(lambda: daemon.of("alert", alert=alert, state="unacknowledged"), f"{name} stands")[0])
+    return dict(daemon.until(lambda: daemon.of("alert", alert=alert, state="unacknowledged"))[0])
 
 
-def moves(daemon: Daemon, name: str) -> list[tuple[str, str]]:
+def moves(daemon: Bench, name: str) -> list[tuple[str, str]]:
     """Return the changes of state of an alert so far."""
     rows = daemon.of("alert", alert=f"drive end/rocking/{name}")
     return [(row["previous_state"], row["state"]) for row in rows if row["state"] != row["previous_state"]]
 
 
-def measured_without_a_hole(daemon: Daemon) -> None:
+def measured_without_a_hole(daemon: Bench) -> None:
     """Hold the windows that were measured to the grid of every quarter of a second, from the first to the last."""
     firsts = [row["first_sample"] for row in daemon.of("measurement")]
     assert firsts == list(range(0, 500 * len(firsts), 500))
@@ -167,7 +121,7 @@ def measured_without_a_hole(daemon: Daemon) -> None:
 GONE = {"alert": "drive end/rocking/goes", "previous_state": "unacknowledged", "state": "normal"}
 
 
-def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_sample(daemon: Daemon) -> None:
+def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_sample(daemon: Bench) -> None:
     """One daemon, reloaded again and again: it starts only once, which is what takes long."""
     daemon.write(("stays", 400.0), ("goes", 401.0), ("moves", 402.0))
     with daemon:
@@ -175,7 +129,7 @@ def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_
         what_is_refused_leaves_all_as_it_was(daemon)
         it_changes_how_much_is_logged_and_how_long_rows_are_kept(daemon)
         measured = len(daemon.of("measurement"))
-        until(lambda: len(daemon.of("measurement")) > measured + 8, "it goes on")
+        daemon.until(lambda: len(daemon.of("measurement")) > measured + 8)
         daemon.end()
         assert moves(daemon, "stays") == [("normal", "unacknowledged")]
         assert moves(daemon, "goes") == [("normal", "unacknowledged"), ("unacknowledged", "normal")]
@@ -184,30 +138,30 @@ def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_
         measured_without_a_hole(daemon)
 
 
-def lines_with(daemon: Daemon, words: str) -> list[str]:
+def lines_with(daemon: Bench, words: str) -> list[str]:
     """Return what was said so far on standard error and holds the words."""
-    return [line for line in list(daemon.lines) if words in line]
+    return [line for line in list(daemon.errors) if words in line]
 
 
-def limits_move_and_what_is_gone_ends(daemon: Daemon) -> None:
+def limits_move_and_what_is_gone_ends(daemon: Bench) -> None:
     """Three bands that are all left: one gets another limit, one goes, one stays; a fourth comes."""
     before = {name: stands(daemon, name) for name in ("stays", "goes", "moves")}
     daemon.write(("moves", 350.0), ("comes", 403.0), ("stays", 400.0))
     command = daemon.reload()
-    assert (command["by"], command["action"], command["target"]) == ("signal", "reload", str(daemon.path))
+    assert (command["by"], command["action"], command["target"]) == ("signal", "reload", str(daemon.config))
     assert command["outcome"].startswith("done: taken over, sha256 ")
-    gone = until(lambda: daemon.of("alert", **GONE), "its end")[0]
+    gone = daemon.until(lambda: daemon.of("alert", **GONE))[0]
     assert gone["occurrence"] == before["goes"]["occurrence"]
     assert gone["reason"] == "no longer watched: the configuration was reloaded"
-    moved = until(
-        lambda: daemon.of("alert", alert="drive end/rocking/moves", previous_state="unacknowledged"), "it returns"
+    moved = daemon.until(
+        lambda: daemon.of("alert", alert="drive end/rocking/moves", previous_state="unacknowledged")  # it returns
     )[0]
     assert moved["occurrence"] == before["moves"]["occurrence"]  # the same life, by the new limit
     assert (moved["low"], moved["state"]) == (350.0, "returned_unacknowledged")
     assert stands(daemon, "comes")["sequence"] > command["sequence"]
 
 
-def what_is_refused_leaves_all_as_it_was(daemon: Daemon) -> None:
+def what_is_refused_leaves_all_as_it_was(daemon: Bench) -> None:
     """First a key that needs a restart, beside one that does not; then a file that is none; then one that is gone."""
     daemon.write(("stays", 350.0), search_low=330.0)
     outcome = daemon.reload()["outcome"]
@@ -216,20 +170,17 @@ def what_is_refused_leaves_all_as_it_was(daemon: Daemon) -> None:
     assert "330" in outcome
     assert "340" in outcome
     assert "low" not in outcome.replace("allow", "")
-    daemon.path.write_text("schema = 1\n[station\n", encoding="utf-8")
+    daemon.config.write_text("schema = 1\n[station\n", encoding="utf-8")
     assert daemon.reload()["outcome"].startswith("refused: ")
-    daemon.path.unlink()
+    daemon.config.unlink()
     reason = daemon.reload()["outcome"]
     assert reason.startswith("refused: ")
-    assert str(daemon.path) in reason
+    assert str(daemon.config) in reason
 
 
-def it_changes_how_much_is_logged_and_how_long_rows_are_kept(daemon: Daemon) -> None:
+def it_changes_how_much_is_logged_and_how_long_rows_are_kept(daemon: Bench) -> None:
     bands = (("stays", 400.0), ("comes", 403.0))
-    until(
-        lambda: len(lines_with(daemon, "The configuration was not reloaded: ")) == 3,
-        "all that was refused before is said",
-    )
+    daemon.until(lambda: len(lines_with(daemon, "The configuration was not reloaded: ")) == 3)
     daemon.write(*bands, keep_days=10, log_level="error")
     assert daemon.reload()["outcome"].startswith("done: taken over")
     daemon.write(*bands, keep_days=10, log_level="error", search_low=330.0)
@@ -238,5 +189,5 @@ def it_changes_how_much_is_logged_and_how_long_rows_are_kept(daemon: Daemon) -> 
     assert "keep_days" not in refused  # ten days is what it runs on by now
     daemon.write(*bands, keep_days=10, log_level="info")
     assert daemon.reload()["outcome"].startswith("done: taken over")
-    until(lambda: len(lines_with(daemon, "The configuration was reloaded from ")) == 2, "it says so")
+    daemon.until(lambda: len(lines_with(daemon, "The configuration was reloaded from ")) == 2)
     assert len(lines_with(daemon, "was not reloaded")) == 3  # the level "error" hid the fourth
