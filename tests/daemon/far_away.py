@@ -16,6 +16,7 @@ import zmq
 from driftwatch.bus.client import Asker
 from driftwatch.bus.errors import KeyRefusedError
 from driftwatch.bus.keys import ClientKey
+from obeyed import settled
 
 PATIENCE_S = 60.0
 EVERY_PROTOCOL = 3
@@ -90,7 +91,7 @@ def main(operate: Path, look: Path) -> None:
         found["look"] = asker.ask("status")
         found["refused"] = asker.ask("note", reason="belt tensioned")
     with Asker(None, operate) as asker:
-        found["noted"] = asker.ask("note", reason="belt tensioned", request="from afar")
+        found["noted"] = settled(asker, "note", reason="belt tensioned")
         hear(one, {"note", "command"})
         tell("ready")
         sys.stdin.readline()  # by now the first key is revoked

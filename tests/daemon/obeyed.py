@@ -10,6 +10,7 @@ import socket
 import subprocess
 import sys
 import threading
+import uuid
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
@@ -140,6 +141,17 @@ class Obeyed:
         assert self.process.wait(LONG_S) == 0
         for thread in self._threads:
             thread.join()
+
+
+def settled(asker: Asker, action: str, **fields: Any) -> dict[str, Any]:
+    """Return what came of a command once it is stored: a busy computer may take longer than the first answer does."""
+    fields.setdefault("request", str(uuid.uuid4()))
+
+    def final() -> Any:
+        reply = asker.ask(action, **fields)
+        return reply if reply.get("stored", True) else None
+
+    return dict(until(final, f"{action} is stored"))
 
 
 # ---------------------------------------------------------------------------------------------- a network of two
