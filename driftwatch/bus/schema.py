@@ -5,6 +5,7 @@ from __future__ import annotations
 import inspect
 import re
 from enum import StrEnum
+from functools import cache
 from typing import Any
 
 from driftwatch.bus.wire import HEADER_FIELDS, HEARTBEAT, REPEATED
@@ -129,6 +130,7 @@ def _first_line(cls: type) -> str:
     return (inspect.getdoc(cls) or "").partition("\n")[0]
 
 
+@cache
 def _words(cls: type) -> dict[str, str]:
     """Return what stands behind the fields of a class in its source, by edge name: its unit and meaning."""
     try:

@@ -261,6 +261,7 @@ def _messages(way: Way, topics: tuple[str, ...]) -> Iterator[tuple[str, bytes]]:
     with zmq.Context() as context, context.socket(zmq.SUB) as socket:
         socket.setsockopt(zmq.LINGER, 0)
         socket.setsockopt(zmq.RCVHWM, _QUEUED)
+        socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
         let_in(socket, way)
         for topic in (*topics, "heartbeat") if topics else ("",):
             socket.setsockopt_string(zmq.SUBSCRIBE, topic)

@@ -10,13 +10,16 @@ import sys
 import threading
 import time
 from collections.abc import Callable, Iterator
+from pathlib import Path
 from typing import Any
 
 import pytest
 import zmq
+from click.testing import CliRunner
 from driftwatch.bus.publisher import Publisher
+from driftwatch.bus.schema import schema
 from driftwatch.bus.wire import encode
-from driftwatch.cli import listen
+from driftwatch.cli import listen, main
 from driftwatch.cli.figures import in_words
 from driftwatch.cli.listen_asking import Way
 from driftwatch.records import Envelope, Heartbeat, Origin, TimeQuality
@@ -134,6 +137,42 @@ def test_an_endpoint_that_is_none_ends_with_2() -> None:
     assert process.returncode == 2
     assert "expected tcp://HOST:PORT, such as tcp://127.0.0.1:5571" in told
     assert "Traceback" not in told
+
+
+@pytest.mark.parametrize(
+    ("arguments", "told"),
+    [
+        (["--into", "a.jsonl"], "without a way to ask for what was missed; expected --config CONFIG or --key FILE"),
+        (["--into", "a.jsonl", "--json", "--config", "demo.toml"], "got --into with --json; expected one of them"),
+        (["--config", "demo.toml", "--key", "a.json"], "got both --config and --key; expected one of them"),
+        (["--key", "a.json"], "a.json"),
+        (["--config", "b.toml"], "b.toml"),
+    ],
+)
+def test_what_cannot_be_listened_to_so_ends_with_2_and_makes_no_file(
+    arguments: list[str], told: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    demo = Path(__file__).parent.parent.parent / "config" / "demo.toml"
+    (tmp_path / "demo.toml").write_bytes(demo.read_bytes())
+    monkeypatch.chdir(tmp_path)
+    done = CliRunner().invoke(main, ["listen", *arguments])
+    assert (done.exit_code, done.stdout) == (2, "")
+    assert told in " ".join(done.stderr.split())
+    assert [path.name for path in tmp_path.iterdir()] == ["demo.toml"]
+
+
+def test_a_file_that_holds_something_else_is_refused_and_left_alone(tmp_path: Path) -> None:
+    (tmp_path / "notes.txt").write_text("my notes\n")
+    demo = Path(__file__).parent.parent.parent / "config" / "demo.toml"
+    done = CliRunner().invoke(main, ["listen", "--config", str(demo), "--into", str(tmp_path / "notes.txt")])
+    assert done.exit_code == 2
+    assert "ends with b'my notes" in done.stderr
+    assert (tmp_path / "notes.txt").read_text() == "my notes\n"
+
+
+def test_the_schema_is_printed_as_json() -> None:
+    done = CliRunner().invoke(main, ["listen", "--schema"])
+    assert (done.exit_code, json.loads(done.stdout)) == (0, schema())
 
 
 @pytest.mark.parametrize("name", ["readings", "runs", "listen"])
