@@ -201,6 +201,8 @@ def object_of(look: Look) -> dict[str, Any]:
         "uptime_s": beat and beat.uptime_s,
         "sample_age_s": beat and beat.sample_age_s,
         "queue_fill": beat and beat.queue_fill,
+        "unsaved": beat and beat.unsaved,
+        "unsaved_s": beat and beat.unsaved_s,
         "cannot_tell": [look.told] if look.told else board.not_told,
         "alerts": [_body(board.alerts[alert.alert]) for alert in (*board.standing, *board.untold)],
         "faults": [_body(board.incidents[fault.incident]) for fault in board.faults],
