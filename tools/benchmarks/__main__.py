@@ -23,6 +23,7 @@ NAMES = (
     "slow",
     "kills",
     "writing",
+    "hostile",
 )
 """Every bench, each a module of this package with a function ``run(size)`` that yields rows."""
 
