@@ -6,11 +6,9 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
-from driftwatch.records import NS, Block, Fault, TimeQuality, sample_time_ns
+from driftwatch.records import Block, Fault, TimeQuality, sample_time_ns
 from driftwatch.stream.source import SourceFailedError
-
-RATE = 1000
-START_NS = 1_767_225_600 * NS
+from two_channels import RATE, START_NS
 
 
 @dataclass(frozen=True)

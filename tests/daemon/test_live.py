@@ -20,7 +20,7 @@ from types import SimpleNamespace
 from typing import Any
 
 import pytest
-from driftwatch.config import Configuration, SimulatedSourceConfig, loads
+from driftwatch.config import Configuration, SimulatedSourceConfig
 from driftwatch.daemon import crew, live
 from driftwatch.daemon.crew import LOOK_S
 from driftwatch.daemon.feed import PacedFeed
@@ -36,7 +36,6 @@ from driftwatch.records import (
     Health,
     Heartbeat,
     Measurement,
-    Method,
     Origin,
     Phase,
     Run,
@@ -45,44 +44,12 @@ from driftwatch.records import (
 from driftwatch.store.errors import CommitError
 from driftwatch.stream.simulated import SimulatedSource
 from driftwatch.stream.source import Source, SourceFailedError
-from odd_source import RATE, START_NS, OddSource
+from odd_source import OddSource
 from ordered import LONG_S, children, is_running, until
+from two_channels import RATE, RUN, START_NS, ambient, configuration
 
 DUE_S = 0.2
 """How long a record may wait for its commit, seconds."""
-
-RUN = "5f0e8f0e-1111-4222-8333-123456789abc"
-
-CONFIG = """
-schema = 1
-[station]
-name = "s"
-[[channel]]
-name = "a"
-[[channel]]
-name = "b"
-input = 2
-[[mode]]
-name = "m"
-channel = "a"
-search_hz = [80.0, 160.0]
-window_s = 1.0
-step_s = 0.25
-[[mode.band]]
-name = "low"
-low = 130.0
-on_delay_s = 1.0
-[[mode]]
-name = "m"
-channel = "b"
-search_hz = [80.0, 160.0]
-methods = ["ambient", "ringdown"]
-window_s = 1.0
-step_s = 0.5
-[daemon]
-workers = {workers}
-queue_s = {queue_s}
-"""
 
 
 def model(seconds: float) -> SimulatedSource:
@@ -96,10 +63,6 @@ def model(seconds: float) -> SimulatedSource:
         }
     )  # fmt: skip
     return SimulatedSource(chosen, START_NS)
-
-
-def configuration(workers: int = 1, queue_s: float = 20.0) -> Configuration:
-    return loads(CONFIG.format(workers=workers, queue_s=queue_s))
 
 
 def station_of(config: Configuration, source: Source) -> Station:
@@ -427,7 +390,9 @@ def test_a_worker_that_dies_in_a_loop_is_told_as_such_and_the_run_goes_on_once_i
     assert len(killed) == 6
     are_numbered(trial.records)
     assert trial.bodies(Run)[-1].samples == 18 * RATE
-    told, expected = (_ambient(records) for records in (trial.records, whole(source, configuration())))
+    told, expected = (
+        ambient(one.body for one in records) for records in (trial.records, whole(source, configuration()))
+    )
     assert set(told) <= set(expected)
     lost = sorted(first for _, first in set(expected) - set(told))
     changed = sorted(about[1] for about in told if told[about] != expected[about])
@@ -447,12 +412,6 @@ def test_a_worker_that_dies_in_a_loop_is_told_as_such_and_the_run_goes_on_once_i
     assert [body.phase for body in passed] == [Phase.BEGIN, Phase.CONTINUE, Phase.END]
     assert {body.fault for body in passed} == {Fault.PROCESS}
     assert all("so a, b pass over it: its windows are missing" in body.detail for body in passed)
-
-
-def _ambient(records: list[Envelope]) -> dict[tuple[str, int], Measurement]:
-    """Return the measurements of ambient windows by channel and first sample."""
-    measured = [one.body for one in records if isinstance(one.body, Measurement)]
-    return {(body.channel, body.first_sample): body for body in measured if body.method is Method.AMBIENT}
 
 
 def test_nothing_of_the_children_is_left_when_the_keeper_fails() -> None:

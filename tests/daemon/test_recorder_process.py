@@ -13,18 +13,15 @@ import pytest
 from driftwatch.config import loads
 from driftwatch.daemon import recorder as module
 from driftwatch.daemon.child import Child
-from driftwatch.daemon.messages import ClockSeen, Enough, LiveSource, Record, Recorded
-from driftwatch.records import NS, Clock, Fault, TimeQuality
+from driftwatch.daemon.messages import ClockSeen, Enough, Record, Recorded
+from driftwatch.records import Clock, Fault
 from driftwatch.stream.recording import open_recordings
 from driftwatch.stream.ring import Ring, Shape
 from numpy.typing import NDArray
 from ordered import LONG_S, Do, hurried, is_running, until
+from two_channels import RATE, RUN, SOURCE
 
-RATE = 1000
 FRAMES = 100
-START_NS = 1_767_225_600 * NS
-RUN = "5f0e8f0e-1111-4222-8333-123456789abc"
-SOURCE = LiveSource("model", RATE, 2, START_NS, TimeQuality.FREE, ("model",), ())
 CONFIG = loads("""
 schema = 1
 [station]

@@ -7,47 +7,23 @@ from __future__ import annotations
 
 import itertools
 import threading
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterator
 from contextlib import contextmanager
 from multiprocessing import Pipe
 from typing import Any
 
 import numpy as np
 import pytest
-from driftwatch.config import loads
-from driftwatch.daemon.messages import Finished, LiveSource, Measure, MeasuredBlock, MeasuredBlocks
+from driftwatch.daemon.messages import Finished, Measure, MeasuredBlock, MeasuredBlocks
 from driftwatch.daemon.tracker import work
 from driftwatch.pipeline.group import ChannelGroup
 from driftwatch.pipeline.reading import Reading
-from driftwatch.records import NS, Block, Fault, Measurement, Method, TimeQuality, sample_time_ns
+from driftwatch.records import Block, Fault, sample_time_ns
 from driftwatch.stream.ring import OverrunError, Ring, Shape
+from two_channels import RATE, SOURCE, START_NS, ambient, configuration
 
-RATE = 1000
 FRAMES = 100
-START_NS = 1_767_225_600 * NS
-SOURCE = LiveSource("model", RATE, 2, START_NS, TimeQuality.FREE, ("model",), ())
-CONFIG = loads("""
-schema = 1
-[station]
-name = "s"
-[[channel]]
-name = "a"
-[[channel]]
-name = "b"
-input = 2
-[[mode]]
-name = "m"
-channel = "a"
-search_hz = [80.0, 160.0]
-methods = ["ambient", "ringdown"]
-window_s = 1.0
-step_s = 0.25
-[[mode]]
-name = "m"
-channel = "b"
-search_hz = [80.0, 160.0]
-window_s = 0.5
-""")
+CONFIG = configuration()
 CHANNELS = ("a", "b")
 COUNT = 200
 """Blocks in all: 20 s and, between blocks 120 and 121, a gap of 3 s."""
@@ -177,8 +153,8 @@ def test_where_the_ring_holds_too_little_history_only_windows_of_before_are_lost
         messages = told(ring, 160, first_of(159) + FRAMES)
     blocks = blocks_in(messages)
     assert [block.number for block in blocks] == list(range(160, COUNT))
-    again = _ambient(itertools.chain(*(block.readings for block in blocks), messages[-1].readings))
-    whole = _ambient(itertools.chain(*WHOLE[160:], LAST))
+    again = ambient(one.body for one in itertools.chain(*(block.readings for block in blocks), messages[-1].readings))
+    whole = ambient(one.body for one in itertools.chain(*WHOLE[160:], LAST))
     first = first_of(oldest)
     assert list(again) == [about for about in whole if about[1] >= first]
     for about, body in again.items():
@@ -186,13 +162,6 @@ def test_where_the_ring_holds_too_little_history_only_windows_of_before_are_lost
         assert (body.usable, body.reasons) == (whole[about].usable, whole[about].reasons)
         if about[1] >= first + 1.2 * RATE:
             assert body == whole[about]
-
-
-def _ambient(readings: Iterable[Reading]) -> dict[tuple[str, int], Measurement]:
-    """Return the measurements of ambient windows by channel and first sample."""
-    bodies = [one.body for one in readings]
-    measured = [body for body in bodies if isinstance(body, Measurement) and body.method is Method.AMBIENT]
-    return {(body.channel, body.first_sample): body for body in measured}
 
 
 def test_blocks_that_were_written_over_are_told_as_an_error() -> None:
