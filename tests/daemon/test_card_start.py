@@ -193,15 +193,11 @@ def refused(done: subprocess.CompletedProcess[str], config: Path) -> str:
 
 
 def test_a_device_that_is_not_there_is_refused_with_those_that_are(server: Rig, tmp_path: Path) -> None:
-    config = configuration(tmp_path, device="probe")
+    """And leaves no state folder that is named apart; below none that is not."""
+    config = configuration(tmp_path, device="probe", daemon='state = "apart"')
     line = refused(run(config, server.env), config)
     assert "no sound input is called 'probe'" in line
     assert all(f"'{name}, ALSA'" in line for name in ("rig", "rigfile", "default"))
-
-
-def test_a_refusal_leaves_no_state_folder_either_that_is_named_apart(server: Rig, tmp_path: Path) -> None:
-    config = configuration(tmp_path, device="probe", daemon='state = "apart"')
-    assert "no sound input" in refused(run(config, server.env), config)
 
 
 def test_a_name_that_means_several_is_refused_with_each_of_them(server: Rig, tmp_path: Path) -> None:
