@@ -24,9 +24,14 @@ from driftwatch.records import (
     TimeQuality,
     fields_of,
 )
+from hypothesis import HealthCheck, settings
 from hypothesis import strategies as st
 
 pytest_plugins = ["soundrig.fixtures"]
+
+# Tests run side by side, some at the lowest priority: how long an example takes says nothing.
+settings.register_profile("busy", deadline=None, suppress_health_check=[HealthCheck.too_slow])
+settings.load_profile("busy")
 
 _TEXT = st.text(st.characters(exclude_categories=["Cs"]), max_size=20)
 _INTEGERS = st.integers(-(2**63), 2**63 - 1)
