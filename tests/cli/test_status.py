@@ -268,7 +268,7 @@ def test_of_a_crafted_store_the_worst_comes_first_with_the_last_word_on_everythi
         ([_fault(1, "open"), _fault(2, "open", Phase.END)], _beat(), "no mode has a reading yet"),
         ([_track(1, "a", TrackStatus.LOST)], _beat(), "no alert stands, 0 of 1 mode tracked"),
     ],
-    ids=["late samples", "no sample", "an old copy", "a fault", "no mode", "a mode that is not found"],
+    ids=["late samples", "no sample", "unsaved", "an old copy", "a fault", "no mode", "a mode that is not found"],
 )
 def test_what_cannot_be_told_says_why(crafted: Any, records: list[Envelope], beat: Heartbeat, says: str) -> None:
     done = crafted(records, beat)
