@@ -25,6 +25,9 @@ if TYPE_CHECKING:
 PAGE_RECORDS = 500
 """Most records in one answer to ``since``."""
 
+BUSY_MS = 200
+"""How long a lock on the database is waited for, milliseconds: an asker hears within a second."""
+
 
 @dataclass(frozen=True, slots=True)
 class Stand:
@@ -62,7 +65,7 @@ class Answers:
         if request.action == "status":
             return self._status()
         try:
-            with Reader.open(self._store) as reader:
+            with Reader.open(self._store, BUSY_MS) as reader:
                 found = page(reader, request.run, request.sequence, PAGE_RECORDS)
         except StoreError as error:
             raise LookFailedError(str(error)) from None
@@ -71,7 +74,7 @@ class Answers:
     def known(self, request: str) -> CommandDone | None:
         """Return the record of a command by the id of its request; None: there is none, or it cannot be told."""
         try:
-            with Reader.open(self._store) as reader:
+            with Reader.open(self._store, BUSY_MS) as reader:
                 return command_of(reader, request)
         except StoreError:
             return None  # in trouble: a command that is new must be taken all the same

@@ -108,8 +108,8 @@ def writing_engine(path: Path, busy_ms: int | None = None) -> Engine:
     return engine
 
 
-def reading_engine(path: Path) -> Engine:
-    """Return an engine that can only read.
+def reading_engine(path: Path, busy_ms: int | None = None) -> Engine:
+    """Return an engine that can only read; it waits for a lock as long as `busy_ms` says, None: `BUSY_MS`.
 
     Raises
     ------
@@ -121,7 +121,7 @@ def reading_engine(path: Path) -> Engine:
     if not path.exists():
         raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
     refuse_foreign(path)
-    engine = _engine(path, _reading_mode(path), NullPool)
+    engine = _engine(path, _reading_mode(path), NullPool, busy_ms)
 
     def begin(connection: Connection) -> None:
         connection.exec_driver_sql("BEGIN")

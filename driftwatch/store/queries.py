@@ -64,8 +64,10 @@ class Reader:
         self._engine = engine
 
     @classmethod
-    def open(cls, url: str | Path) -> Reader:
+    def open(cls, url: str | Path, busy_ms: int | None = None) -> Reader:
         """Open a database for reading; `url` is a path or ``sqlite:///PATH``, relative to the current folder.
+
+        A lock of somebody else is waited for as long as usual, or `busy_ms` milliseconds.
 
         Raises
         ------
@@ -73,7 +75,7 @@ class Reader:
             When it is missing, foreign, damaged, or of another schema.
         """
         path = database_path(str(url), Path.cwd())
-        engine = reading_engine(path)
+        engine = reading_engine(path, busy_ms)
         try:
             with engine.begin() as connection:
                 refuse_other_schema(path, revision_of(connection))
