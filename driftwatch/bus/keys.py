@@ -292,7 +292,13 @@ class KeyFolder:
         except OSError as error:
             raise unusable(self.path, error) from None
         try:
-            refuse_open(self.path, os.fstat(folder).st_mode)
+            found = os.fstat(folder)
+            refuse_open(self.path, found.st_mode)
+            if found.st_uid not in (os.geteuid(), self.path.parent.stat().st_uid):
+                raise KeysError(
+                    f"{self.path} belongs to user {found.st_uid}; expected the user who runs the daemon: whoever made it "
+                    "could read the keys; see who did, then move it away"
+                )
             fcntl.flock(folder, fcntl.LOCK_EX)
             yield
         finally:

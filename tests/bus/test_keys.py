@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import stat
 import threading
 from pathlib import Path
@@ -175,3 +176,25 @@ def test_grants_at_the_same_time_are_all_kept(folder: KeyFolder, tmp_path: Path)
         thread.join()
     assert sorted(one.name for one in folder.granted()) == sorted(names)
     assert len({one.public for one in folder.granted()}) == len(names)
+
+
+@pytest.mark.skipif(os.geteuid() != 0, reason="only root can give a folder away")
+def test_a_folder_that_somebody_else_put_there_is_refused(tmp_path: Path) -> None:
+    """In a state folder where others may write one could be made before the first start, to read the keys."""
+    (tmp_path / "keys").mkdir(0o700)
+    os.chown(tmp_path / "keys", 12_345, 12_345)
+    with pytest.raises(KeysError, match="belongs to user 12345; expected the user who runs the daemon"):
+        KeyFolder(tmp_path).ensure("ann")
+    assert list((tmp_path / "keys").iterdir()) == []
+
+
+@pytest.mark.skipif(os.geteuid() != 0, reason="only root can act for another user")
+def test_what_root_grants_is_the_daemons_users(tmp_path: Path) -> None:
+    state = tmp_path / "state"
+    state.mkdir(0o700)
+    os.chown(state, 12_345, 12_345)
+    keys = KeyFolder(state)
+    keys.ensure("ann")
+    keys.grant("x", Role.LOOK, AT_NS, WHERE, tmp_path / "x.key")
+    assert {path.stat().st_uid for path in (keys.path, *keys.path.iterdir())} == {12_345}
+    assert (tmp_path / "x.key").stat().st_uid == tmp_path.stat().st_uid
