@@ -23,6 +23,7 @@ COMMANDS = {
     "readings": "Print stored measurements and track points.",
     "runs": "Print what runs a store holds.",
     "listen": "Print what the bus carries.",
+    "store": "Look after a store: info, check, prune, backup.",
     "keys": "Grant, list and revoke keys for others.",
 }
 """Name and summary of every command: the group's help needs no import of theirs."""

@@ -75,7 +75,7 @@ def opened_store(store: str | None, config: str | None) -> Iterator[Reader]:
     from driftwatch.store.queries import NoSuchRunError, Reader
 
     try:
-        reader = Reader.open(_url(store, config))
+        reader = Reader.open(store_url(store, config))
     except StoreError as error:
         raise click.UsageError(str(error)) from None
     with reader:
@@ -87,7 +87,14 @@ def opened_store(store: str | None, config: str | None) -> Iterator[Reader]:
             raise click.ClickException(str(error)) from None
 
 
-def _url(store: str | None, config: str | None) -> str:
+def store_url(store: str | None, config: str | None) -> str:
+    """Return which database the options name.
+
+    Raises
+    ------
+    click.UsageError
+        When they name two, or none and there is none by the name that is looked for.
+    """
     if store is not None and config is not None:
         raise click.UsageError("got both --store and --config; expected one of them; leave out the other")
     if config is not None:

@@ -8,7 +8,7 @@ from contextlib import contextmanager
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
-    from rich.progress import ProgressColumn
+    from rich.progress import Progress, ProgressColumn
 
 
 @contextmanager
@@ -29,26 +29,35 @@ def progress(length: int | None, rate_hz: int, *, shown: bool = True) -> Iterato
     callable
         To be called with the sample reached.
     """
+    with _bar(_speed_column(rate_hz), shown=shown) as bar:
+        task = bar.add_task("", total=length)
+        yield lambda sample: bar.update(task, completed=sample)
+
+
+@contextmanager
+def working(*, shown: bool = True) -> Iterator[Callable[[int, int], None]]:
+    """Show a bar as `progress` does; give what moves it, to be called with what is done and what there is in all."""
+    with _bar(shown=shown) as bar:
+        task = bar.add_task("", total=None)
+        yield lambda done, total: bar.update(task, completed=done, total=total)
+
+
+def _bar(*more: ProgressColumn, shown: bool) -> Progress:
     from rich.console import Console
     from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 
-    columns = (
+    console = Console(stderr=True)
+    return Progress(
         TextColumn("{task.percentage:3.0f} %"),
         BarColumn(),
-        _speed_column(rate_hz),
+        *more,
         TimeRemainingColumn(),
         TextColumn("left"),
-    )
-    console = Console(stderr=True)
-    with Progress(
-        *columns,
         console=console,
         transient=True,
         redirect_stdout=sys.stdout.isatty(),  # lines go above the bar; what is printed to a file stays out of this
         disable=not (shown and console.is_terminal),
-    ) as bar:
-        task = bar.add_task("", total=length)
-        yield lambda sample: bar.update(task, completed=sample)
+    )
 
 
 def _speed_column(rate_hz: int) -> ProgressColumn:

@@ -4,12 +4,12 @@ from __future__ import annotations
 
 import fcntl
 import os
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from driftwatch.store.errors import StoreBusyError, unreachable
 
 if TYPE_CHECKING:
-    from pathlib import Path
     from typing import Self
 
 
@@ -70,7 +70,7 @@ class HolderLock:
 
     def _holder(self) -> str:
         pid, _, station = os.pread(self._file, 200, 0).decode(errors="replace").strip().partition(" ")
-        return f"process {pid or 'unknown'} (station {station or 'unknown'!r})"
+        return _words_of(pid, station)
 
     def _is_at_its_place(self) -> bool:
         try:
@@ -124,7 +124,7 @@ class WriterLock(HolderLock):
 
     def __init__(self, database: Path, station: str) -> None:
         self._database = database
-        super().__init__(database.with_name(database.name + ".lock"), station)
+        super().__init__(_lock_path(database), station)
 
     def _take(self) -> None:
         database = self._database
@@ -137,3 +137,28 @@ class WriterLock(HolderLock):
                 f"{database}: {error.holder} is writing to this database; expected to be its only writer; "
                 "stop that process, or name another database with --store"
             ) from None
+
+
+def holder_of(database: Path) -> str | None:
+    """Return who writes to a database, ``process PID (station 'NAME')``; None: nobody.
+
+    The system's list of locks is read, not the lock asked for: whoever starts at that moment would be refused.
+    """
+    path = _lock_path(database)
+    try:
+        inode = str(path.stat().st_ino)
+        held = Path("/proc/locks").read_text(encoding="ascii", errors="replace").splitlines()
+        if not any(words[1] == "FLOCK" and words[5].rpartition(":")[2] == inode for words in map(str.split, held)):
+            return None
+        pid, _, station = path.read_text(encoding="utf-8", errors="replace").strip().partition(" ")
+    except OSError:
+        return None
+    return _words_of(pid, station)
+
+
+def _words_of(pid: str, station: str) -> str:
+    return f"process {pid or 'unknown'} (station {station or 'unknown'!r})"
+
+
+def _lock_path(database: Path) -> Path:
+    return database.with_name(database.name + ".lock")

@@ -121,7 +121,7 @@ def reading_engine(path: Path, busy_ms: int | None = None) -> Engine:
     if not path.exists():
         raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
     refuse_foreign(path)
-    engine = _engine(path, _reading_mode(path), NullPool, busy_ms)
+    engine = _engine(path, reading_mode(path), NullPool, busy_ms)
 
     def begin(connection: Connection) -> None:
         connection.exec_driver_sql("BEGIN")
@@ -130,7 +130,8 @@ def reading_engine(path: Path, busy_ms: int | None = None) -> Engine:
     return engine
 
 
-def _reading_mode(path: Path) -> str:
+def reading_mode(path: Path) -> str:
+    """Return the parameter of a URI by which a database can be read where it lies."""
     # Write-ahead logging needs a side file even to read; where none can be made and none is in use, none is needed.
     write_ahead = path.with_name(path.name + "-wal")
     archived = not os.access(path.parent, os.W_OK, effective_ids=os.access in os.supports_effective_ids)

@@ -67,12 +67,26 @@ def prune(writer: Writer, keep_days: float, now_ns: int, rows: int = STEP_ROWS) 
     return removed
 
 
-def _remove_old(connection: Connection, kind: str, cut_ns: int, rows: int) -> int:
-    table = TABLES[kind]
+def count_old(connection: Connection, keep_days: float, now_ns: int) -> int:
+    """Return about how many rows pruning would take away: those of the runs' frame are left out."""
+    cut_ns = now_ns - round(keep_days * _DAY_NS)
+    return sum(
+        connection.scalar(sa.select(sa.func.count()).select_from(TABLES[kind]).where(*_is_old(TABLES[kind], cut_ns)))
+        or 0
+        for kind in KINDS
+        if kind not in ("run", "baseline")
+    )
+
+
+def _is_old(table: sa.Table, cut_ns: int) -> tuple[sa.ColumnElement[bool], ...]:
     old_runs = sa.select(HEADER.c.id).where(HEADER.c.opened_ns < cut_ns)
     # The sum keeps the planner from reading whole runs by their number: the index by time finds the old rows at once.
-    of_old_run = (table.c.header + 0).in_(old_runs)
-    old = sa.select(table.c.header, table.c.sequence).where(table.c.time_ns < cut_ns, of_old_run)
+    return (table.c.time_ns < cut_ns, (table.c.header + 0).in_(old_runs))
+
+
+def _remove_old(connection: Connection, kind: str, cut_ns: int, rows: int) -> int:
+    table = TABLES[kind]
+    old = sa.select(table.c.header, table.c.sequence).where(*_is_old(table, cut_ns))
     if kind == "alert":
         old = old.where(~_last_word(table))
     chosen = old.order_by(table.c.time_ns).limit(rows)
