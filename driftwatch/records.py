@@ -141,6 +141,20 @@ class Phase(StrEnum):
     END = "end"
 
 
+class Action(StrEnum):
+    """What a command can ask for."""
+
+    ACKNOWLEDGE = "acknowledge"  # `target` names the alert
+    NOTE = "note"  # `reason` is the text; with `target` `HANDOVER` it is meant for the next shift
+    COVARIATE = "covariate"  # `target` names it, `value` and `unit` are its value; no value: known to be missing
+    RELOAD = "reload"  # the configuration; carried out by the daemon
+    STOP = "stop"  # the daemon; carried out by the daemon
+
+
+HANDOVER = "handover"
+"""Target of a note for the next shift."""
+
+
 # ---------------------------------------------------------------------------------------------- stream items
 
 
@@ -186,7 +200,7 @@ class Command:
     time_ns: int  # stream time at which it entered
     request: str  # idempotency key chosen by the asker
     by: str  # person or program
-    action: str  # what to do
+    action: str  # what to do, see `Action`
     target: str | None  # on what
     reason: str | None  # why
     value: float | None = None  # of a covariate, in `unit`

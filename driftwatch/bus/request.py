@@ -12,6 +12,7 @@ from typing import Any, NoReturn
 
 from driftwatch.bus.errors import KeysError, WireError
 from driftwatch.bus.keys import Role, checked_name
+from driftwatch.records import HANDOVER
 
 LARGEST_REQUEST = 16_384
 """Bytes of a request."""
@@ -21,9 +22,6 @@ LONGEST_TARGET = 200
 LONGEST_REASON = 2000
 LONGEST_UNIT = 32
 """Characters."""
-
-HANDOVER = "handover"
-"""Target of a note for the next shift."""
 
 FIELDS: Mapping[str, tuple[str, ...]] = {
     "status": (),

@@ -17,7 +17,7 @@ from driftwatch.cli.looking import (
     store_options,
 )
 from driftwatch.cli.verbs import LookingGroup
-from driftwatch.records import Note
+from driftwatch.records import HANDOVER, Note
 
 
 @click.group("notes", cls=LookingGroup)
@@ -83,6 +83,4 @@ def added(text: str, handover: bool, asked: Asked) -> None:
     Example: driftwatch notes add "belt tensioned" --config config/demo.toml
     Example: driftwatch notes add "watch the drive end, it ran hot" --handover --by anna --config config/demo.toml
     """  # noqa: D301 - \b is click's mark for lines that stay as they are
-    from driftwatch.pipeline.commands import HANDOVER
-
     give(asked, "note", target=HANDOVER if handover else None, reason=text)

@@ -105,7 +105,8 @@ def _opened(configuration: Configuration, recordings: tuple[Path, ...], start_ns
 
 def _commands(store: str, run: str) -> list[Command]:
     """Return what was asked for in a run, in order."""
-    from driftwatch.pipeline.commands import Action, again
+    from driftwatch.pipeline.commands import again
+    from driftwatch.records import Action
     from driftwatch.store.queries import Wanted
 
     with opened_store(store, None) as reader:

@@ -6,8 +6,7 @@ import queue
 from typing import TYPE_CHECKING
 
 from driftwatch.bus.clerk import Progress
-from driftwatch.pipeline.commands import Action
-from driftwatch.records import Command
+from driftwatch.records import Action, Command
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence

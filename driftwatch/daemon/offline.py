@@ -12,14 +12,12 @@ from driftwatch.alert.machine import Event, after
 from driftwatch.daemon.state import StateLock, state_folder
 from driftwatch.pipeline.commands import (
     DONE,
-    HANDOVER,
-    Action,
     acknowledgement,
     done_of,
     nothing_to_acknowledge,
     unknown_alert,
 )
-from driftwatch.records import CommandDone, CovariateValue, Note
+from driftwatch.records import HANDOVER, Action, CommandDone, CovariateValue, Note
 from driftwatch.store.errors import StoreUnreachableError
 from driftwatch.store.location import database_path
 from driftwatch.store.tail import Tail

@@ -19,9 +19,9 @@ from driftwatch.daemon.notify import ServiceManager
 from driftwatch.daemon.pruner import Pruner
 from driftwatch.daemon.reload import reload_plan
 from driftwatch.daemon.state import StateLock, recordings_folder, state_folder
-from driftwatch.pipeline.commands import DONE, Action
+from driftwatch.pipeline.commands import DONE
 from driftwatch.pipeline.station import RunHeader, Station
-from driftwatch.records import Command, Envelope, Heartbeat, Origin
+from driftwatch.records import Action, Command, Envelope, Heartbeat, Origin
 from driftwatch.store.errors import CommitError, Trouble, unreachable
 from driftwatch.store.location import database_path
 from driftwatch.store.lock import HolderLock, WriterLock

@@ -4,23 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import replace
-from enum import StrEnum
 
-from driftwatch.records import NS, Block, Command, CommandDone, Envelope, Tick, sample_time_ns
-
-
-class Action(StrEnum):
-    """What can be asked."""
-
-    ACKNOWLEDGE = "acknowledge"  # `target` names the alert
-    NOTE = "note"  # `reason` is the text; with `target` `HANDOVER` it is meant for the next shift
-    COVARIATE = "covariate"  # `target` names it, `value` and `unit` are its value; no value: known to be missing
-    RELOAD = "reload"  # the configuration; carried out by the daemon
-    STOP = "stop"  # the daemon; carried out by the daemon
-
-
-HANDOVER = "handover"
-"""Target of a note for the next shift."""
+from driftwatch.records import NS, Action, Block, Command, CommandDone, Envelope, Tick, sample_time_ns
 
 DONE = "done"
 """Outcome of a command that did what it asked for."""

@@ -14,8 +14,6 @@ from driftwatch import __version__
 from driftwatch.alert.book import AlertBook, AlertSettings, ConditionSettings, WatchedMode
 from driftwatch.pipeline.commands import (
     DONE,
-    HANDOVER,
-    Action,
     acknowledgement,
     done_of,
     nothing_to_acknowledge,
@@ -26,7 +24,9 @@ from driftwatch.pipeline.gaps import Gaps
 from driftwatch.pipeline.group import ChannelGroup, measured_channels
 from driftwatch.pipeline.reading import Reading
 from driftwatch.records import (
+    HANDOVER,
     NS,
+    Action,
     Block,
     Body,
     Clock,
