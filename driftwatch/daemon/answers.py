@@ -65,7 +65,7 @@ class Answers:
         if request.action == "status":
             return self._status()
         try:
-            with Reader.open(self._store, BUSY_MS) as reader:
+            with Reader.open(self._store, BUSY_MS, beside_writer=True) as reader:
                 found = page(reader, request.run, request.sequence, PAGE_RECORDS)
         except StoreError as error:
             raise LookFailedError(str(error)) from None
@@ -74,7 +74,7 @@ class Answers:
     def known(self, request: str) -> CommandDone | None:
         """Return the record of a command by the id of its request; None: there is none, or it cannot be told."""
         try:
-            with Reader.open(self._store, BUSY_MS) as reader:
+            with Reader.open(self._store, BUSY_MS, beside_writer=True) as reader:
                 return command_of(reader, request)
         except StoreError:
             return None  # in trouble: a command that is new must be taken all the same

@@ -108,8 +108,12 @@ def writing_engine(path: Path, busy_ms: int | None = None) -> Engine:
     return engine
 
 
-def reading_engine(path: Path, busy_ms: int | None = None) -> Engine:
+def reading_engine(path: Path, busy_ms: int | None = None, *, beside_writer: bool = False) -> Engine:
     """Return an engine that can only read; it waits for a lock as long as `busy_ms` says, None: `BUSY_MS`.
+
+    With `beside_writer` the file is taken for ours: it must be said in a process that has it open for writing. The
+    system drops all locks of a process on a file when it closes the file once, whoever opened it; the library knows
+    that of its own connections only. Without its locks the writer's log would be deleted by whoever closes next.
 
     Raises
     ------
@@ -120,7 +124,8 @@ def reading_engine(path: Path, busy_ms: int | None = None) -> Engine:
     """
     if not path.exists():
         raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
-    refuse_foreign(path)
+    if not beside_writer:
+        refuse_foreign(path)
     engine = _engine(path, reading_mode(path), NullPool, busy_ms)
 
     def begin(connection: Connection) -> None:

@@ -64,10 +64,11 @@ class Reader:
         self._engine = engine
 
     @classmethod
-    def open(cls, url: str | Path, busy_ms: int | None = None) -> Reader:
+    def open(cls, url: str | Path, busy_ms: int | None = None, *, beside_writer: bool = False) -> Reader:
         """Open a database for reading; `url` is a path or ``sqlite:///PATH``, relative to the current folder.
 
-        A lock of somebody else is waited for as long as usual, or `busy_ms` milliseconds.
+        A lock of somebody else is waited for as long as usual, or `busy_ms` milliseconds. `beside_writer` must be said
+        in a process that writes to it, see `reading_engine`.
 
         Raises
         ------
@@ -75,7 +76,7 @@ class Reader:
             When it is missing, foreign, damaged, or of another schema.
         """
         path = database_path(str(url), Path.cwd())
-        engine = reading_engine(path, busy_ms)
+        engine = reading_engine(path, busy_ms, beside_writer=beside_writer)
         try:
             with engine.begin() as connection:
                 refuse_other_schema(path, revision_of(connection))
