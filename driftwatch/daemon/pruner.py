@@ -49,6 +49,6 @@ class Pruner:
         if now_monotonic < self._due:
             return
         self._due = now_monotonic + AFTER_FAILURE_S
-        self._due = (
-            now_monotonic if prune(self._writer, self.keep_days, self._utc_ns()) else now_monotonic + LOOK_EVERY_S
-        )
+        removed = prune(self._writer, self.keep_days, self._utc_ns())
+        self.is_done = not removed
+        self._due = now_monotonic + (0.0 if removed else LOOK_EVERY_S)

@@ -16,8 +16,8 @@ if TYPE_CHECKING:
 FOLD_COMMITS = 100
 """Commits after which the log is folded: a quarter of a minute of a live run, about a thousand pages."""
 
-FOLD_ROWS = 10_000
-"""Rows after which it is folded, where groups are large."""
+FOLD_ROWS = 5000
+"""Rows after which it is folded, where groups are large or old rows are removed: no fold may take long."""
 
 LOG_BYTES = 32 * 2**20
 """Size from which the log is emptied by force; where that does not succeed, a reader pins it."""

@@ -178,7 +178,6 @@ class Writer:
         self._headers = headers
         self._unnamed = []
         self._log = self._log or file_at(log_of(self.path))
-        self._ahead.committed(len(envelopes))
 
     @property
     def pinned_bytes(self) -> int:
@@ -225,7 +224,7 @@ class Writer:
         """
         if not (self._is_open and self.is_at_its_place):
             raise file_gone(self.path)
-        return _Transaction(self._connection, self.path, synchronous)
+        return _Transaction(self._connection, self.path, synchronous, self._ahead.committed)
 
     def forget_headers(self) -> None:
         """Look up again what the records of a run share: rows of ``header`` went."""
@@ -317,12 +316,14 @@ class Writer:
 class _Transaction:
     """One transaction of the writer, with the errors of the library translated at its edge."""
 
-    def __init__(self, connection: Connection, path: Path, synchronous: bool) -> None:
+    def __init__(self, connection: Connection, path: Path, synchronous: bool, committed: Callable[[int], None]) -> None:
         self._connection = connection
         self._path = path
         self._synchronous = synchronous
+        self._committed = committed  # is told how many rows were changed
 
     def __enter__(self) -> Connection:
+        self._before = self._changes()
         try:
             self._say("FULL" if self._synchronous else "NORMAL")
             self._begun = self._connection.begin()
@@ -337,10 +338,15 @@ class _Transaction:
             except sa.exc.DBAPIError as failure:
                 self._begun.rollback()
                 raise commit_failed(self._path, failure) from failure
+            self._committed(self._changes() - self._before)
             return
         self._begun.rollback()
         if isinstance(error, sa.exc.DBAPIError):
             raise commit_failed(self._path, error) from error
+
+    def _changes(self) -> int:
+        driver: Any = self._connection.connection.driver_connection
+        return int(driver.total_changes)
 
     def _say(self, level: str) -> None:
         # It has no effect inside a transaction, so it is said before one, past the library that would begin one.

@@ -118,22 +118,3 @@ def test_a_disk_that_fills_under_way_ends_the_replay_and_the_rows_stay(
     records = _failed(stalled, objects, "rows.db: nothing of this group was stored: disk I/O error; the disk does not")
     assert len(records) == stalled.stored
     assert _rows(folder / "rows.db") == stalled.stored
-
-
-@pytest.mark.parametrize("how", ["deleted", "full"])
-def test_a_store_that_fails_ends_a_live_run_in_one_line(bench: Any, folder: Path, how: str) -> None:
-    daemon = bench.start("run", bench.config(pace=10.0))
-    assert daemon.stdout is not None
-    while "tracking" not in (line := daemon.stdout.readline()):
-        assert line
-    if how == "deleted":
-        (folder / "state" / "bench.db").unlink()
-    else:
-        resource.prlimit(daemon.pid, resource.RLIMIT_FSIZE, (4096, 4096))
-    _, err = daemon.communicate(timeout=20)
-    assert daemon.returncode == 1
-    assert err.splitlines()[-1].startswith("Error: ")
-    assert "bench.db: nothing of this group was stored" in err
-    assert "Traceback" not in err
-    if how == "full":
-        assert _rows(folder / "state" / "bench.db") > 10
