@@ -296,8 +296,8 @@ class KeyFolder:
             refuse_open(self.path, found.st_mode)
             if found.st_uid not in (os.geteuid(), self.path.parent.stat().st_uid):
                 raise KeysError(
-                    f"{self.path} belongs to user {found.st_uid}; expected the user who runs the daemon: whoever made it "
-                    "could read the keys; see who did, then move it away"
+                    f"{self.path} belongs to user {found.st_uid}; expected the user who runs the daemon: whoever "
+                    "made it could read the keys; see who did, then move it away"
                 )
             fcntl.flock(folder, fcntl.LOCK_EX)
             yield

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import sqlite3
 import subprocess
 import sys
 import time
@@ -143,6 +144,23 @@ def test_a_key_works_as_soon_as_it_is_granted_and_no_longer_than_it_is(daemon: O
     daemon.told("No longer let in: visitor")
     daemon.told("Refused: a request with a revoked key")
     daemon.told("Refused: a key that is not granted wanted to give commands")
+
+
+def test_while_the_store_takes_nothing_a_command_is_obeyed_and_the_answer_says_that_it_is_not_stored(
+    daemon: Obeyed, asker: Asker
+) -> None:
+    """The lock is held until the answer is there: it cannot have been stored before."""
+    locked = sqlite3.connect(daemon.path.parent / "state" / "rows.db", isolation_level=None)
+    locked.execute("BEGIN IMMEDIATE")
+    try:
+        reply = asker.ask("note", reason="under lock", request="locked")
+        assert (reply["ok"], reply["stored"]) == (True, False)
+        assert "not stored yet" in reply["outcome"] or "not carried out yet" in reply["outcome"]
+        assert asker.ask("status")["ok"]
+    finally:
+        locked.close()
+    assert settled(asker, "note", reason="under lock", request="locked")["outcome"] == "done"
+    assert [one.body.text for one in stored(daemon, "note")].count("under lock") == 1
 
 
 def test_stop_is_recorded_then_obeyed_and_after_a_restart_no_request_is_done_again(daemon: Obeyed) -> None:
