@@ -262,11 +262,11 @@ class Writer:
         StoreError
             When no other can be begun; it may be tried again.
         """
+        if self._is_open and self.is_at_its_place:
+            return None  # and was not looked at: to close it once more would drop our locks, see `reading_engine`
         refuse_foreign(self.path)
         refuse_read_only(self.path)
         if self._is_open:
-            if self.is_at_its_place:
-                return None
             self._unnamed.append(self._left_behind(self._clock()))
             self._let_go()
         elif (damage := damage_in(self.path)) is not None:
