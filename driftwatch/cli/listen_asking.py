@@ -32,6 +32,7 @@ class Way:
     endpoint: str  # where it publishes
     control: str | None = None  # where it answers; None: what the key's file says
     key: Path | None = None  # file of the key to come in with; None: nothing can be asked
+    guarded: bool = False  # only whoever has a key hears it
 
 
 def way_to(endpoint: str | None, config: str | None, key: Path | None) -> Way:
@@ -51,7 +52,7 @@ def way_to(endpoint: str | None, config: str | None, key: Path | None) -> Way:
 
 def _by_config(endpoint: str | None, config: str) -> Way:
     from driftwatch.bus.keys import KeyFolder
-    from driftwatch.config import ConfigError, load
+    from driftwatch.config import ConfigError, is_loopback, load
     from driftwatch.daemon.state import state_folder
 
     try:
@@ -59,11 +60,13 @@ def _by_config(endpoint: str | None, config: str) -> Way:
     except ConfigError as error:
         raise click.UsageError(str(error)) from None
     key = KeyFolder(state_folder(found)).operator_path
-    return Way(endpoint or found.bus.publish, found.bus.control, key)
+    publish = found.bus.publish
+    return Way(endpoint or publish, found.bus.control, key, not is_loopback(publish))
 
 
 def _by_key(endpoint: str | None, key: Path) -> Way:
     from driftwatch.bus.keys import ClientKey
+    from driftwatch.config import is_loopback
 
     try:
         known = ClientKey.read(key).publish
@@ -71,11 +74,12 @@ def _by_key(endpoint: str | None, key: Path) -> Way:
         raise click.UsageError(str(error)) from None
     if endpoint is None and known is None:
         raise click.UsageError(f"{key} does not tell where the daemon publishes; expected its ENDPOINT; give it")
-    return Way(endpoint or known or "", None, key)
+    used = endpoint or known or ""
+    return Way(used, None, key, not (is_loopback(used) and is_loopback(known or used)))
 
 
 def let_in(socket: zmq.Socket[bytes], way: Way) -> None:
-    """Give a subscriber its key where the daemon publishes beyond this computer, which it does for keys alone.
+    """Give a subscriber its key where the daemon publishes for keys alone, which it does beyond its own computer.
 
     Raises
     ------
@@ -83,9 +87,8 @@ def let_in(socket: zmq.Socket[bytes], way: Way) -> None:
         When the key cannot be read.
     """
     from driftwatch.bus.keys import ClientKey
-    from driftwatch.config import is_loopback
 
-    if way.key is None or is_loopback(way.endpoint):
+    if way.key is None or not way.guarded:
         return
     try:
         key = ClientKey.read(way.key)

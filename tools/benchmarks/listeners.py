@@ -186,10 +186,11 @@ class _Scene:
             time.sleep(0.02)
 
     def end(self, process: subprocess.Popen[bytes], number: signal.Signals) -> None:
-        """End a process by a signal; one that has not even begun is ended by the system."""
+        """End a process by a signal; one that has only begun to load may be ended by it as it can."""
         process.send_signal(number)
         code = process.wait(LIMIT_S)
-        if code != -number and (code != 0 or number is signal.SIGKILL):
+        in_order = code == 0 or self._said().rstrip().endswith("KeyboardInterrupt")
+        if code != -number and (number is signal.SIGKILL or not in_order):
             raise RuntimeError(f"it ended with {code}:\n{self._said()}")
 
     def stored(self) -> list[bytes]:
