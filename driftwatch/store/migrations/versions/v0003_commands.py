@@ -17,7 +17,8 @@ def upgrade() -> None:
     op.add_column("command", sa.Column("unit", sa.Text()))
     op.add_column("command", sa.Column("outcome", sa.Text()))
     op.create_index("ix_command_request", "command", ["request"])
-    op.drop_table("note")  # no program of an earlier revision wrote notes
+    op.drop_index("ix_note_time", "note")
+    op.rename_table("note", "note_before")  # a column that must hold something cannot be added to a table with rows
     op.create_table(
         "note",
         sa.Column("header", sa.Integer(), sa.ForeignKey("header.id"), primary_key=True),
@@ -29,6 +30,8 @@ def upgrade() -> None:
         sa.Column("handover", sa.Boolean(), nullable=False),
         sqlite_with_rowid=False,
     )
+    op.execute("INSERT INTO note SELECT header, sequence, previous, time_ns, by, text, 0 FROM note_before")
+    op.drop_table("note_before")
     op.create_index("ix_note_time", "note", ["time_ns"])
     op.create_table(
         "predecessor",
