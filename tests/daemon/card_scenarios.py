@@ -140,6 +140,7 @@ class Outcome:
     began: float  # monotonic: the cause ...
     ended: float  # ... and its end
     ended_ns: int  # the same, UTC
+    starting_s: float  # how long the daemon took from its start to its first row, which tells how busy the computer is
     stretches: list[tuple[int, Floats]]  # recorded
     sequences: list[int]  # stored
     status: int
@@ -169,6 +170,7 @@ def play_out(name: str, folder: Path, wav: Path) -> Outcome:
     with Rig() as rig:
         env = rig.env | ({"PYTHONPATH": str(folder)} if scenario.cause is callback_stalled else {})
         rig.play(wav)
+        started = time.monotonic()
         with Daemon(config, env) as daemon:
             daemon.measuring()
             daemon.more_beats(3)
@@ -183,6 +185,7 @@ def play_out(name: str, folder: Path, wav: Path) -> Outcome:
             daemon.more_beats(1 if scenario.plays_on else 5)
             status = daemon.stop()
             return Outcome(
-                scenario, config, daemon.rows, daemon.came, daemon.beats, began, ended, ended_ns,
+                scenario, config, daemon.rows, daemon.came, daemon.beats,
+                began, ended, ended_ns, daemon.came[0] - started,
                 recorded(config), stored(config), status, daemon.processes(), daemon.errors,
             )  # fmt: skip

@@ -19,7 +19,7 @@ from live_card import Beat, Daemon
 
 from soundrig import Rig
 
-LEAD_S = 11
+LEAD_S = 7
 """So long before the crossing the device was lost."""
 
 BEHIND_S = 3
@@ -36,15 +36,10 @@ if "run" in sys.orig_argv:
     from driftwatch.daemon.feed import CardFeed
     from driftwatch.daemon.messages import LiveSource, ReadCard
     from driftwatch.records import Fault, TimeQuality
-    from driftwatch.stream.instants import instant_ns
-    from driftwatch.stream.ring import Tie
     make = CardFeed.make_ring
     def make_ring(self):
         ring = make(self)
         shape = ring.shape
-        ring.tie(Tie({first}, instant_ns(), 0.0))
-        with open(os.path.join(os.path.dirname(__file__), "lost"), "w") as file:
-            file.write(str(time.time_ns()))
         self.known = LiveSource(
             self.name, shape.rate_hz, shape.inputs, {start_ns}, TimeQuality.FREE, ("rig",), (), {first}
         )
@@ -52,6 +47,17 @@ if "run" in sys.orig_argv:
     def order(self, begun, cause):
         return ReadCard(self._source, self._least, {start_ns}, Fault.DEVICE)
     CardFeed.make_ring, CardFeed.order = make_ring, order
+if "driftwatch.daemon.process" in sys.orig_argv and "capture" in sys.orig_argv:
+    from driftwatch.daemon.card import CardCapture
+    from driftwatch.stream.instants import instant_ns
+    from driftwatch.stream.ring import Tie
+    resume = CardCapture._resume
+    def lost_a_moment_ago(self):
+        self._ring.tie(Tie({first}, instant_ns(), 0.0))
+        with open(os.path.join(os.path.dirname(__file__), "lost"), "w") as file:
+            file.write(str(time.time_ns()))
+        resume(self)
+    CardCapture._resume = lost_a_moment_ago
 """
 
 CLOCK = """
