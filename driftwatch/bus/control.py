@@ -187,7 +187,8 @@ class ControlPort:
 
     def _send(self, replies: Iterable[tuple[Sender, Reply]]) -> None:
         for sender, reply in replies:
-            raw = json.dumps(reply, ensure_ascii=False, allow_nan=False, separators=(",", ":")).encode()
+            # In ASCII: a file's name in a message may hold what is no text.
+            raw = json.dumps(reply, allow_nan=False, separators=(",", ":")).encode("ascii")
             # Whoever went, or does not read, loses the reply; nobody waits.
             with suppress(zmq.Again):
                 self._socket.send_multipart((sender.connection, *sender.delimiter, raw), zmq.DONTWAIT)

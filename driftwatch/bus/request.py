@@ -203,5 +203,17 @@ def _sequence(found: dict[str, Any]) -> int:
 
 
 def _refuse(name: str, came: object, expected: str, identity: str | None) -> NoReturn:
-    text = "nothing" if came is None else ascii(came) if len(ascii(came)) <= 60 else f"{ascii(came)[:57]}..."
-    raise RequestError(f"{name}: got {text}; expected {expected}", identity)
+    raise RequestError(f"{name}: got {_shown(came)}; expected {expected}", identity)
+
+
+def _shown(came: object) -> str:
+    """Return what came, short and printable; what is nested is not shown, for it may be nested deeply."""
+    match came:
+        case None:
+            return "nothing"
+        case list():
+            return "a list"
+        case dict():
+            return "an object"
+    text = ascii(came)
+    return text if len(text) <= 60 else f"{text[:57]}..."

@@ -67,7 +67,7 @@ class Answers:
         try:
             with Reader.open(self._store, BUSY_MS, beside_writer=True) as reader:
                 found = page(reader, request.run, request.sequence, PAGE_RECORDS)
-        except StoreError as error:
+        except (StoreError, ValueError) as error:  # a row that was damaged may hold a word that is none
             raise LookFailedError(str(error)) from None
         return {"records": [encode(one) for one in found.records], "more": found.more, "known": found.known}
 
@@ -76,7 +76,7 @@ class Answers:
         try:
             with Reader.open(self._store, BUSY_MS, beside_writer=True) as reader:
                 return command_of(reader, request)
-        except StoreError:
+        except (StoreError, ValueError):
             return None  # in trouble: a command that is new must be taken all the same
 
     def _status(self) -> Reply:

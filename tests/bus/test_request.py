@@ -70,7 +70,7 @@ def test_a_value_may_be_known_to_be_missing() -> None:
         (b'{"request": "\\ud800"}', "expected an id of 1 to 64 printable"),
         (json.dumps({"request": "x" * 65}).encode(), "expected an id of 1 to 64"),
         (raw(), "action: got nothing; expected one of status, since"),
-        (raw(action=["stop"]), "action: got ['stop']"),
+        (raw(action=["stop"]), "action: got a list; expected one of"),
         (raw(action="dance"), "action: got 'dance'; expected one of"),
         (raw(action="stop", when="now"), "a field: got 'when'; expected only request, action, by, reason with stop"),
         (raw(action="note", reason="x", value=1.0), "value: got 'value'; expected only"),
@@ -101,6 +101,15 @@ def test_what_is_no_request_is_refused_with_what_came_and_what_was_expected(mess
     assert says in str(refused.value)
     assert len(str(refused.value)) < 600
     assert str(refused.value).isprintable()
+
+
+@pytest.mark.parametrize("field", ["request", "action", "target", "value", "run", "x"])
+def test_nesting_of_any_depth_is_refused_as_such(field: str) -> None:
+    """Also where it is just not too deep to be read, and would be to be shown."""
+    for depth in range(1, LARGEST_REQUEST // 2 - 100, 37):
+        message = b'{"request": "r", "action": "covariate", "%s": %s%s}' % (field.encode(), b"[" * depth, b"]" * depth)
+        with pytest.raises(RequestError):
+            parse_request(message)
 
 
 def test_a_refusal_knows_the_id_where_that_could_be_read() -> None:
