@@ -117,6 +117,11 @@ class Keeper:
         """Return how many records could not be stored when they were due, and for how long, seconds."""
         return (len(self._spool), now_monotonic - self._since) if self._trouble is not None else (0, 0.0)
 
+    @property
+    def unstored(self) -> int:
+        """Records that are not stored: those that wait, and while there is trouble those that had to go."""
+        return len(self._spool) + (self._spool.lost.total() if self._trouble is not None else 0)
+
     def news(self) -> list[StoreNews]:
         """Return what became of the store since this was last asked."""
         found, self._news = self._news, []
@@ -138,12 +143,22 @@ class Keeper:
             if now_monotonic >= self._retry_at:
                 self._try_again(now_monotonic)
         elif now_monotonic - self._committed_at >= COMMIT_EVERY_S or len(self._spool) >= GROUP_RECORDS:
-            self._committed_at = now_monotonic
-            try:
-                self.flush()
-            except CommitError as error:
-                self.failed(error, now_monotonic)
-            self._watch_log()
+            self.flush_now(now_monotonic)
+
+    def flush_now(self, now_monotonic: float) -> None:
+        """Commit and publish the group, due or not.
+
+        Raises
+        ------
+        CommitError
+            As `flush_due`.
+        """
+        self._committed_at = now_monotonic
+        try:
+            self.flush()
+        except CommitError as error:
+            self.failed(error, now_monotonic)
+        self._watch_log()
 
     def flush(self) -> None:
         """Commit, publish and hand on what waits.

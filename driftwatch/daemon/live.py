@@ -324,13 +324,15 @@ class LiveRun:
         reason = self._reason or "the source ended"
         if failure is not None:
             reason = f"failed: {failure}"
-        self._await_store()
+        give_up = time.monotonic() + STORE_END_S
+        self._settle(give_up)
         if self._keeper.trouble is None:  # else this is no end of it
             for body in self._incidents.end_all():
                 self._note(body)
         silent_until_ns = self._now_ns() if self.is_silent else None
         self._take(self.station.finish(reason, self._crew.last_readings, silent_until_ns))
         try:
+            self._settle(give_up)
             self._store_rest()
         finally:
             self._crew.end(RECORDER_END_S)
@@ -338,9 +340,11 @@ class LiveRun:
             raise SourceFailedError(failure)
         return reason
 
-    def _await_store(self) -> None:
-        """Give a store that takes no rows a while to come back, with signs of life."""
-        until = time.monotonic() + STORE_END_S
+    def _settle(self, until: float) -> None:
+        """Store what waits; give a store that takes no rows until then to come back, with signs of life."""
+        if self._keeper.trouble is None:
+            self._keeper.flush_now(time.monotonic())
+            self._hear_store()
         while self._keeper.trouble is not None and (now := time.monotonic()) < until:
             self._housekeeping(now)
             time.sleep(LOOK_S)
@@ -356,4 +360,4 @@ class LiveRun:
         try:
             self._keeper.flush()
         except CommitError as error:
-            raise CommitError(f"{error}; {self._keeper.waiting} records of this run were not stored") from error
+            raise CommitError(f"{error}; {self._keeper.unstored} records of this run were not stored") from error
