@@ -21,7 +21,7 @@ import zmq
 from driftwatch.bus.clerk import Clerk
 from driftwatch.bus.errors import BusError
 from driftwatch.bus.guard import CONTROL
-from driftwatch.bus.publisher import checked_endpoint
+from driftwatch.bus.publisher import HANDSHAKE_MS, checked_endpoint
 from driftwatch.bus.sparing import Allowance
 
 if TYPE_CHECKING:
@@ -33,9 +33,6 @@ if TYPE_CHECKING:
 
 LARGEST_FRAME = 65_536
 """Bytes; whoever sends a larger one is disconnected."""
-
-HANDSHAKE_MS = 5000
-"""How long a connection may take to show its key."""
 
 WAITING_MESSAGES = 100
 """Held for, and from, one connection; replies that are not read beyond that are lost to it."""

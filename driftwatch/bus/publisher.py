@@ -33,6 +33,9 @@ LONGEST_PREFIX = 4096
 MOST_READ = 10_000
 """Subscriptions read at a time, so that no subscriber can keep the publisher from its work."""
 
+HANDSHAKE_MS = 5000
+"""How long a connection may take to say who it is: silent ones must not use up what the process may have open."""
+
 LINGER_MS = 500
 """How long closing waits for messages under way."""
 
@@ -108,6 +111,7 @@ class Publisher:
         socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
         socket.setsockopt(zmq.MAXMSGSIZE, LONGEST_PREFIX)
         socket.setsockopt(zmq.LINGER, LINGER_MS)
+        socket.setsockopt(zmq.HANDSHAKE_IVL, HANDSHAKE_MS)
         socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
         if self._server_key is not None:
             socket.curve_publickey, socket.curve_secretkey = self._server_key
