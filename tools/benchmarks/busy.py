@@ -170,7 +170,7 @@ class BusyDaemon:
             self.process = subprocess.Popen(
                 [sys.executable, "-m", "driftwatch", "run", "busy.toml", "--json"],
                 cwd=self.folder,
-                env={**os.environ, "OMP_NUM_THREADS": "1", **environment},
+                env={**os.environ, "OMP_NUM_THREADS": "1", "PYTHONFAULTHANDLER": "1", **environment},
                 stdout=subprocess.DEVNULL,
                 stderr=log,
                 text=True,
@@ -181,6 +181,22 @@ class BusyDaemon:
     def log(self) -> str:
         """Everything that it said on standard error, over all starts."""
         return self._log.read_text(encoding="utf-8")
+
+    def until(self, found: Callable[[], Any], what: str) -> Any:
+        """Return what is found once it is there and true, as long as the daemon runs."""
+
+        def found_or_ended() -> Any:
+            if self.process is not None and (status := self.process.poll()) is not None:
+                raise AssertionError(f"it ended with status {status} before {what}")
+            return found()
+
+        try:
+            return until(found_or_ended, what)
+        except AssertionError as error:
+            if self.process is not None and self.process.poll() is None:
+                self.process.send_signal(signal.SIGABRT)  # says where it hangs
+                self.process.wait()
+            raise AssertionError(f"{error}; it said {self.log[-3000:]}") from error
 
     def kill(self) -> None:
         """Kill it as nothing can be caught."""

@@ -16,7 +16,7 @@ from statistics import median
 from driftwatch.records import NS, parse_time
 
 from benchmarks.bars import Row, Size
-from benchmarks.busy import BusyDaemon, Recorder, integrity, stored, until
+from benchmarks.busy import BusyDaemon, Recorder, integrity, stored
 
 KILLS = 300
 LANES = 2
@@ -91,7 +91,7 @@ def _lane(folder: Path, seed: int, count: int, result: Killed) -> None:
     with BusyDaemon(folder) as daemon, Recorder(daemon.endpoint) as recorder:
         for number in range(count):
             daemon.start()
-            until(lambda: _measures(recorder, result.kills), f"readings after start {number}: {daemon.log[-500:]}")
+            daemon.until(lambda: _measures(recorder, result.kills), f"readings after start {number}")
             time.sleep(moments.uniform(0.0, WITHIN_S))
             daemon.kill()
             result.kills += 1
