@@ -161,6 +161,8 @@ class Clerk(Generic[Sender]):
         except LookFailedError as error:
             return self._refused("failed", None, str(error), request.request)
         self.counts.answered += 1
+        if request.action == "status":
+            found = {**found, "requests": {"answered": self.counts.answered, "refused": dict(self.counts.refused)}}
         return {"request": request.request, "ok": True, "outcome": "done", **found}
 
     def _again(self, request: Request, mark: _Mark) -> Reply | None:

@@ -197,6 +197,15 @@ def test_what_is_malformed_counts_against_its_key_too(room: Room) -> None:
     assert faults == ["malformed"] * int(REQUESTS_AT_ONCE) + ["rate"] * (100 - int(REQUESTS_AT_ONCE))
 
 
+def test_status_counts_what_was_answered_and_refused(room: Room) -> None:
+    list(room.clerk.hear("s", OPERATOR, b"{", 0.0))
+    room.ask("r", "stop", holder=LOOKER)
+    room.ask("r", "note")
+    room.stored("r")
+    ((_, reply),) = room.ask("now", "status")
+    assert reply["requests"] == {"answered": 2, "refused": {"malformed": 1, "right": 1}}
+
+
 def test_no_more_commands_wait_than_may(room: Room) -> None:
     for number in range(MOST_PENDING):
         assert room.ask(f"r{number}", "note", now=float(number)) == []
