@@ -11,8 +11,8 @@ import subprocess
 import sys
 import threading
 import time
-from collections.abc import Callable
-from contextlib import closing
+from collections.abc import Callable, Iterator
+from contextlib import closing, contextmanager
 from pathlib import Path
 from typing import Any, Self
 
@@ -67,6 +67,15 @@ publish = "tcp://127.0.0.1:{port}"
 control = "tcp://127.0.0.1:{control}"
 [daemon]
 workers = 1
+"""
+
+
+_LOCK = """
+import sqlite3, sys
+connection = sqlite3.connect(sys.argv[1], isolation_level=None, timeout=30.0)
+connection.execute("BEGIN EXCLUSIVE")
+print("locked", flush=True)
+sys.stdin.readline()
 """
 
 
@@ -216,6 +225,20 @@ class BusyDaemon:
 
     def __exit__(self, *_: object) -> None:
         self.kill()
+
+
+@contextmanager
+def locked(path: Path) -> Iterator[None]:
+    """Hold a database in another process."""
+    with subprocess.Popen(
+        [sys.executable, "-c", _LOCK, path], stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True
+    ) as other:
+        if other.stdout is None or other.stdout.readline() != "locked\n":
+            raise RuntimeError(f"{path} could not be locked")
+        try:
+            yield
+        finally:
+            other.communicate("\n")
 
 
 def stored(path: Path) -> set[tuple[str, int]]:

@@ -16,7 +16,7 @@ from statistics import median
 from driftwatch.records import NS, parse_time
 
 from benchmarks.bars import Row, Size
-from benchmarks.busy import BusyDaemon, Recorder, integrity, stored
+from benchmarks.busy import BusyDaemon, Recorder, integrity, locked, stored
 
 KILLS = 300
 LANES = 2
@@ -24,6 +24,8 @@ LANES = 2
 
 WITHIN_S = 1.5
 """The kill comes so long after the first reading at most."""
+
+LOCKED_S = 30.0
 
 LOST_S = 1.0
 """Readings that may be lost with a kill, seconds of stream."""
@@ -55,6 +57,29 @@ def run(size: Size) -> Iterator[Row]:
     yield Row(case, "sequences missing in a run", holes, "none", holes == 0)
     yield Row(case, "integrity checks not passed", len(damage), "none", not damage)
     yield Row(case, "readings lost with a kill at most, s", lost, f"at most {LOST_S:g}", lost <= LOST_S)
+    with tempfile.TemporaryDirectory() as name:
+        yield from _while_locked(Path(name), LOCKED_S if size.seconds is None else LOCKED_S / 5)
+
+
+def _while_locked(folder: Path, seconds: float) -> Iterator[Row]:
+    """Yield what a store that another program holds for so long does to a run."""
+    case = f"store locked for {seconds:.0f} s"
+    with BusyDaemon(folder) as daemon, Recorder(daemon.endpoint) as recorder:
+        daemon.start()
+        daemon.until(lambda: len(recorder.records) > 200, "readings")
+        with locked(daemon.database):
+            daemon.until(lambda: recorder.beats and recorder.beats[-1][1]["unsaved"], "records that wait")
+            before, beats = len(recorder.records), len(recorder.beats)
+            time.sleep(seconds)
+            early, beats = len(recorder.records) - before, len(recorder.beats) - beats
+        daemon.until(lambda: recorder.of("health", phase="end"), "the end of the trouble")
+        (end,) = recorder.of("health", phase="end")
+        seen = {(one["run"], one["sequence"]) for _, one in recorder.records}
+        missing = len(seen - stored(daemon.database))
+    yield Row(case, "published before they were stored", early, "none", early == 0)
+    yield Row(case, "heartbeats a second meanwhile", beats / seconds, "at least 0.8", beats >= 0.8 * seconds)
+    yield Row(case, "lost, as the health record says", end["value"], "none", end["value"] == 0)
+    yield Row(case, "published and not stored", missing, "none", missing == 0)
 
 
 def killed(folder: Path, count: int, lanes: int) -> list[Killed]:
