@@ -30,7 +30,7 @@ from benchmarks.busy import BusyDaemon, Recorder, integrity, locked, stored, unt
 LOCKED_S = 6.0
 SMALL_MB = 32
 
-pytestmark = pytest.mark.timeout(300)
+pytestmark = pytest.mark.timeout(600)
 
 
 class Stage:

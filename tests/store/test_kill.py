@@ -71,7 +71,7 @@ def test_whatever_was_reported_as_committed_is_there_after_sigkill(tmp_path: Pat
         assert connection.execute("PRAGMA foreign_key_check").fetchall() == []
 
 
-@pytest.mark.timeout(300)
+@pytest.mark.timeout(600)
 def test_whatever_was_published_is_stored_after_sigkill_and_the_daemon_starts_again(tmp_path: Path) -> None:
     """20 kills at random instants; each next start is on the database that the kill left, with nobody's help.
 

@@ -19,7 +19,7 @@ from typing import Any, Self
 import zmq
 from driftwatch.records import KINDS
 
-LONG_S = 60.0
+LONG_S = 120.0
 """A deadline for what takes a few seconds on a computer that has nothing else to do."""
 
 _HEAD = """
