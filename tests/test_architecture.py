@@ -161,7 +161,8 @@ def unknown_in(code: str) -> list[str]:
         if command is None:
             wrong.append(name)
             continue
-        known = {option for parameter in command.params for option in parameter.opts} | {"--help"}
+        verbs = command.commands.values() if isinstance(command, click.Group) else ()
+        known = {word for each in (command, *verbs) for one in each.params for word in one.opts} | {"--help"}
         wrong += [f"{name} {option}" for option in re.findall(r"--[a-z-]+", line["rest"]) if option not in known]
     return wrong
 
