@@ -19,8 +19,11 @@ from live_card import Beat, Daemon
 
 from soundrig import Rig
 
-LEAD_S = 7
+LEAD_S = 9
 """So long before the crossing the device was lost."""
+
+LOST_S = 2
+"""So long ago it was lost when its reading begins: a shorter gap would be filled, where a replay begins anew."""
 
 BEHIND_S = 3
 """So much is measured behind it."""
@@ -52,12 +55,12 @@ if "driftwatch.daemon.process" in sys.orig_argv and "capture" in sys.orig_argv:
     from driftwatch.stream.instants import instant_ns
     from driftwatch.stream.ring import Tie
     resume = CardCapture._resume
-    def lost_a_moment_ago(self):
-        self._ring.tie(Tie({first}, instant_ns(), 0.0))
+    def lost_before(self):
+        self._ring.tie(Tie({first}, instant_ns() - {lost_ns}, 0.0))
         with open(os.path.join(os.path.dirname(__file__), "lost"), "w") as file:
-            file.write(str(time.time_ns()))
+            file.write(str(time.time_ns() - {lost_ns}))
         resume(self)
-    CardCapture._resume = lost_a_moment_ago
+    CardCapture._resume = lost_before
 """
 
 CLOCK = """
@@ -102,7 +105,7 @@ CROSSINGS = {"2^31": Crossing(2**31, "2027-01-01"), "2^32": Crossing(2**32, "202
 
 def run_across(crossing: Crossing, folder: Path, wav: Path) -> Run:
     config = configuration(folder, daemon="workers = 2")
-    words = {"first": crossing.sample - LEAD_S * RATE, "start_ns": crossing.start_ns}
+    words = {"lost_ns": LOST_S * NS, "first": crossing.sample - LEAD_S * RATE, "start_ns": crossing.start_ns}
     (folder / "sitecustomize.py").write_text(BEGAN_LONG_AGO.format(**words))
     with Rig() as rig:
         rig.play(wav)
