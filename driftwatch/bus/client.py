@@ -71,7 +71,7 @@ class Asker:
         self._monitor = self._socket.get_monitor_socket(_EVENTS)
         self._seen = 0  # events of the connection so far
         try:
-            self._socket.connect(_reachable(self.endpoint))
+            self._socket.connect(reachable(self.endpoint))
         except zmq.ZMQError as error:
             self.close()
             raise AskError(f"{self.endpoint!r} cannot be asked: {error}; expected tcp://HOST:PORT") from None
@@ -97,7 +97,7 @@ class Asker:
         """
         identity = request or str(uuid.uuid4())
         said = {"request": identity, "action": action} | {k: v for k, v in fields.items() if v is not None}
-        self._socket.send(json.dumps(said, ensure_ascii=False).encode())
+        self._socket.send(json.dumps(said).encode())
         end = time.monotonic() + self._timeout_s
         while True:
             reply = self._next(end)
@@ -172,7 +172,7 @@ class Asker:
         self.close()
 
 
-def _reachable(endpoint: str) -> str:
+def reachable(endpoint: str) -> str:
     """Return where to go for an endpoint that is bound on every interface: to this computer."""
     for every, one in (("//*:", "//127.0.0.1:"), ("//0.0.0.0:", "//127.0.0.1:"), ("//[::]:", "//[::1]:")):
         endpoint = endpoint.replace(every, one)
