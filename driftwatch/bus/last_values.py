@@ -35,9 +35,9 @@ class LastValues:
             del self._last[oldest]
             self._wanted.discard(oldest)
 
-    def want(self, prefix: bytes) -> None:
-        """Take in that somebody subscribed to the topics that begin so."""
-        self._wanted.update(topic for topic in self._last if topic.startswith(prefix))
+    def want(self, *prefixes: bytes) -> None:
+        """Take in that somebody subscribed to the topics that begin so; one look at each topic for all of them."""
+        self._wanted.update(topic for topic in self._last if topic.startswith(prefixes))
 
     def due(self, now: float) -> list[tuple[bytes, bytes]]:
         """Return topics and messages that are to be sent again now, in the order of their sequences."""

@@ -33,6 +33,13 @@ LONGEST_PREFIX = 4096
 MOST_READ = 10_000
 """Subscriptions read at a time, so that no subscriber can keep the publisher from its work."""
 
+HELD_UNREAD = 30
+"""Subscriptions of one subscriber that wait to be read; past them the library lets it wait. With more it takes them in
+faster than they are read, and holds them all."""
+
+MOST_PREFIXES = 64
+"""Different prefixes told apart at a time; where more are asked for, the last value of every topic is sent again."""
+
 HANDSHAKE_MS = 5000
 """How long a connection may take to say who it is: silent ones must not use up what the process may have open."""
 
@@ -109,6 +116,7 @@ class Publisher:
         socket = self._context.socket(zmq.XPUB)
         socket.setsockopt(zmq.XPUB_VERBOSE, 1)  # tell of a subscription that somebody else has as well
         socket.setsockopt(zmq.SNDHWM, QUEUED_MESSAGES)
+        socket.setsockopt(zmq.RCVHWM, HELD_UNREAD)
         socket.setsockopt(zmq.MAXMSGSIZE, LONGEST_PREFIX)
         socket.setsockopt(zmq.LINGER, LINGER_MS)
         socket.setsockopt(zmq.HANDSHAKE_IVL, HANDSHAKE_MS)
@@ -159,15 +167,22 @@ class Publisher:
 
     def serve(self) -> None:
         """Send last values to whoever has subscribed since; to be called every second at least, at any time."""
+        if prefixes := self._asked_for():
+            self._last.want(*prefixes)
+        for frames in self._last.due(time.monotonic()):
+            self._socket.send_multipart(frames)
+
+    def _asked_for(self) -> set[bytes]:
+        """Return the prefixes that were subscribed to since; past `MOST_PREFIXES` the one of every topic."""
+        prefixes: set[bytes] = set()
         for _ in range(MOST_READ):
             try:
                 request = self._socket.recv(zmq.NOBLOCK)
             except zmq.Again:
                 break
-            if request[:1] == _SUBSCRIBES:
-                self._last.want(request[1:])
-        for frames in self._last.due(time.monotonic()):
-            self._socket.send_multipart(frames)
+            if request[:1] == _SUBSCRIBES and len(prefixes) <= MOST_PREFIXES:
+                prefixes.add(request[1:])
+        return prefixes if len(prefixes) <= MOST_PREFIXES else {b""}
 
     def close(self) -> None:
         """Free the endpoint, after `LINGER_MS` at most."""

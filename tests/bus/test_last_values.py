@@ -28,8 +28,7 @@ def test_due_are_the_last_messages_of_the_topics_asked_for_in_order(topics: list
     values = LastValues()
     for sequence, topic in enumerate(topics, 1):
         values.sent(topic, _line(sequence))
-    for prefix in prefixes:
-        values.want(prefix)
+    values.want(*prefixes)
     last = {topic: sequence for sequence, topic in enumerate(topics, 1)}
     expected = [(topic, n) for topic, n in last.items() if any(topic.startswith(prefix) for prefix in prefixes)]
     due = values.due(0.0)

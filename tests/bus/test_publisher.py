@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import json
 import os
 import time
@@ -197,6 +198,28 @@ def test_what_is_no_subscription_is_passed_over(context: zmq.Context[zmq.Socket[
         hostile.send(b"\x01measurement/")
         _serve_until_it_hears(publisher, hostile)
         assert _received(hostile, 1)[0][1]["repeated"] is True
+
+
+def test_one_who_asks_for_thousands_of_prefixes_is_not_told_apart_topic_by_topic(
+    context: zmq.Context[zmq.Socket[bytes]], measurement: Make
+) -> None:
+    """None of the prefixes begins a topic: that there is a repeat shows that they were taken for everything."""
+    with (
+        Publisher(ANY_PORT, context) as publisher,
+        context.socket(zmq.XSUB) as hostile,
+        _subscriber(context, publisher, "measurement/") as other,
+    ):
+        hostile.setsockopt(zmq.LINGER, 0)
+        hostile.connect(publisher.endpoint)
+        publisher.publish([measurement(1)])
+        assert json.loads(other.recv_multipart()[1])["sequence"] == 1
+        deadline, numbers = time.monotonic() + 20.0, itertools.count()
+        while not other.poll(20):
+            for number in itertools.islice(numbers, 1000):
+                hostile.send(b"\x01no topic %d" % number)
+            publisher.serve()
+            assert time.monotonic() < deadline
+        assert json.loads(other.recv_multipart()[1])["repeated"] is True
 
 
 # ---------------------------------------------------------------------------------------------- keys, anew
