@@ -6,6 +6,7 @@ import json
 import os
 import secrets
 import stat
+from functools import reduce
 from typing import TYPE_CHECKING, Any
 
 from driftwatch.bus.errors import KeysError, NoKeyError
@@ -52,7 +53,7 @@ def read_document(path: Path) -> dict[str, Any]:
 
 
 def write_document(path: Path, document: dict[str, Any], *, new: bool = False) -> None:
-    """Put a whole file in place of the old one, or make a `new` one; it is on the disk on return.
+    """Put a whole file in place of the old one, or make a `new` one; it is on the disk on return, and so is its name.
 
     Raises
     ------
@@ -71,12 +72,21 @@ def write_document(path: Path, document: dict[str, Any], *, new: bool = False) -
             os.link(draft, path)  # refuses where there is one, whoever made it meanwhile
         else:
             draft.replace(path)
+        _fsync_folder(path.parent)  # else a power cut could bring the old file back, and a revoked key with it
     except FileExistsError:
         raise KeysError(f"{path} is there already; expected to make a new file; name another, or move it") from None
     except OSError as error:
         raise unusable(path, error) from None
     finally:
         draft.unlink(missing_ok=True)
+
+
+def _fsync_folder(folder: Path) -> None:
+    descriptor = os.open(folder, os.O_RDONLY | os.O_DIRECTORY)
+    try:
+        os.fsync(descriptor)
+    finally:
+        os.close(descriptor)
 
 
 def give_to_owner_of(folder: Path, made: int) -> None:
@@ -107,3 +117,17 @@ def unusable(path: Path, error: OSError) -> KeysError:
 def damaged(path: Path, why: object) -> KeysError:
     """Return what is said of a file that holds something else."""
     return KeysError(f"{path} holds no keys: {why}; expected what driftwatch wrote there; {GRANT_REMEDY}")
+
+
+def is_half(text: str) -> bool:
+    """Say whether a text is half of a CURVE key pair: 40 characters (Z85, ZeroMQ RFC 32) that stand for 32 bytes."""
+    digits = [_Z85.find(character) for character in text]
+    groups = [digits[begin : begin + 5] for begin in range(0, len(digits), 5)]
+    return len(digits) == 40 and min(digits) >= 0 and all(reduce(_append, group) < 2**32 for group in groups)
+
+
+def _append(number: int, digit: int) -> int:
+    return number * len(_Z85) + digit
+
+
+_Z85 = "0123456789abcdefghijklmnopqrstuvwxyzABCDEFGHIJKLMNOPQRSTUVWXYZ.-:+=^!/*?&<>()[]{}@%$#"

@@ -27,6 +27,7 @@ from driftwatch.bus.keyfiles import (
     SCHEMA,
     damaged,
     give_to_owner_of,
+    is_half,
     read_document,
     refuse_open,
     unusable,
@@ -181,11 +182,16 @@ class KeyFolder:
                 self._made.append(self.operator_path)
 
     def discard(self) -> None:
-        """Take away what `ensure` made, since nothing came of the start."""
-        for path in reversed(self._made):
-            with suppress(OSError):
+        """Take away what `ensure` made, since nothing came of the start; not if a key was granted by it meanwhile."""
+        made, self._made = self._made, []
+        if not made:
+            return
+        # Where the folder cannot be had, the keys stay: the next start uses them.
+        with suppress(OSError, KeysError), self._locked():
+            if self.granted_path.exists():
+                return
+            for path in reversed(made):
                 path.rmdir() if path == self.path else path.unlink()
-        self._made = []
 
     def daemon(self) -> Pair:
         """Return the daemon's pair."""
@@ -317,7 +323,7 @@ def _text(document: dict[str, Any], name: str) -> str:
 
 def _half(document: dict[str, Any], name: str) -> str:
     value = _text(document, name)
-    if len(value) != 40 or not value.isascii() or not value.isprintable():
+    if not is_half(value):
         raise ValueError(f"{name} is no key of 40 characters")
     return value
 

@@ -52,6 +52,36 @@ def test_a_start_of_which_nothing_comes_leaves_no_keys_behind(tmp_path: Path) ->
     assert list(tmp_path.iterdir()) == []
 
 
+def test_a_start_of_which_nothing_comes_leaves_the_keys_where_one_was_granted_meanwhile(
+    folder: KeyFolder, tmp_path: Path
+) -> None:
+    """What was handed to somebody names the daemon's public half: new keys would make it worthless."""
+    key = KeyFolder(tmp_path).grant("Night shift", Role.LOOK, AT_NS, WHERE, tmp_path / "night.key")
+    folder.discard()
+    assert folder.daemon().public == key.daemon
+    assert folder.operator().daemon == key.daemon
+    assert [one.public for one in folder.granted()] == [key.public]
+
+
+def test_a_change_is_on_the_disk_with_its_name(
+    folder: KeyFolder, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Written alone, a list without a revoked key could be the old one again after a power cut."""
+    folder.grant("x", Role.LOOK, AT_NS, WHERE, tmp_path / "x.key")
+    steps, fsync = [], os.fsync
+
+    def noted(descriptor: int) -> None:
+        found = os.fstat(descriptor)
+        steps.append((stat.S_ISDIR(found.st_mode), found.st_ino, folder.granted_path.stat().st_ino))
+        fsync(descriptor)
+
+    monkeypatch.setattr(os, "fsync", noted)
+    folder.revoke("x")
+    (of_file, draft, before), (of_folder, synced, after) = steps
+    assert (of_file, of_folder, synced) == (False, True, folder.path.stat().st_ino)
+    assert draft == after != before
+
+
 def test_a_granted_key_stands_in_its_file_whole_and_in_the_list_by_its_public_half(
     folder: KeyFolder, tmp_path: Path
 ) -> None:
@@ -140,6 +170,8 @@ def test_a_key_that_is_not_there_names_where_it_was_looked_for_and_the_remedy(tm
         {"public": "short"},
         {"secret": 5},
         {"daemon": "\u00e9" * 40},
+        {"secret": "a" * 39 + "~"},  # no Z85: 40 characters that stand for no bytes
+        {"public": "#" * 40},  # its characters, but more than four bytes hold
         {"control": 5},
         {"name": ["x"]},
     ],
