@@ -20,6 +20,7 @@ from driftwatch.pipeline.commands import (
 from driftwatch.records import HANDOVER, Action, CommandDone, CovariateValue, Note
 from driftwatch.store.errors import StoreUnreachableError
 from driftwatch.store.location import database_path
+from driftwatch.store.opening import is_there
 from driftwatch.store.tail import Tail
 from driftwatch.store.writer import Writer
 
@@ -56,15 +57,15 @@ def carry_out(
     """
     url, station = store or config.store.url, config.station.name
     path = database_path(url, Path.cwd())
-    if not path.exists():
+    if not is_there(path):
         raise StoreUnreachableError(f"{path} does not exist; expected the database of a daemon that has run before")
     with StateLock(state_folder(config, store), station), Writer.open(url, station) as writer:
         with writer.transaction() as connection:
             tail = Tail.of(connection, station)
             if tail is None:
                 raise StoreUnreachableError(
-                    f"{path} holds no run of the station {station!r}; expected one, at the end of which this is "
-                    "written; start the daemon first, or see the station's name"
+                    f"{path} does not end with a live run of the station {station!r}; expected one, at the end of "
+                    "which this is written; start the daemon first, or see the station's name"
                 )
             now_ns = utc_ns()
             outcome, bodies = _effect(command, tail)

@@ -34,7 +34,9 @@ class Tail:
 
     @classmethod
     def of(cls, connection: Connection, station: str) -> Tail | None:
-        """Return the end of the run of a station that was begun last; None: the database holds none of it.
+        """Return the end of the last run in a database; None: that is no live run of the station.
+
+        Only the last one can be added to: whoever reads on from a record sees nothing that is added before it.
 
         Parameters
         ----------
@@ -43,10 +45,8 @@ class Tail:
         station
             Its name.
         """
-        newest = sa.select(HEADER).where(HEADER.c.station == station)
-        newest = newest.order_by(HEADER.c.opened_ns.desc(), HEADER.c.id.desc()).limit(1)
-        row = connection.execute(newest).first()
-        if row is None:
+        row = connection.execute(sa.select(HEADER).order_by(HEADER.c.id.desc()).limit(1)).first()
+        if row is None or row.station != station or row.origin == Origin.REPLAY:
             return None
         headers = tuple(connection.scalars(sa.select(HEADER.c.id).where(HEADER.c.run == row.run)))
         parts = [

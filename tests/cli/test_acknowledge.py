@@ -2,9 +2,14 @@
 
 from __future__ import annotations
 
+import socket
 import time
 from pathlib import Path
 from typing import Any
+
+import pytest
+from click.testing import CliRunner
+from driftwatch.cli import main
 
 OF_THE_RUN = ("run", "origin", "time_quality", "config_sha256", "sources", "assumed", "reason")
 """What a replay says of itself."""
@@ -101,9 +106,36 @@ def test_without_a_daemon_a_note_goes_to_the_last_run_and_what_needs_one_says_so
     (note,) = objects(bench.run("notes", "list", "--config", config, "--json").stdout)
     assert note["text"] == "belt tensioned"
     assert note["by"].startswith("ben (")
+    again = bench.run("notes", "add", "belt tensioned", "--config", config, "--request", "odd\tid")
+    assert again.returncode == 2
     nobody = bench.run("tell", "reload", "--config", config)
     assert nobody.returncode == 1
     assert "nobody answers at" in nobody.stderr
+
+
+@pytest.mark.parametrize(
+    ("words", "says"),
+    [
+        (("notes", "add", ""), "expected text of 1 to 2000 printable characters"),
+        (("notes", "add", "red\x1b[31m"), "expected text of 1 to 2000 printable characters"),
+        (("notes", "add", "odd \udcff"), "expected text of 1 to 2000 printable characters"),
+        (("tell", "value", "temperature", "inf", "degC"), "expected one JSON object"),
+        (("tell", "value", "a/b", "1.0", "degC"), "a name of 1 to 64 letters"),
+    ],
+)
+def test_what_a_daemon_would_refuse_is_refused_without_one(bench: Any, words: tuple[str, ...], says: str) -> None:
+    done = CliRunner().invoke(main, [*words, "--config", str(bench.folder / bench.config())])
+    assert done.exit_code == 2
+    assert says in done.stderr
+
+
+def test_where_somebody_is_at_the_control_port_he_is_asked(bench: Any) -> None:
+    """A daemon that was started with another database holds another lock: nothing may be written past it."""
+    config = str(bench.folder / bench.config())
+    with socket.create_server(("127.0.0.1", bench.control)):
+        done = CliRunner().invoke(main, ["notes", "add", "hello", "--config", config])
+    assert done.exit_code == 1
+    assert "expected a key" in done.stderr
 
 
 def test_whom_to_ask_must_be_said_and_values_must_be_numbers(bench: Any) -> None:

@@ -121,8 +121,17 @@ def test_where_there_is_nothing_to_add_to_nothing_is_made(tmp_path: Path) -> Non
 
 def test_another_stations_run_is_left_alone(config: Configuration) -> None:
     other = config.model_copy(update={"station": config.station.model_copy(update={"name": "other"})})
-    with pytest.raises(StoreError, match="holds no run of the station 'other'"):
+    with pytest.raises(StoreError, match="does not end with a live run of the station 'other'"):
         carry_out(other, Command(0, "r1", "ann", "note", None, "hello"))
+
+
+def test_a_replay_that_was_written_last_is_left_alone(config: Configuration) -> None:
+    """Whoever reads on from a record would miss what is added to a run before it; a replay is no place for news."""
+    header = RunHeader("press line", "00000000-0000-4000-8000-000000000003", Origin.REPLAY, TimeQuality.FILE)
+    with Writer.open(config.store.url, "press line") as writer:
+        writer.write(Station(config, header, [Facts()]).begin())
+    with pytest.raises(StoreError, match="does not end with a live run of the station 'press line'"):
+        carry_out(config, Command(0, "r1", "ann", "note", None, "hello"))
 
 
 def test_an_unknown_alert_and_what_needs_a_daemon_are_refused_and_written_down(config: Configuration) -> None:
