@@ -255,6 +255,7 @@ def _messages(way: Way, topics: tuple[str, ...]) -> Iterator[tuple[str, bytes]]:
     """Yield topics and objects; tell on stderr when nothing comes, be it a heartbeat, for `QUIET_S`."""
     import zmq
 
+    from driftwatch.bus.client import reachable
     from driftwatch.cli.listen_asking import let_in
 
     endpoint = way.endpoint
@@ -266,7 +267,7 @@ def _messages(way: Way, topics: tuple[str, ...]) -> Iterator[tuple[str, bytes]]:
         for topic in (*topics, "heartbeat") if topics else ("",):
             socket.setsockopt_string(zmq.SUBSCRIBE, topic)
         try:
-            socket.connect(endpoint)
+            socket.connect(reachable(endpoint))
         except zmq.ZMQError as error:
             raise click.UsageError(
                 f"{endpoint!r} cannot be listened to: {error}; expected tcp://HOST:PORT, such as {DEFAULT_ENDPOINT}"

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 
     from driftwatch.bus.client import Asker
     from driftwatch.bus.follow import Place
+    from driftwatch.config import Configuration
 
 AGAIN_S = 1.0
 """Time between two attempts to ask a daemon that did not answer, seconds."""
@@ -51,14 +52,20 @@ def way_to(endpoint: str | None, config: str | None, key: Path | None) -> Way:
 
 
 def _by_config(endpoint: str | None, config: str) -> Way:
-    from driftwatch.bus.keys import KeyFolder
-    from driftwatch.config import ConfigError, is_loopback, load
-    from driftwatch.daemon.state import state_folder
+    from driftwatch.config import ConfigError, load
 
     try:
-        found = load(config)
+        return way_of(load(config), endpoint)
     except ConfigError as error:
         raise click.UsageError(str(error)) from None
+
+
+def way_of(found: Configuration, endpoint: str | None) -> Way:
+    """Return how to reach the daemon of a configuration, heard at `endpoint` if there is one; it needs not run."""
+    from driftwatch.bus.keys import KeyFolder
+    from driftwatch.config import is_loopback
+    from driftwatch.daemon.state import state_folder
+
     key = KeyFolder(state_folder(found)).operator_path
     publish = found.bus.publish
     return Way(endpoint or publish, found.bus.control, key, not is_loopback(publish))

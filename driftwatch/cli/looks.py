@@ -18,6 +18,8 @@ from driftwatch.cli.view import key_of
 from driftwatch.records import NS, time_text
 
 if TYPE_CHECKING:
+    from pathlib import Path
+
     from driftwatch.records import Envelope, Heartbeat
     from driftwatch.store.latest import Latest
 
@@ -34,25 +36,36 @@ class Place:
     store: str
     modes: tuple[tuple[str, str], ...] = ()  # channel and mode; empty: not known
     silent_after_s: Mapping[tuple[str, str], float] = field(default_factory=dict)
+    key: Path | None = None  # file of the key without which the daemon is not heard; None: everybody hears it
 
 
 # ---------------------------------------------------------------------------------------------- the sign of life
 
 
 @contextmanager
-def listening(endpoint: str) -> Iterator[NextBeat]:
-    """Give what waits so many seconds for the next heartbeat, or until told to stop; None: none came."""
+def listening(place: Place) -> Iterator[NextBeat]:
+    """Give what waits so many seconds for the next heartbeat, or until told to stop; None: none came.
+
+    Raises
+    ------
+    click.UsageError
+        When the endpoint is malformed, or the key cannot be read.
+    """
     import zmq
 
+    from driftwatch.bus.client import reachable
     from driftwatch.bus.wire import HEARTBEAT
+    from driftwatch.cli.listen_asking import Way, let_in
 
+    endpoint = place.endpoint
     with zmq.Context() as context, context.socket(zmq.SUB) as socket:
         socket.setsockopt(zmq.LINGER, 0)
         socket.setsockopt(zmq.RECONNECT_IVL_MAX, 1000)
         socket.setsockopt(zmq.IPV6, int(endpoint.startswith("tcp://[")))
+        let_in(socket, Way(endpoint, key=place.key, guarded=place.key is not None))
         socket.setsockopt_string(zmq.SUBSCRIBE, HEARTBEAT)
         try:
-            socket.connect(endpoint)
+            socket.connect(reachable(endpoint))
         except zmq.ZMQError as error:
             raise click.UsageError(
                 f"{endpoint!r} cannot be listened to: {error}; expected tcp://HOST:PORT, such as {DEFAULT_ENDPOINT}"

@@ -66,7 +66,7 @@ def command(  # noqa: PLR0913, RUF100 - one parameter an option
     from driftwatch.cli.looks import Looker, listening
 
     place = _place(config, store, publish)
-    with quiet_pipe(), listening(place.endpoint) as next_beat:
+    with quiet_pipe(), listening(place) as next_beat:
         if watch:
             verdict = _watch(Looker(place, wait), next_beat, wait, as_json)
         else:
@@ -77,6 +77,7 @@ def command(  # noqa: PLR0913, RUF100 - one parameter an option
 
 
 def _place(config: str | None, store: str | None, publish: str | None) -> Place:
+    from driftwatch.cli.listen_asking import way_of
     from driftwatch.cli.looks import Place
     from driftwatch.cli.view import key_of
     from driftwatch.config import ConfigError, load
@@ -94,7 +95,8 @@ def _place(config: str | None, store: str | None, publish: str | None) -> Place:
         for mode in found.mode
         if Method.AMBIENT in mode.methods
     }
-    return Place(publish or found.bus.publish, store or found.store.url, modes, silent)
+    way = way_of(found, publish)
+    return Place(way.endpoint, store or found.store.url, modes, silent, way.key if way.guarded else None)
 
 
 # ---------------------------------------------------------------------------------------------- printing
