@@ -25,7 +25,7 @@ from driftwatch.records import Action, Command, Envelope, Heartbeat, Origin
 from driftwatch.store.errors import CommitError, Trouble, unreachable
 from driftwatch.store.location import database_path
 from driftwatch.store.lock import HolderLock, WriterLock
-from driftwatch.store.opening import refuse_foreign, refuse_read_only
+from driftwatch.store.opening import is_folder, is_there, refuse_foreign, refuse_read_only
 from driftwatch.store.writer import Writer
 
 if TYPE_CHECKING:
@@ -280,7 +280,7 @@ def _folder_of(url: str) -> Iterator[None]:
     """
     path = Path(url.removeprefix("sqlite:///"))
     folder = path.parent
-    missing = not folder.exists() and folder.parent.is_dir()
+    missing = not is_there(folder) and is_folder(folder.parent)
     if missing:
         try:
             folder.mkdir()

@@ -70,8 +70,8 @@ class StateLock(HolderLock):
 
     def __init__(self, folder: Path, station: str) -> None:
         self._folder = folder
-        self._is_new_folder = not folder.exists()
         try:
+            self._is_new_folder = not folder.exists()
             folder.mkdir(FOLDER_MODE, exist_ok=True)
             super().__init__(folder / LOCK_NAME, station)
         except HeldError as error:

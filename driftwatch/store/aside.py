@@ -19,7 +19,7 @@ import sqlalchemy as sa
 from driftwatch.records import NS
 from driftwatch.store.ahead import index_of, log_of, size_of
 from driftwatch.store.errors import Trouble, trouble_of
-from driftwatch.store.opening import connect, file_at, is_marked
+from driftwatch.store.opening import connect, file_at, is_marked, is_there
 from driftwatch.store.tables import PREDECESSOR
 
 if TYPE_CHECKING:
@@ -48,8 +48,13 @@ def damage_in(path: Path) -> str | None:
 
     A database is taken for damaged only where the library says so: when it is opened, or, after an unclean end, when
     it is looked through for `CHECK_S`. What a lock or a disk keeps from being read is not damaged.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When it cannot be told whether there is one.
     """
-    if not path.exists() or not is_marked(path):
+    if not is_there(path) or not is_marked(path):
         return None
     try:
         with closing(connect(path, "mode=ro")) as connection:
@@ -121,6 +126,8 @@ def take_log_along(path: Path, log: Place | None, moved: Path | None, now_ns: in
     ------
     OSError
         When a file cannot be renamed.
+    CommitError
+        When it cannot be told whose the log is.
     """
     left = log_of(path)
     if log is None or file_at(left) != log:

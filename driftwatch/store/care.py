@@ -13,7 +13,7 @@ from driftwatch.store.ahead import log_of, size_of
 from driftwatch.store.aside import Predecessor
 from driftwatch.store.errors import StoreError, StoreUnreachableError, unreachable
 from driftwatch.store.lock import holder_of
-from driftwatch.store.opening import connect, reading_mode, refuse_foreign
+from driftwatch.store.opening import connect, is_there, reading_mode, refuse_foreign
 from driftwatch.store.tables import VERSION_TABLE
 
 if TYPE_CHECKING:
@@ -50,7 +50,7 @@ def refuse_missing(path: Path) -> None:
     StoreUnreachableError, ForeignDatabaseError
         When there is none, or another program's.
     """
-    if not path.exists():
+    if not is_there(path):
         raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
     refuse_foreign(path)
 
@@ -144,7 +144,7 @@ def backup(path: Path, target: Path, progress: Callable[[int, int], None] = lamb
     StoreError
         When there is something at `target`, or the copy fails or is not whole; nothing is left behind then.
     """
-    if target.exists():
+    if is_there(target):
         raise StoreUnreachableError(f"{target} is there already; expected a new name; name another, or move it away")
     part = target.with_name(f"{target.name}.part-{os.getpid()}")
     try:

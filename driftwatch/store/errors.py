@@ -98,6 +98,9 @@ _REMEDIES = {
     "malformed": "the database is damaged; keep the file, save what `driftwatch readings` still shows, start a new one",
     "not a database": "the file is no SQLite database; name another file",
     "i/o error": "the disk does not answer as it should; check it and the file system",
+    "input/output error": "the disk does not answer as it should; check it and the file system",
+    "stale file handle": "the file system was taken away or exported anew; see that it is mounted",
+    "not connected": "the file system does not answer; see that it is mounted",
     "unable to open": "check that the folder exists and may be written to",
     "no such file": "see that its folder exists, or name a file in another",
     "not a directory": "a part of its path is a file; name a file in a folder",
@@ -142,6 +145,14 @@ def unreachable(path: Path, error: Exception) -> StoreUnreachableError:
     """Translate an error of the system or the database library that kept a file from being opened."""
     cause = getattr(error, "orig", None) or getattr(error, "strerror", None) or error
     return StoreUnreachableError(f"{path}: the database cannot be opened: {cause}; {remedy_of(cause)}")
+
+
+def cannot_look(path: Path, error: OSError) -> CommitError:
+    """Translate an error of the system that kept it from being told whether a database is still at its place."""
+    trouble = Trouble.READ_ONLY if isinstance(error, PermissionError) else Trouble.DISK
+    cause = error.strerror or str(error)
+    words = f"{path}: nothing of this group was stored: the file cannot be looked at: {cause}; {remedy_of(cause)}"
+    return CommitError(words, trouble, cause)
 
 
 def file_gone(path: Path) -> CommitError:

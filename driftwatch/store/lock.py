@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import fcntl
 import os
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from driftwatch.store.errors import StoreBusyError, unreachable
 
 if TYPE_CHECKING:
+    from collections.abc import Iterator
     from typing import Self
 
 
@@ -124,12 +126,25 @@ class WriterLock(HolderLock):
 
     def __init__(self, database: Path, station: str) -> None:
         self._database = database
-        super().__init__(_lock_path(database), station)
+        with self._translated():
+            super().__init__(_lock_path(database), station)
 
-    def _take(self) -> None:
+    def renew(self) -> None:
+        """Take the lock again where its file was taken away, so that the next one still finds it.
+
+        Raises
+        ------
+        StoreBusyError, StoreUnreachableError
+            As at first.
+        """
+        with self._translated():
+            super().renew()
+
+    @contextmanager
+    def _translated(self) -> Iterator[None]:
         database = self._database
         try:
-            super()._take()
+            yield
         except OSError as error:
             raise unreachable(database, error) from None
         except HeldError as error:

@@ -8,6 +8,7 @@ from __future__ import annotations
 import errno
 import os
 import sqlite3
+import stat
 from contextlib import closing
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -16,7 +17,13 @@ from urllib.parse import quote
 import sqlalchemy as sa
 from sqlalchemy.pool import NullPool, StaticPool
 
-from driftwatch.store.errors import ForeignDatabaseError, OtherSchemaError, StoreUnreachableError, unreachable
+from driftwatch.store.errors import (
+    ForeignDatabaseError,
+    OtherSchemaError,
+    StoreUnreachableError,
+    cannot_look,
+    unreachable,
+)
 from driftwatch.store.tables import APPLICATION_ID, HEAD, METADATA, VERSION_TABLE
 
 if TYPE_CHECKING:
@@ -37,9 +44,9 @@ def refuse_foreign(path: Path) -> None:
     StoreUnreachableError
         When it cannot be read.
     """
-    if path.is_dir():
+    if is_folder(path):
         raise StoreUnreachableError(f"{path} is a folder; expected a database file; name a file in it")
-    if not path.exists() or is_marked(path):
+    if not is_there(path) or is_marked(path):
         return
     try:
         with closing(connect(path, "immutable=1")) as connection:
@@ -81,17 +88,62 @@ def refuse_read_only(path: Path) -> None:
     StoreUnreachableError
         When it may not be written to.
     """
-    if path.exists() and not os.access(path, os.W_OK, effective_ids=os.access in os.supports_effective_ids):
+    if is_there(path) and not os.access(path, os.W_OK, effective_ids=os.access in os.supports_effective_ids):
         raise unreachable(path, PermissionError(errno.EACCES, "readonly file"))
 
 
-def file_at(path: Path) -> tuple[int, int] | None:
-    """Return what tells a file from another that takes its place; None: there is none."""
+def is_there(path: Path) -> bool:
+    """Say whether there is something at a place.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When that cannot be told: its folder may not be looked into, or the disk does not answer.
+    """
+    return _mode_at(path) is not None
+
+
+def is_folder(path: Path) -> bool:
+    """Say whether there is a folder at a place.
+
+    Raises
+    ------
+    StoreUnreachableError
+        As `is_there`.
+    """
+    mode = _mode_at(path)
+    return mode is not None and stat.S_ISDIR(mode)
+
+
+def _mode_at(path: Path) -> int | None:
     try:
-        status = path.stat()
-    except OSError:
+        status = _status_at(path)
+    except OSError as error:
+        raise unreachable(path, error) from None
+    return None if status is None else status.st_mode
+
+
+def _status_at(path: Path) -> os.stat_result | None:
+    # Path.exists says no, or raises, as the error's number may be; only these mean that there is nothing.
+    try:
+        return path.stat()
+    except (FileNotFoundError, NotADirectoryError):
         return None
-    return status.st_dev, status.st_ino
+
+
+def file_at(path: Path) -> tuple[int, int] | None:
+    """Return what tells a file from another that takes its place; None: there is none.
+
+    Raises
+    ------
+    CommitError
+        When that cannot be told now: the file may well be there, and is to be looked for again.
+    """
+    try:
+        status = _status_at(path)
+    except OSError as error:
+        raise cannot_look(path, error) from None
+    return None if status is None else (status.st_dev, status.st_ino)
 
 
 def writing_engine(path: Path, busy_ms: int | None = None) -> Engine:
@@ -122,7 +174,7 @@ def reading_engine(path: Path, busy_ms: int | None = None, *, beside_writer: boo
     ForeignDatabaseError
         When the file is not ours.
     """
-    if not path.exists():
+    if not is_there(path):
         raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
     if not beside_writer:
         refuse_foreign(path)
@@ -136,11 +188,17 @@ def reading_engine(path: Path, busy_ms: int | None = None, *, beside_writer: boo
 
 
 def reading_mode(path: Path) -> str:
-    """Return the parameter of a URI by which a database can be read where it lies."""
+    """Return the parameter of a URI by which a database can be read where it lies.
+
+    Raises
+    ------
+    StoreUnreachableError
+        As `is_there`.
+    """
     # Write-ahead logging needs a side file even to read; where none can be made and none is in use, none is needed.
     write_ahead = path.with_name(path.name + "-wal")
     archived = not os.access(path.parent, os.W_OK, effective_ids=os.access in os.supports_effective_ids)
-    return "immutable=1" if archived and not write_ahead.exists() else "mode=ro"
+    return "immutable=1" if archived and not is_there(write_ahead) else "mode=ro"
 
 
 def _engine(path: Path, how: str, pool: type[Pool], busy_ms: int | None = None) -> Engine:

@@ -22,7 +22,7 @@ from driftwatch.store.aside import (
     set_aside,
     take_log_along,
 )
-from driftwatch.store.errors import StoreError, commit_failed, file_gone, unreachable
+from driftwatch.store.errors import CommitError, StoreError, commit_failed, file_gone, unreachable
 from driftwatch.store.location import database_path
 from driftwatch.store.lock import WriterLock
 from driftwatch.store.opening import file_at, migrate, refuse_foreign, refuse_read_only, writing_engine
@@ -78,12 +78,16 @@ class Writer:
         self._use(connection)
 
     def _use(self, connection: Connection) -> None:
+        try:
+            self._file, self._log = file_at(self.path), file_at(log_of(self.path))
+        except CommitError:
+            connection.close()
+            connection.engine.dispose()
+            raise
         self._connection = connection
         self._headers: dict[HeaderKey, int] = {}
         self._is_open = True
-        self._file = file_at(self.path)
         self._ahead = AheadLog(self.path, self._say)
-        self._log = file_at(log_of(self.path))
 
     def _say(self, statement: str) -> tuple[int, ...]:
         """Execute a statement past the library that would begin a transaction, and return its first row."""
@@ -177,7 +181,8 @@ class Writer:
                 connection.exec_driver_sql(_insert(kind), rows)
         self._headers = headers
         self._unnamed = []
-        self._log = self._log or file_at(log_of(self.path))
+        with suppress(CommitError):  # the group is stored: where that cannot be told now, the next one tells it
+            self._log = self._log or file_at(log_of(self.path))
 
     @property
     def pinned_bytes(self) -> int:
@@ -186,7 +191,7 @@ class Writer:
 
     @property
     def is_at_its_place(self) -> bool:
-        """Whether the file is where it was opened."""
+        """Whether the file is where it was opened; raises CommitError where that cannot be told."""
         return self._file is not None and file_at(self.path) == self._file
 
     def _rows(
@@ -219,7 +224,8 @@ class Writer:
         Raises
         ------
         CommitError
-            At its begin, when the file is no longer where it was opened: what is written to a deleted file is lost.
+            At its begin, when the file is no longer where it was opened, for what is written to a deleted file is
+            lost, or when that cannot be told.
             At its end or inside, when the database refuses.
         """
         if not (self._is_open and self.is_at_its_place):
