@@ -79,6 +79,7 @@ class Follower:
         self._told = told
         self._lasting = lasting
         self._passed = {place.run} if place else set()  # runs that were reached: what follows them was stored later
+        self._had: set[str] = set()  # runs that the store tells of once more since it was begun with anew
         self._elsewhere: set[str] = set()  # runs that are published but not in the store that is asked
         self._told_of: set[str] = set()
         self.place = place
@@ -139,16 +140,29 @@ class Follower:
             self._skip(message, came, is_record)
 
     def _read_on(self) -> None:
-        more = True
+        more, place = True, self.place
         while more:
-            page = self._since(self.place)
-            if self.place is not None and not page.get("known", True):
-                self._told(
-                    f"the store holds nothing any more of run {self.place.run}, the last one that was had; "
+            page = self._since(place)
+            if place is not None and not page.get("known", True):
+                self._tell_once(
+                    f"the store holds nothing any more of run {place.run}, the last one that was had; "
                     "going on at its oldest record"
                 )
-            self._hand_on(page["records"])
-            more = page["more"] and bool(page["records"])
+                self._had |= self._passed - {place.run}  # what the store still gets of that one is news
+            records = page["records"]
+            fresh = [one for one in records if one["run"] not in self._had]
+            self._tell_holes(fresh)
+            self._hand_on(fresh)
+            more = page["more"] and bool(records)
+            place = Place.of(records[-1]) if records else place
+
+    def _tell_holes(self, records: Sequence[Message]) -> None:
+        """Tell what the store itself does not hold: rows that were damaged or pruned."""
+        last = self.place
+        for came in map(Place.of, records):
+            if last is not None and last.run == came.run and came.sequence > last.sequence + 1:
+                self._told(f"Hole: {Hole(None, last.sequence, came.sequence)}")
+            last = came
 
     def _skip(self, message: Message, came: Place, is_record: bool) -> None:
         """Tell what was missed, and go on with what came."""

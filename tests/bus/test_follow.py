@@ -43,7 +43,14 @@ class Daemon:
         if self.is_away:
             raise NoDaemonError("nobody answers")
         places = [Place.of(message) for message in self.store]
-        begin = places.index(place) + 1 if place in places else 0
+        begin = next((at for at, one in enumerate(places) if place and one.run == place.run), 0)
+        while (
+            place
+            and begin < len(places)
+            and places[begin].run == place.run
+            and (places[begin].sequence <= place.sequence)
+        ):
+            begin += 1
         records = self.store[begin : begin + self._page]
         known = place is None or place.run in {one.run for one in places}
         return {"records": records, "more": begin + self._page < len(self.store), "known": known}
@@ -154,4 +161,46 @@ def test_a_run_that_the_store_no_longer_holds_is_told() -> None:
     assert had == daemon.store
     assert told == [
         "the store holds nothing any more of run run 0, the last one that was had; going on at its oldest record"
+    ]
+
+
+def test_rows_that_the_store_lost_are_told_as_holes_within_a_page_and_between_pages() -> None:
+    daemon = Daemon(page=3)
+    for _ in range(12):
+        daemon.record()
+    daemon.restart()
+    for _ in range(3):
+        daemon.record()
+    for number in (10, 6, 5, 4, 1):  # pages are then 1 3 4, 8 9 10, 12 and two of the next run
+        del daemon.store[number]
+    had, told = _followed(daemon, [daemon.bus[-1]], lasting=True)
+    assert had == daemon.store
+    assert told == [
+        f"Hole: missed records after sequence {after} and before {before}"
+        for after, before in ((1, 3), (4, 8), (10, 12))
+    ]
+
+
+def test_where_the_store_begins_anew_what_was_had_of_it_does_not_come_twice() -> None:
+    """The last run that was had is gone from the store, as where an older copy of it was put back; others are there."""
+    daemon = Daemon(page=2)
+    for _ in range(3):
+        for _ in range(5):
+            daemon.record()
+        daemon.restart()
+    had: list[Message] = []
+    told: list[str] = []
+    follower = Follower(daemon.since, had.extend, told.append, lasting=True)
+    follower.take(daemon.bus[-1])
+    assert had == daemon.store
+    stored = list(had)
+    daemon.store = [one for one in daemon.store if one["run"] != "run 3"]
+    for _ in range(5):
+        daemon.record(published=False)
+    daemon.beat()
+    for message in (daemon.bus[-1], daemon.bus[-1]):
+        follower.take(message)
+    assert had == stored + daemon.store[10:]
+    assert [words.partition(";")[0] for words in told] == [
+        "the store holds nothing any more of run run 3, the last one that was had"
     ]
