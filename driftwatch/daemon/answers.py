@@ -28,6 +28,9 @@ PAGE_RECORDS = 500
 BUSY_MS = 200
 """How long a lock on the database is waited for, milliseconds: an asker hears within a second."""
 
+_FAILURES = (StoreError, OSError, ValueError, TypeError)
+"""What a look into a store may meet: a row that was damaged may hold a word that is none, or text for a number."""
+
 
 @dataclass(frozen=True, slots=True)
 class Stand:
@@ -67,16 +70,17 @@ class Answers:
         try:
             with Reader.open(self._store, BUSY_MS, beside_writer=True) as reader:
                 found = page(reader, request.run, request.sequence, PAGE_RECORDS)
-        except (StoreError, ValueError) as error:  # a row that was damaged may hold a word that is none
+            records = [encode(one) for one in found.records]
+        except _FAILURES as error:
             raise LookFailedError(str(error)) from None
-        return {"records": [encode(one) for one in found.records], "more": found.more, "known": found.known}
+        return {"records": records, "more": found.more, "known": found.known}
 
     def known(self, request: str) -> CommandDone | None:
         """Return the record of a command by the id of its request; None: there is none, or it cannot be told."""
         try:
             with Reader.open(self._store, BUSY_MS, beside_writer=True) as reader:
                 return command_of(reader, request)
-        except (StoreError, ValueError):
+        except _FAILURES:
             return None  # in trouble: a command that is new must be taken all the same
 
     def _status(self) -> Reply:

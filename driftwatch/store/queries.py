@@ -75,7 +75,7 @@ class Reader:
         StoreError
             When it is missing, foreign, damaged, or of another schema.
         """
-        path = database_path(str(url), Path.cwd())
+        path = database_path(str(url), Path())  # of a full path it is not asked whether the current folder is there
         engine = reading_engine(path, busy_ms, beside_writer=beside_writer)
         try:
             with engine.begin() as connection:

@@ -49,6 +49,30 @@ def test_since_gives_page_after_page(tmp_path: Path, measurement: Make) -> None:
         assert [one["sequence"] for one in rest["records"]] == list(range(PAGE_RECORDS + 1, PAGE_RECORDS + 11))
 
 
+@pytest.mark.parametrize(("column", "value"), [("time_ns", "x'e2e2'"), ("because", "'7'"), ("state", "'calm'")])
+def test_a_damaged_row_is_told_and_ends_nothing(tmp_path: Path, alert: Make, column: str, value: str) -> None:
+    path = tmp_path / "rows.db"
+    with Writer.open(path, "bench") as writer:
+        writer.write([alert(1)])
+        with writer.transaction() as connection:
+            connection.exec_driver_sql(f"UPDATE alert SET {column} = {value}")  # noqa: S608 - our own words
+        with pytest.raises(LookFailedError):
+            Answers(path).look(Request("r", "since"))
+
+
+def test_a_current_folder_that_is_gone_keeps_nobody_from_looking(
+    tmp_path: Path, measurement: Make, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    path, gone = tmp_path / "rows.db", tmp_path / "gone"
+    gone.mkdir()
+    with Writer.open(path, "bench") as writer:
+        writer.write([measurement(1)])
+        monkeypatch.chdir(gone)
+        gone.rmdir()
+        assert len(Answers(path).look(Request("r", "since"))["records"]) == 1
+        assert Answers(path).known("r") is None
+
+
 def test_what_cannot_be_told_is_said_and_what_cannot_be_looked_up_counts_as_new(tmp_path: Path) -> None:
     answers = Answers(tmp_path / "rows.db")
     with pytest.raises(LookFailedError, match=r"rows\.db does not exist"):
