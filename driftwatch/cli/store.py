@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import sys
 from contextlib import contextmanager
 from pathlib import Path
@@ -21,6 +22,13 @@ if TYPE_CHECKING:
     from driftwatch.store.care import StoreInfo
 
 _json_option = click.option("--json", "as_json", is_flag=True, help="One JSON object.")
+
+
+def _finite(context: click.Context, parameter: click.Parameter, value: float) -> float:
+    """Return a number that is one; click's callback of an option."""
+    if not math.isfinite(value):
+        raise click.BadParameter(f"got {value}; expected a number of days", context, parameter)
+    return value
 
 
 @click.group("store")
@@ -91,7 +99,12 @@ def check_command(store: str | None, config: str | None, as_json: bool) -> None:
 @command.command("prune", short_help="Remove what is older than so many days.")
 @store_options
 @click.option(
-    "--keep-days", type=click.FloatRange(min=0.0), required=True, metavar="DAYS", help="Remove what is older than this."
+    "--keep-days",
+    type=click.FloatRange(min=0.0),
+    required=True,
+    callback=_finite,
+    metavar="DAYS",
+    help="Remove what is older than this.",
 )
 @_json_option
 def prune_command(store: str | None, config: str | None, keep_days: float, as_json: bool) -> None:
@@ -144,9 +157,15 @@ def backup_command(target: Path, store: str | None, config: str | None, as_json:
     Example: driftwatch store backup copy.db --config config/demo.toml
     """
     from driftwatch.store.care import backup
+    from driftwatch.store.errors import StoreError
+    from driftwatch.store.opening import is_there
 
     path = _path(store, config)
-    if target.exists():
+    try:
+        is_taken = is_there(target)
+    except StoreError as error:
+        raise click.UsageError(str(error)) from None
+    if is_taken:
         raise click.UsageError(f"{target} is there already; expected a new name; name another, or move it away")
     with _work(), working(shown=_bar_shown(as_json)) as bar:
         size = backup(path, target.absolute(), bar)

@@ -26,6 +26,8 @@ STEP_ROWS = 1000
 """Rows that one step takes away at most: about ten milliseconds."""
 
 _DAY_NS = 86_400 * NS
+_FIRST_NS = -(2**63)  # what a row can hold
+_LONGEST_DAYS = 1e6  # reaches from any time to before `_FIRST_NS`
 _FRAME = ("run", "alert")
 """Kinds that go last with their run."""
 
@@ -38,7 +40,7 @@ def prune(writer: Writer, keep_days: float, now_ns: int, rows: int = STEP_ROWS) 
     writer
         The database's writer.
     keep_days
-        Age in days from which rows are old.
+        Age in days from which rows are old, finite; more than some hundred years means for ever.
     now_ns
         The wall clock, UTC.
     rows
@@ -54,7 +56,7 @@ def prune(writer: Writer, keep_days: float, now_ns: int, rows: int = STEP_ROWS) 
     CommitError
         When the step failed; nothing was removed.
     """
-    cut_ns = now_ns - round(keep_days * _DAY_NS)
+    cut_ns = _cut(keep_days, now_ns)
     with writer.transaction() as connection:
         for kind in KINDS:
             if kind in ("run", "baseline"):
@@ -69,13 +71,18 @@ def prune(writer: Writer, keep_days: float, now_ns: int, rows: int = STEP_ROWS) 
 
 def count_old(connection: Connection, keep_days: float, now_ns: int) -> int:
     """Return about how many rows pruning would take away: those of the runs' frame are left out."""
-    cut_ns = now_ns - round(keep_days * _DAY_NS)
+    cut_ns = _cut(keep_days, now_ns)
     return sum(
         connection.scalar(sa.select(sa.func.count()).select_from(TABLES[kind]).where(*_is_old(TABLES[kind], cut_ns)))
         or 0
         for kind in KINDS
         if kind not in ("run", "baseline")
     )
+
+
+def _cut(keep_days: float, now_ns: int) -> int:
+    """Return the time before which rows are old, UTC; the first that a row can have where that lies before it."""
+    return max(now_ns - round(min(keep_days, _LONGEST_DAYS) * _DAY_NS), _FIRST_NS)
 
 
 def _is_old(table: sa.Table, cut_ns: int) -> tuple[sa.ColumnElement[bool], ...]:

@@ -172,6 +172,12 @@ def test_prune_removes_what_is_old_and_says_how_much(records: list[Envelope]) ->
         assert reader.runs() == []
 
 
+@pytest.mark.parametrize("days", ["nan", "inf", "-inf", "-1"])
+def test_prune_is_refused_for_what_is_no_number_of_days(records: list[Envelope], days: str) -> None:
+    assert _call("prune", "--keep-days", days).exit_code == 2
+    assert _object("prune", "--keep-days", "1e9")["removed"] == 0
+
+
 def test_prune_is_refused_while_a_daemon_writes_and_names_it(records: list[Envelope]) -> None:
     with Writer.open("driftwatch.db", "line 3"):
         done = _call("prune", "--keep-days", "1")

@@ -9,7 +9,7 @@ from pathlib import Path
 import pytest
 from driftwatch.records import NS, AlertState, Baseline, Envelope
 from driftwatch.store.queries import Reader
-from driftwatch.store.retention import prune
+from driftwatch.store.retention import count_old, prune
 from driftwatch.store.writer import Writer
 
 Make = Callable[..., Envelope]
@@ -91,3 +91,15 @@ def test_a_run_may_go_on_after_it_was_pruned_away(tmp_path: Path, measurement: M
         _prune_all(writer)
         writer.write([measurement(2, time_ns=NOW), measurement(1, run=str(uuid.uuid4()), time_ns=NOW)])
         assert sorted(_left(writer)) == [1, 2]
+
+
+@pytest.mark.parametrize(("days", "old"), [(1e5, 1), (1e6, 0), (1e9, 0), (1e308, 0)])
+def test_rows_that_are_kept_for_longer_than_there_are_times_are_kept_for_ever(
+    tmp_path: Path, measurement: Make, days: float, old: int
+) -> None:
+    """Times reach back to the year 1677."""
+    with Writer.open(tmp_path / "a.db", "s", clock=lambda: -(2**63)) as writer:
+        writer.write([measurement(1, time_ns=-(2**63)), measurement(2, time_ns=0)])
+        with writer.transaction() as connection:
+            assert count_old(connection, days, NOW) == old
+        assert prune(writer, days, NOW) == old
