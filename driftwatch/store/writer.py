@@ -319,6 +319,10 @@ class Writer:
         self.close()
 
 
+_OF_THE_LIBRARY = (sa.exc.StatementError, sqlite3.Error, UnicodeEncodeError, OverflowError)
+"""What the library raises inside a transaction; the last two where a value is none that a row can hold."""
+
+
 class _Transaction:
     """One transaction of the writer, with the errors of the library translated at its edge."""
 
@@ -331,6 +335,8 @@ class _Transaction:
     def __enter__(self) -> Connection:
         self._before = self._changes()
         try:
+            if self._driver.in_transaction:  # the one before could not be rolled back
+                self._driver.rollback()
             self._say("FULL" if self._synchronous else "NORMAL")
             self._begun = self._connection.begin()
         except (sa.exc.DBAPIError, sqlite3.Error) as error:
@@ -342,17 +348,30 @@ class _Transaction:
             try:
                 self._begun.commit()
             except sa.exc.DBAPIError as failure:
-                self._begun.rollback()
+                self._roll_back()
                 raise commit_failed(self._path, failure) from failure
             self._committed(self._changes() - self._before)
             return
-        self._begun.rollback()
-        if isinstance(error, sa.exc.DBAPIError):
+        failed = self._roll_back()
+        if isinstance(error, _OF_THE_LIBRARY):
             raise commit_failed(self._path, error) from error
+        if failed is not None and isinstance(error, Exception):
+            raise commit_failed(self._path, failed) from error
+
+    def _roll_back(self) -> Exception | None:
+        """Take back what was begun; return why that failed: it is then done before the next one begins."""
+        try:
+            self._begun.rollback()
+        except (sa.exc.DBAPIError, sqlite3.Error) as failure:
+            return failure
+        return None
+
+    @property
+    def _driver(self) -> Any:
+        return self._connection.connection.driver_connection
 
     def _changes(self) -> int:
-        driver: Any = self._connection.connection.driver_connection
-        return int(driver.total_changes)
+        return int(self._driver.total_changes)
 
     def _say(self, level: str) -> None:
         # It has no effect inside a transaction, so it is said before one, past the library that would begin one.

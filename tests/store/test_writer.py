@@ -18,7 +18,7 @@ from typing import Any
 import pytest
 from driftwatch.records import KINDS, Envelope, Level, Measurement
 from driftwatch.store import opening
-from driftwatch.store.errors import CommitError, StoreBusyError
+from driftwatch.store.errors import CommitError, StoreBusyError, Trouble
 from driftwatch.store.queries import Reader, Wanted
 from driftwatch.store.rows import form_of
 from driftwatch.store.writer import Writer
@@ -173,3 +173,32 @@ def _processor_time(work: Callable[[], object]) -> float:
     begin = time.process_time()
     work()
     return time.process_time() - begin
+
+
+@pytest.mark.parametrize("changes", [{"mode": "rock\udce9"}, {"samples": 2**63}], ids=["no text", "too large"])
+def test_a_value_that_no_row_can_hold_is_refused_and_the_writer_stays_usable(
+    writer: Writer, measurement: Make, changes: dict[str, object]
+) -> None:
+    with pytest.raises(CommitError) as raised:
+        writer.write([measurement(1), measurement(2, **changes)])
+    assert raised.value.trouble is Trouble.REFUSED
+    writer.write([measurement(1)])
+    assert len(_all(writer.path)) == 1
+
+
+def test_a_roll_back_that_fails_is_done_before_the_next_group(writer: Writer, measurement: Make) -> None:
+    writer.write([measurement(1)])
+    driver = writer._connection.connection.driver_connection
+
+    def authorize(what: int, operation: str | None, *_: object) -> int:
+        is_back = (what, operation) == (sqlite3.SQLITE_TRANSACTION, "ROLLBACK")
+        return sqlite3.SQLITE_DENY if is_back else sqlite3.SQLITE_OK
+
+    driver.set_authorizer(authorize)
+    with pytest.raises(CommitError, match="UNIQUE"):
+        writer.write([measurement(2), measurement(1)])
+    with pytest.raises(CommitError, match="not authorized"), writer.transaction():
+        raise ValueError("no error of the library")
+    driver.set_authorizer(None)
+    writer.write([measurement(3)])
+    assert [one.sequence for one in _all(writer.path)] == [1, 3]
