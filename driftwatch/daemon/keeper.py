@@ -171,7 +171,8 @@ class Keeper:
         while self._spool:
             self._store(GROUP_RECORDS)
 
-    def _store(self, most: int) -> None:
+    def _store(self, most: int) -> int:
+        """Store the first records, about `most`, and return how many that were."""
         group = self._spool.first(most)
         if self._writer is not None:
             self._writer.write(group)
@@ -181,6 +182,7 @@ class Keeper:
             self._publisher.publish(group)
         if self._out is not None:
             self._out(group)
+        return len(group)
 
     # ------------------------------------------------------------------------------------------ trouble
 
@@ -224,10 +226,8 @@ class Keeper:
 
     def _try_again(self, now: float) -> None:
         """Store what waited, a part at a time; the trouble is over when all of it is stored."""
-        count = min(len(self._spool), CATCH_UP_RECORDS)
         try:
-            if count:
-                self._store(count)
+            count = self._store(CATCH_UP_RECORDS) if self._spool else 0
         except CommitError as error:
             self.failed(error, now)
             return

@@ -8,7 +8,20 @@ from itertools import islice
 from operator import attrgetter
 from typing import TYPE_CHECKING
 
-from driftwatch.records import KIND_OF, Alert, CommandDone, Decay, Health, Level, Measurement, Note, Run, Tone, Track
+from driftwatch.records import (
+    KIND_OF,
+    Alert,
+    CommandDone,
+    CovariateValue,
+    Decay,
+    Health,
+    Level,
+    Measurement,
+    Note,
+    Run,
+    Tone,
+    Track,
+)
 
 if TYPE_CHECKING:
     from collections.abc import Iterable
@@ -19,7 +32,8 @@ MOST_RECORDS = 200_000
 """Records that wait at most, some 150 MB: four hours of three modes, half an hour of eight channels of three."""
 
 _READINGS = (Measurement, Track, Level, Tone, Decay)
-_KEPT = (Alert, Health, CommandDone, Note, Run)
+_KEPT = (Alert, Health, CommandDone, CovariateValue, Note, Run)
+_EFFECTS = (Alert, CovariateValue, Note)
 _RANK = dict.fromkeys(_READINGS, 0) | dict.fromkeys(_KEPT, 2)
 """What goes first where there is no room: readings, then what is not named, last what was decided, done and said."""
 
@@ -57,8 +71,17 @@ class Spool:
             self.lost[KIND_OF[type(gone.body)]] += 1
 
     def first(self, most: int) -> list[Envelope]:
-        """Return the first records, `most` at most, without taking them away."""
-        return list(islice(merge(*self._ranks, key=_sequence), most))
+        """Return the first records, about `most`, without taking them away: a command and what it does are not parted.
+
+        What it does follows it with the same time; in one transaction, both are stored or neither is.
+        """
+        left = merge(*self._ranks, key=_sequence)
+        found = list(islice(left, most))
+        for one in left:
+            if not isinstance(one.body, _EFFECTS) or one.time_ns != found[-1].time_ns:
+                break
+            found.append(one)
+        return found
 
     def take_away(self, count: int) -> None:
         """Take the first `count` records away: they are stored."""

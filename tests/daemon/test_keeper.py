@@ -8,6 +8,7 @@ import threading
 import time
 from collections.abc import Callable, Sequence
 from contextlib import closing
+from dataclasses import replace
 from itertools import pairwise
 from pathlib import Path
 
@@ -23,7 +24,7 @@ from driftwatch.daemon.keeper import (
     Keeper,
 )
 from driftwatch.daemon.spool import Spool
-from driftwatch.records import Envelope, Fault, Heartbeat, Origin, TimeQuality
+from driftwatch.records import CommandDone, CovariateValue, Envelope, Fault, Heartbeat, Origin, TimeQuality
 from driftwatch.store.errors import CommitError, Trouble
 from driftwatch.store.lock import WriterLock
 from driftwatch.store.queries import Reader, Wanted
@@ -268,3 +269,28 @@ def test_what_was_lost_is_counted_and_told(tmp_path: Path, measurement: Make, al
     with Reader.open(path) as reader:
         assert [one.sequence for one in reader.records("measurement")] == list(range(17, 26))
         assert [one.sequence for one in reader.records("alert")] == [1]
+
+
+def test_a_command_and_what_it_does_are_stored_and_published_together(measurement: Make, alert: Make) -> None:
+    recorder = _Recorder()
+    keeper = _patient(recorder, most=10_000)
+    recorder.broken = Trouble.FULL
+    keeper.take([measurement(number) for number in range(1, CATCH_UP_RECORDS)])
+    keeper.flush_due(0.0)
+    time_ns = measurement(CATCH_UP_RECORDS).time_ns
+    done = CommandDone("r1", "ann", "acknowledge", "drive end/rocking/low", None, None, None, "done")
+    keeper.take([replace(measurement(CATCH_UP_RECORDS), body=done), alert(CATCH_UP_RECORDS + 1, time_ns=time_ns)])
+    keeper.take([measurement(CATCH_UP_RECORDS + 2, time_ns=time_ns)])
+    recorder.broken = None
+    keeper.flush_due(10.0)
+    keeper.flush_due(10.05)
+    groups = [group for what, group in recorder.calls if what == "write"]
+    assert groups == [list(range(1, CATCH_UP_RECORDS + 2)), [CATCH_UP_RECORDS + 2]]
+    assert f"{CATCH_UP_RECORDS + 2} records that waited are stored" in keeper.news()[-1].words
+
+
+def test_a_value_that_a_person_gave_outlives_readings(measurement: Make) -> None:
+    spool = Spool(2)
+    given = replace(measurement(1), body=CovariateValue("speed", 1480.0, "1/min"))
+    spool.extend([given, measurement(2), measurement(3)], bounded=True)
+    assert [one.sequence for one in spool.first(10)] == [1, 3]
