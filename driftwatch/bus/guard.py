@@ -47,7 +47,8 @@ class Register:
         self._keys = keys
         self._told = told
         self._lock = threading.Lock()
-        self._seen: tuple[_Signature, _Signature] = (None, None)
+        self._seen: tuple[_Signature, _Signature] | None = (None, None)  # None: not wholly read
+        self._faults: set[str] = set()  # that were told
         self._holders: dict[str, Granted] = {}
         self._revocations = 0
 
@@ -68,28 +69,31 @@ class Register:
         seen = (_signature(self._keys.granted_path), _signature(self._keys.operator_path))
         if seen == self._seen:
             return
-        self._seen = seen
-        before = self._holders
-        self._holders = {one.public: one for one in (*self._operator(), *self._granted())}
+        before, faults = self._holders, set[str]()
+        self._holders = {one.public: one for one in (*self._operator(faults), *self._granted(faults))}
+        self._seen = None if faults else seen  # it may have been for want of a descriptor: read again at the next look
+        for fault in sorted(faults - self._faults):
+            self._told(fault, True)
+        self._faults = faults
         gone = sorted(one.name for public, one in before.items() if public not in self._holders)
         if gone:
             self._revocations += 1
             self._told(f"No longer let in: {', '.join(gone)}", False)
 
-    def _granted(self) -> tuple[Granted, ...]:
+    def _granted(self, faults: set[str]) -> tuple[Granted, ...]:
         try:
             return self._keys.granted()
         except KeysError as error:
-            self._told(f"No granted key is let in: {error}", True)
+            faults.add(f"No granted key is let in: {error}")
             return ()
 
-    def _operator(self) -> tuple[Granted, ...]:
+    def _operator(self, faults: set[str]) -> tuple[Granted, ...]:
         try:
             key = self._keys.operator()
         except NoKeyError:
             return ()  # it is made later in the start
         except KeysError as error:
-            self._told(f"The user's own key is not let in: {error}", True)
+            faults.add(f"The user's own key is not let in: {error}")
             return ()
         return (Granted(key.name, key.role, key.public, 0),)
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import resource
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -76,6 +77,23 @@ def test_a_damaged_list_lets_nobody_of_it_in(
     keys.granted_path.write_text("{")
     assert register.holder(key.public) is None
     assert any("holds no keys" in line for line in lines)
+
+
+def test_a_list_that_could_not_be_read_for_a_moment_is_read_again_though_it_is_the_same(
+    keys: KeyFolder, register: Register, lines: list[str], tmp_path: Path
+) -> None:
+    """As where the process had no file descriptor left; the fault is told once, not at every look."""
+    key = keys.grant("x", Role.LOOK, 0, WHERE, tmp_path / "x.key")
+    soft, hard = resource.getrlimit(resource.RLIMIT_NOFILE)
+    resource.setrlimit(resource.RLIMIT_NOFILE, (3, hard))
+    try:
+        during = [register.holder(key.public) for _ in range(3)]
+    finally:
+        resource.setrlimit(resource.RLIMIT_NOFILE, (soft, hard))
+    assert during == [None] * 3
+    assert len([line for line in lines if line.startswith("No granted key is let in")]) == 1
+    assert register.holder(key.public) is not None
+    assert register.holder(keys.operator().public) is not None
 
 
 # ---------------------------------------------------------------------------------------------- a publisher with keys
