@@ -46,9 +46,6 @@ HANDSHAKE_MS = 5000
 LINGER_MS = 500
 """How long closing waits for messages under way."""
 
-REBIND_S = 1.0
-"""How long `Publisher.rebind` tries to take its port again: the old socket frees it a moment after it was closed."""
-
 
 def checked_endpoint(endpoint: str, *, guarded: bool = False) -> str:
     """Return an endpoint unchanged if it may be bound; `guarded`: only whoever has a key comes in.
@@ -111,6 +108,7 @@ class Publisher:
             self.close()
             raise _bind_error(endpoint, error) from None
         self.endpoint: str = self._socket.getsockopt_string(zmq.LAST_ENDPOINT)
+        self.trouble: BusError | None = None  # why nothing goes out since the last `rebind`; None: it does
 
     def _new_socket(self, endpoint: str) -> zmq.Socket[bytes]:
         socket = self._context.socket(zmq.XPUB)
@@ -132,25 +130,20 @@ class Publisher:
         """Send every listener away and let in anew whoever may come: one who was let in before may be so no more.
 
         Listeners come back by themselves. What is published before they are back is lost to them, and they see that
-        by the numbers; last values they get again.
-
-        Raises
-        ------
-        BusError
-            When the endpoint is not free within `REBIND_S`; what is published then goes nowhere until this succeeds.
+        by the numbers; last values they get again. The old socket frees the port a moment after it was closed: what
+        is published meanwhile goes nowhere, and `serve` tries again. Nothing here waits; see `trouble`.
         """
         self._socket.close(linger=0)
         self._socket = self._new_socket(self.endpoint)
-        end = time.monotonic() + REBIND_S
-        while True:
-            try:
-                self._socket.bind(self.endpoint)
-            except zmq.ZMQError as error:
-                if error.errno != errno.EADDRINUSE or time.monotonic() > end:
-                    raise _bind_error(self.endpoint, error) from None
-                time.sleep(0.005)
-            else:
-                return
+        self._bind_again()
+
+    def _bind_again(self) -> None:
+        try:
+            self._socket.bind(self.endpoint)
+        except zmq.ZMQError as error:
+            self.trouble = _bind_error(self.endpoint, error)
+        else:
+            self.trouble = None
 
     def publish(self, envelopes: Iterable[Envelope]) -> None:
         """Send records in order."""
@@ -167,6 +160,8 @@ class Publisher:
 
     def serve(self) -> None:
         """Send last values to whoever has subscribed since; to be called every second at least, at any time."""
+        if self.trouble is not None:
+            self._bind_again()
         if prefixes := self._asked_for():
             self._last.want(*prefixes)
         for frames in self._last.due(time.monotonic()):

@@ -52,7 +52,7 @@ class Door:
         self._publisher: Publisher | None = None  # that is guarded
         self._revocations = 0
         self._answers: Answers | None = None
-        self._is_in_use = self._was_told_dead = False
+        self._is_in_use = self._was_told_dead = self._was_told_unheard = False
         self.desk = CommandDesk(self._post)
 
     # ------------------------------------------------------------------------------------------ opening
@@ -108,15 +108,16 @@ class Door:
         if self._port is not None and self._port.is_dead and not self._was_told_dead:
             self._was_told_dead = True
             self._told("The control port takes no commands any more, through a fault of the program; restart it", True)
-        revocations = self._guard.register.revocations
-        if self._publisher is None or revocations == self._revocations:
+        if self._publisher is None:
             return
-        try:
-            self._publisher.rebind()
-        except BusError as error:
-            self._told(f"Nothing is published until the port is free again: {error}", True)
-        else:
+        trouble, was_told = self._publisher.trouble, self._was_told_unheard
+        self._was_told_unheard = trouble is not None
+        if trouble is not None and not was_told:  # for a second by now: a port is free again sooner
+            self._told(f"Nothing is published until the port is free again: {trouble}", True)
+        revocations = self._guard.register.revocations
+        if revocations != self._revocations:
             self._revocations = revocations
+            self._publisher.rebind()
 
     def shut(self) -> None:
         """Answer what waits and close the control port; leave no keys behind if nothing came of the start."""

@@ -283,6 +283,24 @@ def test_bound_anew_everybody_comes_in_again_and_gets_last_values(
         assert _received(socket, 1)[0][1] == encode(measurement(1)) | {"repeated": True}
 
 
+def test_while_its_port_is_taken_it_waits_for_nothing_and_is_heard_when_the_port_is_free(
+    context: zmq.Context[zmq.Socket[bytes]], measurement: Make, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    waits: list[float] = []
+    monkeypatch.setattr(time, "sleep", waits.append)
+    with Publisher(ANY_PORT, context) as publisher:
+        with Publisher(ANY_PORT) as other:
+            publisher.endpoint = other.endpoint  # as if that one had come in between
+            publisher.rebind()
+            publisher.publish([measurement(1)])
+            assert "is taken by another process" in str(publisher.trouble)
+        with _late(context, publisher, "") as socket:
+            _serve_until_it_hears(publisher, socket)
+            assert publisher.trouble is None
+            assert _received(socket, 1)[0][1] == encode(measurement(1)) | {"repeated": True}
+    assert waits == []
+
+
 def test_a_taken_port_is_an_error_that_says_what_to_do() -> None:
     with Publisher(ANY_PORT) as publisher, pytest.raises(BusError, match=r"is taken by another.*another port"):
         Publisher(publisher.endpoint)
