@@ -184,8 +184,10 @@ class Service:
         try:
             self._pruner.step(now)
         except CommitError as error:
-            if error.trouble in (Trouble.DAMAGED, Trouble.REFUSED):
+            if error.trouble is Trouble.DAMAGED:
                 self._keeper.failed(error, now)
+            elif error.trouble is Trouble.REFUSED:  # a fault of pruning: nothing of the run needs it
+                self._outlets.told(f"What is old was not removed from the store: {error}", True)
 
     def _notify(self, now: float) -> None:
         live, manager = self._live, self._manager
@@ -245,6 +247,7 @@ class Service:
         """Take over a changed configuration, or tell why that needs a restart; return the record of it."""
         self._manager.reloading()
         path = self._config.path
+        place = _legible(str(path))
         try:
             new = load(path) if path is not None else self._config
             problems = [*map(str, unserved(new)), *reload_plan(self._config, new)]
@@ -256,10 +259,10 @@ class Service:
             outcome = "refused: " + "; ".join(problems)
         else:
             self._take_over(new)
-            self._outlets.told(f"The configuration was reloaded from {path}", False)
+            self._outlets.told(f"The configuration was reloaded from {place}", False)
             outcome = f"{DONE}: taken over, sha256 {new.sha256}"
         self._manager.ready(self._status())
-        return self._fed(replace(command, target=str(path), outcome=outcome))
+        return self._fed(replace(command, target=place, outcome=outcome))
 
     def _take_over(self, new: Configuration) -> None:
         self._keeper.take(self._station.reload(new))
@@ -267,6 +270,11 @@ class Service:
         if new.daemon.log_level != self._config.daemon.log_level:
             self._outlets.level(new.daemon.log_level)
         self._config = new
+
+
+def _legible(text: str) -> str:
+    """Return a text that can be stored: a file's name may hold bytes that are none of UTF-8."""
+    return text.encode("utf-8", "surrogateescape").decode("utf-8", "replace")
 
 
 @contextmanager

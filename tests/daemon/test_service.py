@@ -4,11 +4,14 @@ from __future__ import annotations
 
 import os
 import signal
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
 import pytest
 from card_files import Row, free_port
+from driftwatch.records import Envelope
+from driftwatch.store.writer import Writer
 from live_card import Daemon
 
 BAND = """
@@ -61,7 +64,8 @@ class Bench(Daemon):
     """The daemon of the configuration above, which is written again and again."""
 
     def __init__(self, folder: Path) -> None:
-        super().__init__(folder / "bench.toml", dict(os.environ))
+        super().__init__(folder / "bench \udce9.toml", dict(os.environ))  # a byte that is none of UTF-8
+        self.legible = str(folder / "bench \ufffd.toml")
         self._ports = {"port": free_port(), "control": free_port()}
 
     def write(
@@ -121,9 +125,12 @@ def measured_without_a_hole(daemon: Bench) -> None:
 GONE = {"alert": "drive end/rocking/goes", "previous_state": "unacknowledged", "state": "normal"}
 
 
-def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_sample(daemon: Bench) -> None:
+def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_sample(
+    daemon: Bench, measurement: Callable[..., Envelope]
+) -> None:
     """One daemon, reloaded again and again: it starts only once, which is what takes long."""
     daemon.write(("stays", 400.0), ("goes", 401.0), ("moves", 402.0))
+    cannot_prune(daemon, measurement(1, time_ns=0))
     with daemon:
         limits_move_and_what_is_gone_ends(daemon)
         what_is_refused_leaves_all_as_it_was(daemon)
@@ -134,8 +141,21 @@ def test_reloads_take_over_what_they_may_refuse_the_rest_by_its_key_and_lose_no_
         assert moves(daemon, "stays") == [("normal", "unacknowledged")]
         assert moves(daemon, "goes") == [("normal", "unacknowledged"), ("unacknowledged", "normal")]
         assert len(daemon.of("run")) == 2
+        assert lines_with(daemon, "What is old was not removed from the store: ")  # and the run goes on
         assert daemon.of("alert", condition="no_data") == []
         measured_without_a_hole(daemon)
+
+
+def cannot_prune(daemon: Bench, old: Envelope) -> None:
+    """Make a store with an old record in it that cannot be removed."""
+    path = daemon.config.with_name("state") / "rows.db"
+    path.parent.mkdir()
+    with Writer.open(path, "bench", clock=lambda: 0) as writer, writer.transaction() as connection:
+        connection.exec_driver_sql(
+            "CREATE TRIGGER kept BEFORE DELETE ON measurement BEGIN SELECT RAISE(ABORT, ''); END"
+        )
+    with Writer.open(path, "bench", clock=lambda: 0) as writer:
+        writer.write([old])
 
 
 def lines_with(daemon: Bench, words: str) -> list[str]:
@@ -148,7 +168,7 @@ def limits_move_and_what_is_gone_ends(daemon: Bench) -> None:
     before = {name: stands(daemon, name) for name in ("stays", "goes", "moves")}
     daemon.write(("moves", 350.0), ("comes", 403.0), ("stays", 400.0))
     command = daemon.reload()
-    assert (command["by"], command["action"], command["target"]) == ("signal", "reload", str(daemon.config))
+    assert (command["by"], command["action"], command["target"]) == ("signal", "reload", daemon.legible)
     assert command["outcome"].startswith("done: taken over, sha256 ")
     gone = daemon.until(lambda: daemon.of("alert", **GONE))[0]
     assert gone["occurrence"] == before["goes"]["occurrence"]
@@ -175,7 +195,7 @@ def what_is_refused_leaves_all_as_it_was(daemon: Bench) -> None:
     daemon.config.unlink()
     reason = daemon.reload()["outcome"]
     assert reason.startswith("refused: ")
-    assert str(daemon.config) in reason
+    assert "bench \\udce9.toml: got no such file" in reason
 
 
 def it_changes_how_much_is_logged_and_how_long_rows_are_kept(daemon: Bench) -> None:
