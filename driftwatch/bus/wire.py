@@ -115,7 +115,8 @@ def _plain(value: Any) -> Any:
     return value
 
 
-def _as_json(message: dict[str, Any]) -> bytes:
+def line_of(message: dict[str, Any]) -> bytes:
+    """Return an object as the bus carries it: a line of UTF-8 without its end, with null for a number not finite."""
     try:
         return _encode_finite(message).encode()
     except ValueError:  # some number is not finite: rare, so looked for only then
@@ -138,10 +139,10 @@ def encode_json(envelope: Envelope) -> bytes:
     try:
         text = _encode_values([envelope.sequence, envelope.previous, time_text(envelope.time_ns), *values])
     except ValueError:  # some number is not finite
-        return _as_json(_encoded(envelope))
+        return line_of(_encoded(envelope))
     parts = tuple(text[1:-1].split(_MARK))
     if len(parts) != 3 + len(values):  # a list of several items was cut as well
-        return _as_json(_encoded(envelope))
+        return line_of(_encoded(envelope))
     line = _template(kind, envelope.station, envelope.run, envelope.origin, envelope.time_quality) % parts
     return line.encode()
 
@@ -160,7 +161,7 @@ def encode_heartbeat(heartbeat: Heartbeat) -> bytes:
     for field in fields_of(Heartbeat):
         value = getattr(heartbeat, field.name)
         message[field.edge_name] = time_text(value) if field.is_time else value
-    return _as_json(message)
+    return line_of(message)
 
 
 def as_repeated(line: bytes) -> bytes:

@@ -179,7 +179,7 @@ def _live(way: Way, topics: tuple[str, ...]) -> Iterator[_Heard]:
 def _whole(way: Way, stack: ExitStack) -> Iterator[_Heard]:
     """Yield what comes, with what was missed in its place."""
     from driftwatch.bus.follow import Follower
-    from driftwatch.bus.wire import HEARTBEAT, is_repeated
+    from driftwatch.bus.wire import HEARTBEAT, is_repeated, line_of
     from driftwatch.cli.listen_asking import StoredSince
 
     taken: list[dict[str, Any]] = []
@@ -192,7 +192,7 @@ def _whole(way: Way, stack: ExitStack) -> Iterator[_Heard]:
         for record in taken:
             its_topic = _topic_in(record)
             if shown.is_new(its_topic, record):
-                yield its_topic, raw if record is message else _line(record), record
+                yield its_topic, raw if record is message else line_of(record), record
         taken.clear()
         if is_repeated(message):
             # Of what is to come as a record a last value says nothing.
@@ -221,10 +221,6 @@ class Shown:
             return False
         self._last[topic] = (message["run"], message["sequence"])
         return True
-
-
-def _line(message: dict[str, Any]) -> bytes:
-    return json.dumps(message, ensure_ascii=False, separators=(",", ":")).encode()
 
 
 def _print(topic: str, raw: bytes, message: dict[str, Any], as_json: bool) -> None:

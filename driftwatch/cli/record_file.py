@@ -12,7 +12,7 @@ from typing import TYPE_CHECKING, Any, Self
 import click
 
 from driftwatch.bus.follow import Place
-from driftwatch.bus.wire import HEARTBEAT
+from driftwatch.bus.wire import HEARTBEAT, line_of
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -59,7 +59,7 @@ class RecordFile:
         click.ClickException
             When there is no room (exit status 1); what was written of them is sorted out at the next start.
         """
-        lines = b"".join(_line(record) for record in records)
+        lines = b"".join(line_of(record) + b"\n" for record in records)
         written = 0
         try:
             while written < len(lines):
@@ -119,8 +119,3 @@ class RecordFile:
 
 _BEGIN = b'{"kind":"'
 """So every line begins."""
-
-
-def _line(record: dict[str, Any]) -> bytes:
-    """Return the line of a record, byte by byte as the bus carries it."""
-    return json.dumps(record, ensure_ascii=False, allow_nan=False, separators=(",", ":")).encode() + b"\n"
