@@ -544,7 +544,7 @@ class Heartbeat:
     worst_alert: Priority | None  # highest priority that stands
     sequence: int  # of the last record published
     unsaved: int = 0  # records that could not be stored when they were due, and so were not published: they wait
-    unsaved_s: float = 0.0  # for how long the oldest of them has waited
+    unsaved_s: float = 0.0  # since the store first took no rows, until all that waited is stored
 
 
 # ---------------------------------------------------------------------------------------------- topics

@@ -177,8 +177,8 @@ class Board:
         elif beat is not None and beat.sample_age_s is not None and beat.sample_age_s > SAMPLES_LATE_S:
             found.append(f"samples do not advance: the last came {duration(round(beat.sample_age_s, 1))} ago")
         if beat is not None and beat.unsaved:
-            waits = f"the oldest for {duration(round(beat.unsaved_s, 1))}"
-            found.append(f"the store takes no rows: {beat.unsaved} records wait for it, {waits}; see the daemon's log")
+            since = f"in trouble for {duration(round(beat.unsaved_s, 1))}"
+            found.append(f"the store takes no rows: {beat.unsaved} records wait for it, {since}; see the daemon's log")
         if not self.names and not self.doubts:
             found.append("no mode has a reading yet")
         return found

@@ -40,7 +40,7 @@ GONE_S = 3.0
 """How long a file that was taken away is waited for before another is begun, seconds."""
 
 ANEW = "anew"
-"""Key of the news that another database was begun: over as soon as it is told."""
+"""Key of the news that records go into another database: over as soon as it is told."""
 
 _ON_DISK = (Trouble.FULL, Trouble.DISK)
 
@@ -269,5 +269,5 @@ class Keeper:
 
 
 def _anew(gone: Predecessor, *, is_under_way: bool = False) -> StoreNews:
-    words = f"a new database was begun; the one before it: {gone.path} ({gone.reason})"
+    words = f"records go into another database; the one before it: {gone.path} ({gone.reason})"
     return StoreNews(ANEW, words, Fault.STORE, goes_on=is_under_way)

@@ -95,7 +95,8 @@ _REMEDIES = {
     "full": "the disk is full; free some space or lower [store] keep_days",
     "no room": "free some space or lower [store] keep_days",
     "readonly": "the database may only be read; change the permissions of the file and its folder",
-    "malformed": "the database is damaged; keep the file, save what `driftwatch readings` still shows, start a new one",
+    "malformed": "the database is damaged; keep the file, for `driftwatch readings` still shows what can be read; "
+    "a live run sets it aside and goes on in a new one by itself",
     "not a database": "the file is no SQLite database; name another file",
     "i/o error": "the disk does not answer as it should; check it and the file system",
     "input/output error": "the disk does not answer as it should; check it and the file system",
@@ -159,6 +160,6 @@ def file_gone(path: Path) -> CommitError:
     """Return the error about a database that was taken away from under its writer."""
     return CommitError(
         f"{path}: nothing of this group was stored: the file was deleted, moved or replaced since it was opened; "
-        "expected to find it where it was; leave it there while it is written to, and begin again",
+        "expected to find it where it was; put it back: a live run else goes on in another by itself, in a few seconds",
         Trouble.GONE,
     )

@@ -262,7 +262,7 @@ def test_of_a_crafted_store_the_worst_comes_first_with_the_last_word_on_everythi
     [
         ([_track(1, "a")], _beat(sample_age_s=9.0), "samples do not advance: the last came 9 s ago"),
         ([_track(1, "a")], _beat(sample_age_s=None), "no sample has come in the 1 min 0 s since the start"),
-        ([_track(1, "a")], _beat(unsaved=7, unsaved_s=3.0), "7 records wait for it, the oldest for 3 s"),
+        ([_track(1, "a")], _beat(unsaved=7, unsaved_s=3.0), "7 records wait for it, in trouble for 3 s"),
         ([_track(1, "a")], _beat(sequence=2), "driftwatch.db ends at record 1, the daemon has published 2"),
         ([_track(1, "a"), _fault(2, "open")], _beat(), "FAULT  the input: device"),
         ([_fault(1, "open"), _fault(2, "open", Phase.END)], _beat(), "no mode has a reading yet"),

@@ -257,7 +257,7 @@ def test_after_a_lost_or_damaged_file_the_run_goes_on_in_a_new_one_that_names_it
     stage, database = story.stages[name], story.daemon.database
     (again,) = [one for one in stage.records if one["kind"] == "run"]
     assert again["phase"] == "continue"
-    anew = [one for one in stage.faults(fault="store") if "a new database was begun" in one["detail"]]
+    anew = [one for one in stage.faults(fault="store") if "records go into another database" in one["detail"]]
     assert [one["phase"] for one in anew] == ["begin", "end"]
     assert str(database) in anew[0]["detail"]
     assert anew[0]["detail"] in stage.log

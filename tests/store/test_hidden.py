@@ -8,8 +8,10 @@ from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
+from driftwatch.config import loads
 from driftwatch.daemon.keeper import GONE_S, Keeper
-from driftwatch.records import Envelope
+from driftwatch.daemon.offline import carry_out
+from driftwatch.records import Command, Envelope
 from driftwatch.store.care import info
 from driftwatch.store.errors import CommitError, StoreUnreachableError, Trouble, cannot_look
 from driftwatch.store.lock import WriterLock
@@ -18,6 +20,10 @@ from driftwatch.store.queries import Reader
 from driftwatch.store.writer import Writer
 
 Make = Callable[..., Envelope]
+CONFIG = loads(
+    'schema = 1\n[station]\nname = "s"\n[[channel]]\nname = "a"\n'
+    '[[mode]]\nname = "m"\nchannel = "a"\nsearch_hz = [80.0, 160.0]\n'
+)
 
 
 class Hidden:
@@ -106,8 +112,9 @@ def test_a_run_whose_file_was_taken_away_waits_for_a_folder_that_it_may_not_look
         lambda path: WriterLock(path, "s"),
         Reader.open,
         info,
+        lambda path: carry_out(CONFIG, Command(0, "r1", "ann", "note", None, "hello"), str(path)),
     ],
-    ids=["writer", "live writer", "lock", "reader", "info"],
+    ids=["writer", "live writer", "lock", "reader", "info", "command without a daemon"],
 )
 def test_whoever_opens_what_may_not_be_looked_at_hears_why(hidden: Hidden, opened: Callable[[Path], object]) -> None:
     hidden.hide()
