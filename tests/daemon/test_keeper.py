@@ -24,7 +24,7 @@ from driftwatch.daemon.keeper import (
     Keeper,
 )
 from driftwatch.daemon.spool import Spool
-from driftwatch.records import CommandDone, CovariateValue, Envelope, Fault, Heartbeat, Origin, TimeQuality
+from driftwatch.records import Baseline, CommandDone, CovariateValue, Envelope, Fault, Heartbeat, Origin, TimeQuality
 from driftwatch.store.errors import CommitError, Trouble
 from driftwatch.store.lock import WriterLock
 from driftwatch.store.queries import Reader, Wanted
@@ -289,8 +289,9 @@ def test_a_command_and_what_it_does_are_stored_and_published_together(measuremen
     assert f"{CATCH_UP_RECORDS + 2} records that waited are stored" in keeper.news()[-1].words
 
 
-def test_a_value_that_a_person_gave_outlives_readings(measurement: Make) -> None:
+def test_a_value_that_a_person_gave_outlives_what_is_computed(measurement: Make) -> None:
     spool = Spool(2)
     given = replace(measurement(1), body=CovariateValue("speed", 1480.0, "1/min"))
-    spool.extend([given, measurement(2), measurement(3)], bounded=True)
+    baseline = Baseline("drive end", "rocking", None, 1, 900.0, 0.1, 40.0, 1.0, 2000, 0, 1)
+    spool.extend([given, *(replace(measurement(number), body=baseline) for number in (2, 3))], bounded=True)
     assert [one.sequence for one in spool.first(10)] == [1, 3]
