@@ -109,7 +109,7 @@ def _delete(folder: Path, where: str) -> None:
 def test_a_whole_store_passes(records: list[Envelope]) -> None:
     found = _object("check")
     assert (found["ok"], found["runs"], found["records"], found["faults"], found["remarks"]) == (True, 1, 41, [], [])
-    assert _call("check").stdout.endswith("is whole; 41 records of 1 runs were looked at.\n")
+    assert _call("check").stdout.endswith("is whole; 41 records of 1 run were looked at.\n")
 
 
 def test_records_that_are_missing_in_the_midst_of_a_run_are_a_fault(records: list[Envelope], folder: Path) -> None:
