@@ -86,7 +86,8 @@ def check_command(store: str | None, config: str | None, as_json: bool) -> None:
             for line in found.faults:
                 click.echo(f"Fault: {line}")
             verdict = "whole" if not found.faults else f"not whole: {len(found.faults)} faults"
-            click.echo(f"{path} is {verdict}; {found.records} records of {found.runs} run{"" if found.runs == 1 else "s"} were looked at.")
+            runs = "1 run" if found.runs == 1 else f"{found.runs} runs"
+            click.echo(f"{path} is {verdict}; {found.records} records of {runs} were looked at.")
             if found.faults:
                 click.echo(
                     "What next: keep the file; `driftwatch readings` still shows what can be read; the daemon sets a "
