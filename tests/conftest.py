@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import signal
 from collections.abc import Callable
 from enum import StrEnum
 from typing import Any
@@ -32,6 +33,11 @@ pytest_plugins = ["soundrig.fixtures"]
 # Tests run side by side, some at the lowest priority: how long an example takes says nothing.
 settings.register_profile("busy", deadline=None, suppress_health_check=[HealthCheck.too_slow])
 settings.load_profile("busy")
+
+# A shell starts what runs in its background with interrupts ignored, and a program started by a test inherits that.
+for _number in (signal.SIGINT, signal.SIGHUP, signal.SIGQUIT):
+    if signal.getsignal(_number) is signal.SIG_IGN:
+        signal.signal(_number, signal.default_int_handler if _number is signal.SIGINT else signal.SIG_DFL)
 
 _TEXT = st.text(st.characters(exclude_categories=["Cs"]), max_size=20)
 _INTEGERS = st.integers(-(2**63), 2**63 - 1)
