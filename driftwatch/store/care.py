@@ -13,7 +13,7 @@ from driftwatch.store.ahead import log_of, size_of
 from driftwatch.store.aside import Predecessor
 from driftwatch.store.errors import StoreError, StoreUnreachableError, unreachable
 from driftwatch.store.lock import holder_of
-from driftwatch.store.opening import connect, is_there, reading_mode, refuse_foreign
+from driftwatch.store.opening import connect, is_there, reading_mode, refuse_absent, refuse_foreign
 from driftwatch.store.tables import VERSION_TABLE
 
 if TYPE_CHECKING:
@@ -50,8 +50,7 @@ def refuse_missing(path: Path) -> None:
     StoreUnreachableError, ForeignDatabaseError
         When there is none, or another program's.
     """
-    if not is_there(path):
-        raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
+    refuse_absent(path)
     refuse_foreign(path)
 
 

@@ -7,8 +7,7 @@ from typing import TYPE_CHECKING, Any
 import sqlalchemy as sa
 
 from driftwatch.records import NS, Envelope, TrackStatus
-from driftwatch.store.paging import key_of_header
-from driftwatch.store.rows import HeaderKey, form_of
+from driftwatch.store.rows import HeaderKey, form_of, key_of_header
 from driftwatch.store.tables import HEADER
 
 if TYPE_CHECKING:

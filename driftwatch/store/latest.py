@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING, Any
 
 import sqlalchemy as sa
 
-from driftwatch.records import Origin, Phase, TimeQuality
-from driftwatch.store.rows import HeaderKey, form_of
+from driftwatch.records import Origin, Phase
+from driftwatch.store.rows import HeaderKey, form_of, key_of_header
 from driftwatch.store.tables import HEADER, TABLES
 
 if TYPE_CHECKING:
@@ -57,7 +57,7 @@ def latest_of(connection: Connection, run: str | None, after: int | None) -> Lat
     """
     run = connection.scalar(_newest_run()) if run is None else run
     rows = connection.execute(sa.select(HEADER).where(HEADER.c.run == run).order_by(HEADER.c.id)).all()
-    keys = {row.id: (row.run, row.station, Origin(row.origin), TimeQuality(row.time_quality)) for row in rows}
+    keys = {row.id: key_of_header(row) for row in rows}
     ends = connection.execute(_ends(tuple(keys))).all() if keys else []
     if run is None or not ends:
         return None

@@ -160,6 +160,18 @@ def writing_engine(path: Path, busy_ms: int | None = None) -> Engine:
     return engine
 
 
+def refuse_absent(path: Path) -> None:
+    """Raise unless there is a file.
+
+    Raises
+    ------
+    StoreUnreachableError
+        When there is none.
+    """
+    if not is_there(path):
+        raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
+
+
 def reading_engine(path: Path, busy_ms: int | None = None, *, beside_writer: bool = False) -> Engine:
     """Return an engine that can only read; it waits for a lock as long as `busy_ms` says, None: `BUSY_MS`.
 
@@ -174,8 +186,7 @@ def reading_engine(path: Path, busy_ms: int | None = None, *, beside_writer: boo
     ForeignDatabaseError
         When the file is not ours.
     """
-    if not is_there(path):
-        raise StoreUnreachableError(f"{path} does not exist; expected a database that `run` or `replay` has written")
+    refuse_absent(path)
     if not beside_writer:
         refuse_foreign(path)
     engine = _engine(path, reading_mode(path), NullPool, busy_ms)

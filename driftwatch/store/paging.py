@@ -12,8 +12,8 @@ from typing import TYPE_CHECKING, Any
 
 import sqlalchemy as sa
 
-from driftwatch.records import Envelope, Method, Origin, TimeQuality
-from driftwatch.store.rows import HeaderKey, form_of
+from driftwatch.records import Envelope, Method
+from driftwatch.store.rows import HeaderKey, form_of, key_of_header
 from driftwatch.store.tables import HEADER, TABLES
 
 if TYPE_CHECKING:
@@ -41,11 +41,6 @@ class Wanted:
 
 Key = tuple[int, int, int]
 """Stream time, header and sequence: the place of a row in the order of an answer."""
-
-
-def key_of_header(row: Any) -> HeaderKey:
-    """Return what the records of a row of the table ``header`` share."""
-    return (row.run, row.station, Origin(row.origin), TimeQuality(row.time_quality))
 
 
 def records(connection: Connection, kind: str, wanted: Wanted) -> Iterator[Envelope]:

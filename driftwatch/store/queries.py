@@ -16,8 +16,8 @@ from driftwatch.store.hourly import hourly
 from driftwatch.store.latest import Latest, latest_of
 from driftwatch.store.location import database_path
 from driftwatch.store.opening import reading_engine, refuse_other_schema, revision_of
-from driftwatch.store.paging import Wanted, key_of_header
-from driftwatch.store.rows import form_of
+from driftwatch.store.paging import Wanted
+from driftwatch.store.rows import form_of, key_of_header
 from driftwatch.store.tables import HEADER, TABLES
 
 __all__ = ["NoSuchRunError", "Reader", "RunSummary", "Wanted"]

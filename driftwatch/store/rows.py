@@ -24,6 +24,11 @@ def header_key(envelope: Envelope) -> HeaderKey:
     return (envelope.run, envelope.station, envelope.origin, envelope.time_quality)
 
 
+def key_of_header(row: Any) -> HeaderKey:
+    """Return what the records of a row of the table ``header`` share."""
+    return (row.run, row.station, Origin(row.origin), TimeQuality(row.time_quality))
+
+
 @dataclass(frozen=True, slots=True)
 class RowForm:
     """How one kind of record lies in its table."""

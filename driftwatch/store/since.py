@@ -14,8 +14,8 @@ from typing import TYPE_CHECKING, Any
 
 import sqlalchemy as sa
 
-from driftwatch.records import KINDS, Envelope, Origin, TimeQuality
-from driftwatch.store.rows import HeaderKey, form_of
+from driftwatch.records import KINDS, Envelope
+from driftwatch.store.rows import HeaderKey, form_of, key_of_header
 from driftwatch.store.tables import HEADER, TABLES
 
 if TYPE_CHECKING:
@@ -81,8 +81,7 @@ def _runs(connection: Connection) -> dict[str, dict[int, HeaderKey]]:
     """Return the headers of each run, runs in the order in which they were first written."""
     found: dict[str, dict[int, HeaderKey]] = {}
     for row in connection.execute(sa.select(HEADER).order_by(HEADER.c.id)):
-        key = (row.run, row.station, Origin(row.origin), TimeQuality(row.time_quality))
-        found.setdefault(row.run, {})[row.id] = key
+        found.setdefault(row.run, {})[row.id] = key_of_header(row)
     return found
 
 

@@ -14,7 +14,7 @@ sys.path.insert(0, str(Path(__file__).parent))  # import-mode=importlib puts no 
 
 from card_files import Floats, two_modes, write_wav
 
-from soundrig import missing_packages
+from soundrig.fixtures import need_rig
 
 PLAYED_S = 70
 """Length of the recording, longer than any scenario."""
@@ -38,9 +38,7 @@ def wav(played: Floats, tmp_path_factory: pytest.TempPathFactory) -> Path:
 @pytest.fixture(scope="module")
 def pool() -> Iterator[ThreadPoolExecutor]:
     """Return what runs scenarios side by side; those that nobody asked for yet are not begun at the end."""
-    missing = missing_packages()
-    if missing:
-        pytest.skip(f"the virtual sound card needs: apt-get install {' '.join(missing)}")
+    need_rig()
     executor = ThreadPoolExecutor(AT_ONCE)
     yield executor
     executor.shutdown(wait=True, cancel_futures=True)

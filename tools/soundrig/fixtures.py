@@ -11,12 +11,17 @@ import pytest
 from soundrig import Rig, missing_packages
 
 
-@pytest.fixture
-def make_rig() -> Iterator[Callable[..., Rig]]:
-    """Return a maker of virtual sound cards (its arguments are those of `Rig`); all end with the test."""
+def need_rig() -> None:
+    """Skip the test, by name, where the rig's packages are not installed."""
     missing = missing_packages()
     if missing:
         pytest.skip(f"the virtual sound card needs: apt-get install {' '.join(missing)}")
+
+
+@pytest.fixture
+def make_rig() -> Iterator[Callable[..., Rig]]:
+    """Return a maker of virtual sound cards (its arguments are those of `Rig`); all end with the test."""
+    need_rig()
     with ExitStack() as stack:
 
         def make(**arguments: Any) -> Rig:
